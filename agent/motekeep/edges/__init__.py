@@ -1,0 +1,1 @@
+"""One outside thing a file; `ports` holds the interfaces that loops know."""

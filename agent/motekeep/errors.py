@@ -1,0 +1,53 @@
+"""The small tree of named errors.
+
+Each says what was attempted, why it failed, what a person can do, and whether trying again can help. A loop backs
+off on a `MotekeepError` with `retry`; any other exception is a bug and ends the process, which systemd restarts.
+"""
+
+
+class MotekeepError(Exception):
+    """Base of all named errors; `str()` of it is the one line that an operator reads."""
+
+    retry = False
+
+    def __init__(self, attempted: str, why: str, mend: str) -> None:
+        self.attempted = attempted
+        self.why = why
+        self.mend = mend
+        super().__init__(f"{attempted}: {why}; {mend}" if mend else f"{attempted}: {why}")
+
+
+class ConfigError(MotekeepError):
+    """The configuration cannot be used. Exit code 2."""
+
+
+class PortError(MotekeepError):
+    """The serial line is absent, taken, or was lost."""
+
+    retry = True
+
+
+class StoreError(MotekeepError):
+    """The journal could not be opened, read or written."""
+
+    retry = True
+
+
+class StoreFullError(StoreError):
+    """The journal's own limit or the disk is full."""
+
+
+class BrokerError(MotekeepError):
+    """The broker cannot be reached or refuses to talk."""
+
+    retry = True
+
+
+class ClimateError(MotekeepError):
+    """The climate source gave nothing usable."""
+
+    retry = True
+
+
+class CaptureError(MotekeepError):
+    """A capture file has a line that is not of the capture format."""

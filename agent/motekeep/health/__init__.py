@@ -1,0 +1,1 @@
+"""One small class a check; opens and closes findings; pure."""

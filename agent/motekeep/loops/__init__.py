@@ -1,0 +1,1 @@
+"""Move data between edges. Loops share the journal and two events, nothing else."""

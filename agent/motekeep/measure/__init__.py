@@ -1,0 +1,1 @@
+"""Observations to intervals to readings; pure."""

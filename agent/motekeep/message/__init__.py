@@ -1,0 +1,1 @@
+"""The documents that leave the device, their topics and schemas; pure."""

@@ -1,0 +1,201 @@
+"""The documents that leave the device, as pydantic models: reading, late, amend, finding, health.
+
+Owns their fields, units and rounding; JSON Schema is generated from these models. Times are RFC 3339 UTC, units UCUM.
+Fields without a value that mean "not measured" are null; optional fields that do not apply are left out.
+"""
+
+from typing import Annotated, Literal
+
+from pydantic import BaseModel, ConfigDict, Field
+
+Clock = Literal["synced", "corrected", "bounded", "unsynced"]
+Status = Literal[
+    "normal", "maintenance_required", "out_of_specification", "function_check", "failure", "offline"
+]
+Flag = Annotated[int, Field(description="QARTOD: 1 pass, 2 not evaluated, 3 suspect, 4 fail, 9 missing")]
+Time = Annotated[str, Field(json_schema_extra={"format": "date-time"}, description="RFC 3339 UTC")]
+
+
+class Document(BaseModel):
+    model_config = ConfigDict(extra="forbid", frozen=True)
+
+    def json_text(self) -> str:
+        """The compact JSON that is published: fields never set are left out, nulls that were set stay."""
+        return self.model_dump_json(exclude_unset=True, by_alias=True)
+
+
+class ValueDocument(Document):
+    """One figure: raw as the sensor gave it, corrected value, standard uncertainty (null: not evaluated)."""
+
+    raw: float | None
+    value: float | None
+    u: float | None
+
+
+class ClimateDocument(Document):
+    rh: float = Field(description="relative humidity, %")
+    t: float | None = Field(default=None, description="temperature, Cel")
+
+
+class FramesDocument(Document):
+    good: int
+    bad: int
+    missing: int
+
+
+class ProvenanceDocument(Document):
+    issue: int
+    digest: str
+
+
+class ReadingDocument(Document):
+    """One reading. `(gateway, sensor, seq)` is unique for ever and gapless.
+
+    A merged reading (reason `merged`) stands for all of `from_seq` to `seq`. `start_between` brackets the start of a
+    reading with clock `bounded`.
+    """
+
+    schema_: Literal["motekeep/reading/1"] = Field(alias="schema")
+    site: str
+    gateway: str
+    sensor: str
+    seq: int
+    from_seq: int | None = None
+    start: Time
+    start_between: tuple[Time, Time] | None = None
+    seconds: float
+    clock: Clock
+    boot: str
+    boot_s: float
+    pm1: ValueDocument | None = None
+    pm2_5: ValueDocument | None = None
+    pm4: ValueDocument | None = None
+    pm10: ValueDocument | None = None
+    unit: Literal["ug/m3"]
+    k: Literal[1] = Field(description="coverage factor of u")
+    counts_per_dL: dict[str, float | None] | None = Field(  # noqa: N815 (UCUM's own spelling of the unit)
+        default=None, description="mean counts per 0.1 L above the size in um; null where a count was censored"
+    )
+    climate: ClimateDocument | None = None
+    frames: FramesDocument
+    calibration: ProvenanceDocument | None = None
+    flag: Flag
+    reasons: list[str]
+
+
+class AmendDocument(Document):
+    """Readings of `sensor` that start in [from, to) have, from now on, this flag, and these reasons as well.
+
+    As a restamp it names a range of sequence numbers instead and says the seconds to add to their `start`.
+    """
+
+    schema_: Literal["motekeep/amend/1"] = Field(alias="schema")
+    sensor: str
+    from_: Time | None = Field(default=None, alias="from")
+    to: Time | None = None
+    flag: Flag | None = None
+    reasons: list[str]
+    from_seq: int | None = None
+    to_seq: int | None = None
+    clock: Clock | None = None
+    shift_s: float | None = None
+
+
+class FindingDocument(Document):
+    """A finding as it opens or closes."""
+
+    schema_: Literal["motekeep/finding/1"] = Field(alias="schema")
+    at: Time
+    event: Literal["opened", "closed"]
+    sensor: str | None = None
+    code: str
+    category: Status
+    since: Time
+    confidence: float
+    evidence: str
+    remedy: str
+
+
+class OpenFinding(Document):
+    code: str
+    category: Status
+    since: Time
+    confidence: float
+    evidence: str
+    remedy: str
+
+
+class CalibrationState(Document):
+    issue: int
+    valid_until: Time | None = None
+
+
+class SensorHealth(Document):
+    status: Status
+    laser_hours: float | None = None
+    dust_dose_ug: float | None = None
+    calibration: CalibrationState | None = None
+    findings: list[OpenFinding]
+
+
+class StoreHealth(Document):
+    waiting: int
+    oldest_waiting: Time | None
+    bytes: int
+    disk_free: int | None
+    lost: dict[str, int] = Field(description="each loss of detail, counted since the journal began, by its kind")
+
+
+class LinkHealth(Document):
+    since: Time | None
+    reconnects: int
+    refused: int
+
+
+class HealthDocument(Document):
+    """The retained health status; overdue after `next_by`. The will has only the place and status `offline`."""
+
+    schema_: Literal["motekeep/health/1"] = Field(alias="schema")
+    site: str
+    gateway: str
+    status: Status
+    at: Time | None = None
+    next_by: Time | None = None
+    boot: str | None = None
+    life: int | None = Field(default=None, description="how many times the daemon has started with this journal")
+    version: str | None = None
+    uptime_s: float | None = None
+    clock: Clock | None = None
+    store: StoreHealth | None = None
+    link: LinkHealth | None = None
+    sensors: dict[str, SensorHealth] | None = None
+    findings: list[OpenFinding] | None = None
+
+
+class ResendRequest(Document):
+    """To the device: send this range again; answered on `late`."""
+
+    model_config = ConfigDict(extra="ignore", frozen=True)
+    sensor: str
+    from_seq: int = Field(ge=1)
+    to_seq: int = Field(ge=1)
+
+
+class TakenReceipt(Document):
+    """To the device: an archive has stored all readings up to this one."""
+
+    model_config = ConfigDict(extra="ignore", frozen=True)
+    through_seq: int = Field(ge=0)
+
+
+class LateDocument(Document):
+    """The backlog, oldest first, at most 100 readings."""
+
+    readings: list[ReadingDocument] = Field(max_length=100)
+
+
+def health_will(site: str, gateway: str, boot: str, life: int) -> HealthDocument:
+    """What the broker says for us when we are gone; boot and life tell a late will from a current one."""
+    return HealthDocument(
+        schema="motekeep/health/1", site=site, gateway=gateway, status="offline", boot=boot, life=life
+    )
