@@ -123,7 +123,7 @@ class FindingEvent:
 
 @dataclass(frozen=True, slots=True)
 class Suspicion:
-    """What a check holds at the moment: the condition is there, since when, how sure, on what evidence."""
+    """What a check holds at the moment: the condition is there, since when (boot seconds), how sure, on what evidence."""
 
     since: float
     confidence: float

@@ -104,7 +104,8 @@ class Commands:
 class Dialect:
     """One wire dialect: how its line is set, how it is decoded, what can be sent to it.
 
-    `polled` dialects speak only after `commands.read`. `start` is sent after opening the line, before anything else
+    `encode` is the way back, for the emulator and the tests: the bytes whose decoding gives this frame. `polled`
+    dialects speak only after `commands.read`. `start` is sent after opening the line, before anything else
     is expected of it. `warm_up_s` is how long after power or wake its numbers are not to be trusted.
     """
 
@@ -113,6 +114,7 @@ class Dialect:
     polled: bool
     layouts: tuple[Layout, ...]
     decoder: Callable[[], Decoder]
+    encode: Callable[[Frame], bytes]
     commands: Commands
     start: bytes = b""
     warm_up_s: float = 30.0

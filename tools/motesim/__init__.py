@@ -1,0 +1,1 @@
+"""motesim: sensor emulator and aerosol model."""
