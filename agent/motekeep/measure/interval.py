@@ -5,6 +5,7 @@ Owns the accumulation. Must not know corrections, quality or messages.
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from math import sqrt
 
 from motekeep.instant import Instant
@@ -104,7 +105,9 @@ def channel(values: Sequence[float], top: float | None = None) -> Channel:
     mean = sum(kept) / n
     deviations = [v - mean for v in kept]
     squares = sum([d * d for d in deviations])
-    products = sum([a * b for a, b in zip(deviations, deviations[1:], strict=False)])
+    if squares == 0.0:  # differences too small to square: as good as constant
+        return Channel(n, mean, 0.0, low, high, 0.0, 0.0, censored)
+    products = sum([a * b for a, b in pairwise(deviations)])
     ends = deviations[0] ** 2 + deviations[-1] ** 2
     # sum of (d[i+1] - d[i])^2 = 2 squares - ends - 2 products: one pass less over the values
     step = (2.0 * squares - ends - 2.0 * products) / (2.0 * (n - 1))
@@ -129,8 +132,9 @@ class Accumulator:
         self._frames.append(frame)
 
     @property
-    def good(self) -> int:
-        return len(self._frames)
+    def frames(self) -> Sequence[Frame]:
+        """The good frames so far, oldest first."""
+        return self._frames
 
     def close(
         self,
@@ -155,7 +159,7 @@ class Accumulator:
             mass=tuple([channel(values) for values in zip(*[f.mass for f in frames], strict=True)]),
             mass_ambient=tuple([channel(values) for values in zip(*[f.mass_ambient for f in frames], strict=True)]),
             counts=tuple([channel(values, top) for values in zip(*[f.counts for f in frames], strict=True)]),
-            climate=climate if climate is not None else frame_climate(frames),
+            climate=climate,
             asleep_s=asleep_s,
             warming_s=warming_s,
             warming_frames=self.warming_frames,

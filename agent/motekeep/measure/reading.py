@@ -83,8 +83,7 @@ def make_reading(interval: Interval, correction: Correction, findings: dict[str,
     layout = interval.layout
     if layout is None:
         asleep = interval.asleep_s >= interval.seconds - 1.0
-        reasons = ("asleep",) if asleep else ("no-frames",)
-        return Reading(interval, {}, MISSING, reasons + tuple(findings))
+        return Reading(interval, {}, MISSING, ("asleep" if asleep else "no-frames", *findings))
     corrected = correction(interval)
     flags, reasons = [corrected.flag], list(corrected.reasons)
     if interval.completeness < COMPLETENESS:

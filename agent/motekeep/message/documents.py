@@ -63,7 +63,7 @@ class ReadingDocument(Document):
     from_seq: int | None = None
     start: Time
     start_between: tuple[Time, Time] | None = None
-    seconds: float
+    seconds: int | float
     clock: Clock
     boot: str
     boot_s: float

@@ -1,0 +1,119 @@
+"""One sensor's line: open, read bursts, hand them on, poll and put to sleep where the sensor wants it.
+
+Owns the reopening and the duty cycle. Knows no frame: bytes go to the intake as they came.
+"""
+
+from dataclasses import dataclass
+from threading import Event
+
+import structlog
+
+from motekeep.edges.ports import Clock, Line, LineOpener
+from motekeep.errors import PortError
+from motekeep.health.check import LineState
+from motekeep.loops.backoff import Backoff
+from motekeep.loops.intake import Intake
+from motekeep.wire.frame import Dialect
+
+log = structlog.get_logger()
+
+READ_TIMEOUT_S = 2.0  # how often an idle reader wakes: half a wake-up a second, and SIGTERM is met in time
+
+
+@dataclass(frozen=True, slots=True)
+class ReaderSettings:
+    """One sensor. `duty` is (every_s, awake_s) or None; a polled dialect is read each `period_s`."""
+
+    sensor: str
+    port: str
+    dialect: Dialect
+    period_s: float
+    duty: tuple[float, float] | None = None
+
+
+class Reader:
+    """The reader loop of one sensor; `run` returns when `stop` is set."""
+
+    def __init__(self, settings: ReaderSettings, intake: Intake, opener: LineOpener, clock: Clock, stop: Event) -> None:
+        self._settings = settings
+        self._intake = intake
+        self._open = opener
+        self._clock = clock
+        self._stop = stop
+        self.ticked = clock.now().boot_s
+
+    def run(self) -> None:
+        backoff = Backoff(log, "line", sensor=self._settings.sensor, port=self._settings.port)
+        while not self._stop.is_set():
+            try:
+                line = self._open(self._settings.port, self._settings.dialect.baud)
+            except PortError as error:
+                self._lost(error, backoff)
+                continue
+            try:
+                self._start(line)
+                backoff.recovered()
+                self._read(line)
+            except PortError as error:
+                self._lost(error, backoff)
+            finally:
+                line.close()
+
+    def _lost(self, error: PortError, backoff: Backoff) -> None:
+        now = self._clock.now()
+        self.ticked = now.boot_s
+        self._intake.line(self._settings.sensor, LineState.GONE, now, str(error))
+        self._clock.wait(self._stop, backoff.failed(error, now.boot_s))
+
+    def _start(self, line: Line) -> None:
+        self._intake.line(self._settings.sensor, LineState.OPENED, self._clock.now())
+        if self._settings.dialect.start:
+            line.write(self._settings.dialect.start)
+
+    def _read(self, line: Line) -> None:
+        settings = self._settings
+        rhythm = _Rhythm(settings, self._clock.now().boot_s)
+        while not self._stop.is_set():
+            now = self._clock.now()
+            self.ticked = now.boot_s
+            match rhythm.next(now.boot_s):
+                case "sleep":
+                    line.write(settings.dialect.commands.sleep or b"")
+                    self._intake.line(settings.sensor, LineState.ASLEEP, now)
+                case "wake":
+                    line.write(settings.dialect.commands.wake or b"")
+                    self._intake.line(settings.sensor, LineState.AWAKE, now)
+                case "poll":
+                    line.write(settings.dialect.commands.read or b"")
+            data = line.read(rhythm.patience(now.boot_s))
+            if data:
+                self._intake.receive(settings.sensor, data, self._clock.now())
+
+
+class _Rhythm:
+    """When to sleep, wake and poll. Rule: awake for the first `awake` seconds of every `every`; polls only awake."""
+
+    def __init__(self, settings: ReaderSettings, start_s: float) -> None:
+        self._duty = settings.duty
+        self._start = start_s
+        self._asleep = False
+        self._period = settings.period_s if settings.dialect.polled else None
+        self._next_poll = start_s
+
+    def next(self, boot_s: float) -> str | None:
+        if self._duty is not None:
+            every, awake = self._duty
+            should_sleep = (boot_s - self._start) % every >= awake
+            if should_sleep != self._asleep:
+                self._asleep = should_sleep
+                return "sleep" if should_sleep else "wake"
+        if self._period is not None and not self._asleep and boot_s >= self._next_poll:
+            self._next_poll = max(self._next_poll + self._period, boot_s)
+            return "poll"
+        return None
+
+    def patience(self, boot_s: float) -> float:
+        """How long the next read may wait without missing the next turn."""
+        if self._period is None or self._asleep:
+            return READ_TIMEOUT_S
+        return min(max(self._next_poll - boot_s, 0.02), READ_TIMEOUT_S)

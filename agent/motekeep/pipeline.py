@@ -1,0 +1,239 @@
+"""The pure composition: bytes and instants in, documents out. The very same object live and in replay.
+
+Owns the spans: wall-aligned, one for all sensors, measured by the boot clock. A step of the wall clock ends the span
+at once, so that no interval has two offsets; the next one is aligned with the new clock. Time comes in with every
+call and must not run backwards by the boot clock.
+"""
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from itertools import chain
+
+from motekeep.health.check import LineState
+from motekeep.health.finding import Finding, FindingEvent
+from motekeep.health.gateway import GatewayFacts, GatewayHealth
+from motekeep.health.sensor import SensorHealth
+from motekeep.instant import Instant
+from motekeep.measure.interval import Accumulator, Cadence, Climate, frame_climate
+from motekeep.measure.reading import Correction, make_reading, uncorrected
+from motekeep.message.compose import Place, amend_document, finding_document, reading_document
+from motekeep.message.documents import AmendDocument, FindingDocument, ReadingDocument
+from motekeep.wire.frame import Damage, Dialect, Observation
+
+STEP_S = 1.0  # a jump of the wall clock beyond this is a step; time services slew smaller ones
+JUDGE_EVERY_S = 5.0  # fine enough for findings due within three minutes, coarse enough to cost nothing
+SKIP_SPANS = 10  # a longer hole (suspend, a gap in a capture) leaves intervals absent instead of empty
+
+
+@dataclass(frozen=True, slots=True)
+class SensorSetup:
+    """What the pipeline must know of a sensor. `climate_max_age_s`: older climate counts as absent."""
+
+    name: str
+    dialect: Dialect
+    period_s: float = 1.0
+    frame_climate: bool = False
+    climate_max_age_s: float = 900.0
+    correction: Correction = uncorrected
+
+
+@dataclass(frozen=True, slots=True)
+class Harvest:
+    """Everything finished since the last harvest, in order, and what changed of the state to keep."""
+
+    readings: tuple[ReadingDocument, ...] = ()
+    findings: tuple[FindingDocument, ...] = ()
+    amendments: tuple[AmendDocument, ...] = ()
+
+    def __bool__(self) -> bool:
+        return bool(self.readings or self.findings or self.amendments)
+
+
+@dataclass(slots=True)
+class _Sensor:
+    """The running state of one sensor."""
+
+    setup: SensorSetup
+    health: SensorHealth
+    cadence: Cadence
+    seq: int
+    accumulator: Accumulator = field(default_factory=Accumulator)
+    climate: tuple[Climate, float] | None = None
+    asleep_since: float | None = None
+    asleep_s: float = 0.0
+
+    def __post_init__(self) -> None:
+        self.decoder = self.setup.dialect.decoder()
+
+
+class Pipeline:
+    """All sensors of one gateway. `seqs` gives each sensor's next sequence number."""
+
+    def __init__(
+        self, place: Place, interval_s: int, sensors: list[SensorSetup], at: Instant, seqs: Mapping[str, int]
+    ) -> None:
+        self._place = place
+        self._interval = interval_s
+        self._sensors = {s.name: self._sensor(s, at, seqs.get(s.name, 1)) for s in sensors}
+        self._gateway = GatewayHealth()
+        self._begin(at)
+        self._next_judge = at.boot_s + JUDGE_EVERY_S
+        self._readings: list[ReadingDocument] = []
+        self._events: list[FindingEvent] = []
+        self._amendments: list[AmendDocument] = []
+
+    @staticmethod
+    def _sensor(setup: SensorSetup, at: Instant, seq: int) -> _Sensor:
+        health = SensorHealth(setup.name, setup.dialect, setup.period_s, at)
+        return _Sensor(setup, health, Cadence(setup.period_s, at.boot_s), seq)
+
+    # -- what comes in ------------------------------------------------------------------------------------------
+
+    def receive(self, name: str, data: bytes, at: Instant) -> None:
+        """Bytes of a sensor's line, in any split."""
+        self.advance(at)
+        sensor = self._sensors[name]
+        health = sensor.health
+        health.heard(len(data), at)
+        for event in sensor.decoder.feed(data):
+            sensor.accumulator.missing += sensor.cadence.arrived(at.boot_s)
+            if isinstance(event, Damage):
+                sensor.accumulator.bad += 1
+                health.damaged(event, at)
+                continue
+            health.observe(Observation(event, at))
+            if health.warming(at):
+                sensor.accumulator.warming_frames += 1
+            else:
+                sensor.accumulator.add(event)
+
+    def line(self, name: str, state: LineState, at: Instant, why: str = "") -> None:
+        """The line was opened or lost, the sensor put to sleep or woken."""
+        self.advance(at)
+        sensor = self._sensors[name]
+        sensor.health.line(state, at, why)
+        if state is LineState.OPENED:
+            sensor.decoder.reset()
+        elif state is LineState.ASLEEP:
+            sensor.accumulator.missing += sensor.cadence.due(at.boot_s)
+            sensor.asleep_since = at.boot_s
+        elif state is LineState.AWAKE:
+            self._woke(sensor, at.boot_s)
+
+    def _woke(self, sensor: _Sensor, boot_s: float) -> None:
+        if sensor.asleep_since is not None:
+            sensor.asleep_s += boot_s - max(sensor.asleep_since, self._span.boot_s)
+            sensor.asleep_since = None
+        sensor.cadence.restart(boot_s)
+
+    def climate(self, name: str, climate: Climate, at: Instant) -> None:
+        """Air at the sensor from another source than its frames; from then on frames are not asked for it."""
+        self.advance(at)
+        self._sensors[name].climate = (climate, at.boot_s)
+
+    def gateway(self, facts: GatewayFacts, at: Instant) -> None:
+        """What is known of the gateway itself."""
+        self._events += self._gateway.judge(facts, at)
+
+    # -- time ---------------------------------------------------------------------------------------------------
+
+    def advance(self, at: Instant) -> None:
+        """Judge and close whatever is due by `at`."""
+        if abs(at.offset - self._span.offset) > STEP_S:
+            self._close(at.boot_s)
+            self._begin(at)
+        while min(self._next_judge, self._end) <= at.boot_s:
+            if self._next_judge <= self._end:
+                moment = self._moment(self._next_judge, at)
+                self._next_judge += JUDGE_EVERY_S
+                self._judge(moment)
+            else:
+                self._close(self._end)
+                skipped = at.boot_s - self._end > SKIP_SPANS * self._interval
+                self._begin(at if skipped else self._moment(self._end, at))
+                if skipped:
+                    self._skip(at)
+
+    def _moment(self, boot_s: float, at: Instant) -> Instant:
+        return Instant(boot_s + at.offset, boot_s, at.boot_id, at.trusted)
+
+    def _begin(self, at: Instant) -> None:
+        """A new span from `at` to the next wall-aligned border."""
+        self._span = at
+        self._end = at.boot_s + self._interval - at.utc % self._interval
+        if self._end - at.boot_s < 1e-3:  # `at` is a border but for rounding
+            self._end += self._interval
+
+    def _skip(self, at: Instant) -> None:
+        self._next_judge = at.boot_s
+        for sensor in self._sensors.values():
+            sensor.cadence.restart(at.boot_s)
+
+    def _close(self, end_s: float) -> None:
+        span, seconds = self._span, end_s - self._span.boot_s
+        for sensor in self._sensors.values():
+            if sensor.asleep_since is None:
+                sensor.accumulator.missing += sensor.cadence.due(end_s)
+            else:
+                sensor.asleep_s += end_s - max(sensor.asleep_since, span.boot_s)
+            interval = sensor.accumulator.close(
+                sensor.setup.name, span, seconds, climate=self._climate_of(sensor, end_s), asleep_s=sensor.asleep_s
+            )
+            sensor.accumulator = Accumulator()
+            sensor.asleep_s = 0.0
+            sensor.health.interval(interval)
+            if seconds < 1.0:
+                continue  # a sliver before a clock step holds no figure
+            reading = make_reading(
+                interval, sensor.setup.correction, sensor.health.flags_between(span.boot_s, end_s)
+            )
+            self._readings.append(reading_document(reading, self._place, sensor.seq))
+            sensor.seq += 1
+
+    def _climate_of(self, sensor: _Sensor, end_s: float) -> Climate | None:
+        if sensor.climate is not None:
+            climate, since_s = sensor.climate
+            age_s = end_s - since_s
+            if age_s > sensor.setup.climate_max_age_s:
+                return None
+            return Climate(climate.rh_pct, climate.temperature_c, climate.source, climate.age_s + age_s)
+        return frame_climate(sensor.accumulator.frames) if sensor.setup.frame_climate else None
+
+    def _judge(self, at: Instant) -> None:
+        for sensor in self._sensors.values():
+            events = sensor.health.judge(at)
+            self._events += events
+            backdated = {
+                e.finding.code: (e.finding.flag, e.finding.since)
+                for e in events
+                if e.opened and e.finding.flag is not None and e.finding.since < self._span.utc
+            }
+            for code, (flag, since) in backdated.items():
+                if flag is not None:
+                    self._amendments.append(amend_document(sensor.setup.name, since, self._span.utc, {code: flag}))
+
+    # -- what goes out ------------------------------------------------------------------------------------------
+
+    def harvest(self) -> Harvest:
+        """Everything finished since the last harvest."""
+        harvest = Harvest(
+            tuple(self._readings), tuple([finding_document(e) for e in self._events]), tuple(self._amendments)
+        )
+        self._readings, self._events, self._amendments = [], [], []
+        return harvest
+
+    def finish(self, at: Instant) -> None:
+        """Close the span that is under way, short as it is: the end of a capture or of the daemon."""
+        self.advance(at)
+        if at.boot_s - self._span.boot_s >= 1.0:
+            self._close(at.boot_s)
+            self._begin(at)
+
+    def findings(self) -> Mapping[str | None, list[Finding]]:
+        """Open findings by sensor; None holds those of the gateway."""
+        by_sensor: dict[str | None, list[Finding]] = {name: s.health.open() for name, s in self._sensors.items()}
+        by_sensor[None] = self._gateway.open()
+        return by_sensor
+
+    def all_open(self) -> list[Finding]:
+        return list(chain.from_iterable(self.findings().values()))

@@ -1,0 +1,137 @@
+"""Replay: captures through the very pipeline of the daemon, in the captures' own time, as fast as it can.
+
+Owns the reading of capture files and the writing of the four result files. Only these edges differ from `run`.
+"""
+
+import gzip
+import heapq
+import json
+from collections import Counter
+from collections.abc import Callable, Iterator
+from contextlib import ExitStack
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import IO
+
+from motekeep.capture import ClimateRecord, FrameRecord, Record, parse_line
+from motekeep.errors import CaptureError
+from motekeep.instant import Instant, rfc3339
+from motekeep.measure.interval import Climate
+from motekeep.message.compose import Place
+from motekeep.pipeline import Harvest, Pipeline, SensorSetup
+
+HARVEST_EVERY_S = 600.0  # of capture time: keeps memory flat without a call a frame
+
+
+@dataclass(slots=True)
+class Summary:
+    """What a replay saw, written as summary.json."""
+
+    first: float | None = None
+    last: float | None = None
+    frames: Counter[str] = field(default_factory=Counter)
+    readings: Counter[str] = field(default_factory=Counter)
+    findings: Counter[str] = field(default_factory=Counter)
+    unknown_sensors: Counter[str] = field(default_factory=Counter)
+
+    def as_dict(self) -> dict[str, object]:
+        return {
+            "schema": "motekeep/summary/1",
+            "from": None if self.first is None else rfc3339(self.first),
+            "to": None if self.last is None else rfc3339(self.last),
+            "bursts": dict(self.frames),
+            "readings": dict(self.readings),
+            "findings_opened": dict(self.findings),
+            "unknown_sensors": dict(self.unknown_sensors),
+        }
+
+
+def replay(
+    captures: list[Path],
+    out: Path,
+    place: Place,
+    interval_s: int,
+    sensors: list[SensorSetup],
+    progress: Callable[[int], None] = lambda _size: None,
+) -> Summary:
+    """Run captures through the pipeline and write readings.ndjson, findings.ndjson and summary.json into `out`.
+
+    Lines of several captures are merged by time; within a file time must not run backwards. `progress` is told the
+    bytes of text consumed. Raises CaptureError naming file and line.
+    """
+    summary = Summary()
+    names = {s.name for s in sensors}
+    out.mkdir(parents=True, exist_ok=True)
+    with ExitStack() as stack:
+        readings = stack.enter_context((out / "readings.ndjson").open("w", encoding="utf-8"))
+        findings = stack.enter_context((out / "findings.ndjson").open("w", encoding="utf-8"))
+        streams = [_records(stack, path, progress) for path in captures]
+        merged = streams[0] if len(streams) == 1 else heapq.merge(*streams, key=lambda r: r.t)
+        pipeline: Pipeline | None = None
+        harvest_at = at = _instant(0.0)
+        for record in merged:
+            if record.sensor not in names:
+                summary.unknown_sensors[record.sensor] += 1
+                continue
+            at = _instant(record.t)
+            if pipeline is None:
+                pipeline = Pipeline(place, interval_s, sensors, at, {})
+                summary.first, harvest_at = record.t, at
+            if isinstance(record, FrameRecord):
+                summary.frames[record.sensor] += 1
+                pipeline.receive(record.sensor, record.data, at)
+            elif isinstance(record, ClimateRecord):
+                pipeline.climate(record.sensor, Climate(record.rh_pct, record.temperature_c, "capture"), at)
+            if at.boot_s - harvest_at.boot_s >= HARVEST_EVERY_S:
+                harvest_at = at
+                _write(pipeline.harvest(), readings, findings, summary)
+        if pipeline is not None:
+            pipeline.finish(at)
+            _write(pipeline.harvest(), readings, findings, summary)
+            summary.last = at.utc
+    (out / "summary.json").write_text(json.dumps(summary.as_dict(), indent=1) + "\n", encoding="utf-8")
+    return summary
+
+
+def _instant(t: float) -> Instant:
+    """In replay both clocks are the capture's own time, and it is trusted."""
+    return Instant(t, t, "replay", trusted=True)
+
+
+def _records(stack: ExitStack, path: Path, progress: Callable[[int], None]) -> Iterator[Record]:
+    try:
+        raw = stack.enter_context(gzip.open(path, "rt") if path.suffix == ".gz" else path.open(encoding="ascii"))
+    except OSError as error:
+        raise CaptureError(f"opening {path}", str(error), "name a capture file") from error
+    return _lines(raw, path.name, progress)
+
+
+def _lines(lines: IO[str], name: str, progress: Callable[[int], None]) -> Iterator[Record]:
+    last, done = 0.0, 0
+    try:
+        for number, line in enumerate(lines, 1):
+            done += len(line)
+            if done >= 1 << 20:
+                progress(done)
+                done = 0
+            record = parse_line(line, name, number)
+            if record is None:
+                continue
+            if record.t < last:
+                raise CaptureError(f"{name}, line {number}", "time runs backwards", "sort the capture by its first column")
+            last = record.t
+            yield record
+    except (UnicodeDecodeError, EOFError, gzip.BadGzipFile) as error:
+        raise CaptureError(name, f"not a capture ({error})", "give a text capture or its .gz") from error
+    progress(done)
+
+
+def _write(harvest: Harvest, readings: IO[str], findings: IO[str], summary: Summary) -> None:
+    for reading in harvest.readings:
+        readings.write(reading.json_text() + "\n")
+        summary.readings[reading.sensor] += 1
+    for finding in harvest.findings:
+        line = finding.model_dump(mode="json", exclude={"schema_", "remedy"})
+        findings.write(json.dumps(line) + "\n")
+        if finding.event == "opened":
+            summary.findings[finding.code] += 1
