@@ -17,14 +17,16 @@ MORNING = datetime(2026, 12, 1, 9, 0, tzinfo=UTC).timestamp()
 
 # A test that forgot to advance a driven clock fails instead of hanging.
 PATIENCE_S = 20.0
+POLL_S = 0.001
 
 
 class FakeClock:
     """Meets the `Clock` port.
 
-    Alone (`driven=False`) a wait moves the time by itself, so a loop that runs in the test's own thread lives through a day
-    in milliseconds; things that happen meanwhile are laid on with `after`. With `driven=True` waits in other threads last
-    until the test has advanced the clock past their end; several loops then share one time.
+    Alone (`driven=False`) a wait moves the time by itself, so a loop that runs in the test's own thread lives through
+    a day in milliseconds; things that happen meanwhile are laid on with `after`. With `driven=True` waits in other
+    threads last until the test has advanced the clock past their end; several loops then share one time: `settle(2)`
+    until both wait, `advance`, and so on.
     """
 
     def __init__(
@@ -43,6 +45,7 @@ class FakeClock:
         self._boot_id = boot_id or f"{next(self._boots):032x}"
         self._trusted = trusted
         self._driven = driven
+        self._waiting = 0
         self._order = itertools.count()
         self._plans: list[tuple[float, int, Callable[[], object]]] = []
 
@@ -66,6 +69,10 @@ class FakeClock:
         with self._lock:
             self._pass(seconds)
 
+    def settle(self, waiting: int) -> None:
+        """Return once `waiting` threads wait on a driven clock: all have done their work up to now."""
+        self._be_patient(lambda: self._waiting >= waiting, f"{waiting} threads to wait, {self._waiting} do")
+
     def step(self, seconds: float) -> None:
         """Somebody sets the wall clock; durations know nothing of it."""
         with self._lock:
@@ -82,8 +89,8 @@ class FakeClock:
             self._trusted = True
 
     def reboot(self, *, off_s: float = 0.0, wakes_at: float | None = None, trusted: bool = False) -> None:
-        """A new boot after `off_s` without power. The wall clock went on meanwhile (battery) or, with `wakes_at`, woke up
-        in some plausible past. Plans of the old boot are gone with it."""
+        """A new boot after `off_s` without power. The wall clock went on meanwhile (battery) or, with `wakes_at`,
+        woke up in some plausible past. Plans of the old boot are gone with it."""
         with self._lock:
             self._plans.clear()
             self._utc = self._utc + off_s if wakes_at is None else wakes_at
@@ -114,13 +121,24 @@ class FakeClock:
 
     def _wait_driven(self, event: Event, seconds: float) -> bool:
         start = self.now()
-        waited = 0.0
-        while not event.is_set():
+
+        def over() -> bool:
             now = self.now()
-            if now.boot_id != start.boot_id or now.boot_s - start.boot_s >= seconds:
-                break
-            if waited > PATIENCE_S:
-                raise AssertionError(f"nobody advanced the clock past a wait of {seconds} s")
-            event.wait(0.001)
-            waited += 0.001
+            return event.is_set() or now.boot_id != start.boot_id or now.boot_s - start.boot_s >= seconds
+
+        with self._lock:
+            self._waiting += 1
+        try:
+            self._be_patient(over, f"somebody to advance the clock past a wait of {seconds} s")
+        finally:
+            with self._lock:
+                self._waiting -= 1
         return event.is_set()
+
+    def _be_patient(self, over: Callable[[], bool], what: str) -> None:
+        pause = Event()
+        for _ in range(round(PATIENCE_S / POLL_S)):
+            if over():
+                return
+            pause.wait(POLL_S)
+        raise AssertionError(f"waited in vain for {what}")

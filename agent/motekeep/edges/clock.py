@@ -56,8 +56,8 @@ class _Timex(ctypes.Structure):
 
 
 def kernel_synchronised() -> bool | None:
-    """Whether a time service told the kernel that the clock is right (adjtimex(2)); None where reading that is forbidden,
-    as under `ProtectClock=yes`, or where there is no such call."""
+    """Whether a time service told the kernel that the clock is right (adjtimex(2)); None where reading that is
+    forbidden, as under `ProtectClock=yes`, or where there is no such call."""
     try:
         adjtimex = ctypes.CDLL(None, use_errno=True).adjtimex
     except (OSError, AttributeError):
@@ -70,7 +70,8 @@ def kernel_synchronised() -> bool | None:
 
 
 def normalised_boot_id(text: str) -> str | None:
-    """The 32 hexadecimal digits of a boot id as systemd (without dashes) or the kernel (with) writes it; None if it is none."""
+    """The 32 hexadecimal digits of a boot id as systemd (without dashes) or the kernel (with) writes it; None if it
+    is none."""
     digits = text.strip().replace("-", "").lower()
     return digits if re.fullmatch(r"[0-9a-f]{32}", digits) and set(digits) != {"0"} else None
 
@@ -96,8 +97,8 @@ class SystemClock:
     """The `Clock` of the live daemon. Safe from any thread.
 
     The wall clock counts as trusted when timesyncd has set it in this boot, or the kernel says that some time service
-    has, or `trust_rtc` says that the hardware clock of this gateway is good enough. `recheck_s` is the longest that an answer
-    is reused: the evidence costs a system call or two, and readers ask many times a second.
+    has, or `trust_rtc` says that the hardware clock of this gateway is good enough. `recheck_s` is the longest that
+    an answer is reused: the evidence costs a system call or two, and readers ask many times a second.
     """
 
     def __init__(
