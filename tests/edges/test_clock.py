@@ -196,7 +196,7 @@ class TestTrust:
             assert instants[-1].trusted
 
     def test_the_kernel_status_agrees_with_a_second_reading_of_the_raw_bytes(self) -> None:
-        """`struct timex` as in adjtimex(2): an unsigned, four longs, then the status; STA_UNSYNC is 0x40, TIME_ERROR 5."""
+        """`struct timex`, adjtimex(2): an unsigned, four longs, then the status; STA_UNSYNC is 0x40, TIME_ERROR 5."""
         raw = ctypes.create_string_buffer(512)
         state = ctypes.CDLL(None).ntp_adjtime(raw)
         status = struct.unpack_from("@I4li", raw.raw)[-1]
