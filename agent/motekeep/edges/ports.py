@@ -120,8 +120,19 @@ class JournalWriter(Protocol):
         memory, offered to the publisher all the same, and written when the store can again; never raises for that."""
         ...
 
+    def flush(self, at: Instant) -> None:
+        """Write what only memory knows: marks, and what a failing store has held back. Never raises for the store."""
+        ...
+
+    def pending_marks(self) -> int:
+        """Marks that are not written yet; a crash repeats that many rows. Past a few thousand call `flush`."""
+        ...
+
     def restamp(self, at: Instant) -> list[Notice]:
-        """With a trusted clock: stamp this boot's unsynced readings `corrected` and earlier boots' `bounded`."""
+        """With a trusted clock: stamp this boot's unsynced readings `corrected` and earlier boots' `bounded`.
+
+        At most a bounded number of them a call; every `commit` goes on with the rest. The amendments of those that had
+        gone out already are stored in the same transaction: they are returned for the log, not to be committed again."""
         ...
 
     def prune(self, at: Instant) -> None: ...
@@ -186,11 +197,22 @@ class Acknowledged:
 
 @dataclass(frozen=True, slots=True)
 class Received:
+    """A message came down. `retained` says that the broker had kept it, so it may be old."""
+
     topic: str
     payload: bytes
+    retained: bool = False
 
 
-BrokerEvent = Connected | Disconnected | Acknowledged | Received
+@dataclass(frozen=True, slots=True)
+class SubscriptionRefused:
+    """The broker lets us hear nothing under `topic_filter`; `why` is its reason code in words."""
+
+    topic_filter: str
+    why: str
+
+
+BrokerEvent = Connected | Disconnected | Acknowledged | Received | SubscriptionRefused
 
 
 class Broker(Protocol):
@@ -210,6 +232,10 @@ class Broker(Protocol):
 
     def publish(self, topic: str, body: str, *, retain: bool = False) -> int | None:
         """Send with QoS 1; the message id to expect in Acknowledged, None when it could not be handed over."""
+        ...
+
+    def drop(self, why: str) -> None:
+        """Give this connection up, whatever state it is in: Disconnected(why) follows, then a fresh attempt."""
         ...
 
     def stop(self, farewell: tuple[str, str] | None, seconds: float) -> bool:
