@@ -54,7 +54,8 @@ class Frame:
 class Damage:
     """Bytes that were not a frame: one event for each frame that was hit or each stretch of rubbish.
 
-    `reason` is one of `checksum`, `length`, `tail`, `escape`, `rubbish`; `size` counts bytes.
+    `reason` is one of `checksum`, `length`, `tail`, `escape`, `rubbish`; `size` counts the bytes that were claimed or
+    known to be lost when the event was told.
     """
 
     reason: str
@@ -63,7 +64,11 @@ class Damage:
 
 @dataclass(slots=True)
 class Tally:
-    """What a decoder has seen since it was made: frames, bytes, headers, and what it dropped and why."""
+    """What a decoder has seen since it was made: frames, bytes, headers, and what it dropped and why.
+
+    `dropped` counts the `Damage` events by reason. A polled dialect also counts `refused` there: whole answers of a
+    sensor that said no to a read.
+    """
 
     frames: int = 0
     bytes: int = 0
@@ -91,13 +96,19 @@ class Decoder(Protocol):
 
 @dataclass(frozen=True, slots=True)
 class Commands:
-    """The bytes of sensor commands; None where the dialect has no such command."""
+    """The bytes of sensor commands; None where the dialect has no such command.
+
+    `wake` also makes the sensor measure, and in a streaming dialect leaves its mode as it was. `status` asks for the
+    sensor's own error bits where its data frames do not carry them in full; to be sent apart from `read`, after the
+    answer to it.
+    """
 
     sleep: bytes | None = None
     wake: bytes | None = None
     read: bytes | None = None
     stream: bytes | None = None
     poll_mode: bytes | None = None
+    status: bytes | None = None
 
 
 @dataclass(frozen=True, slots=True)
