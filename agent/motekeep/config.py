@@ -208,7 +208,8 @@ def parse(text: str, name: str) -> Config:
 
 def _told(error: ValidationError, data: dict[str, Any], name: str) -> ConfigError:
     """The first fault as one line. Any: raw TOML, walked only to name the sensor that a fault is in."""
-    first = error.errors()[0]
+    # an unknown key is told before a missing one: mostly the one is the other, misspelt
+    first = min(error.errors(), key=lambda fault: fault["type"] != "extra_forbidden")
     levels = [x for x in first["loc"] if x not in get_args(Literal["frame", "iio", "mqtt", "fixed"])]
     key = ""
     for level in levels:

@@ -5,6 +5,7 @@ at once, so that no interval has two offsets; the next one is aligned with the n
 call and must not run backwards by the boot clock.
 """
 
+import json
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from itertools import chain
@@ -44,9 +45,15 @@ class Harvest:
     readings: tuple[ReadingDocument, ...] = ()
     findings: tuple[FindingDocument, ...] = ()
     amendments: tuple[AmendDocument, ...] = ()
+    keep: Mapping[str, str] = field(default_factory=dict)
 
     def __bool__(self) -> bool:
         return bool(self.readings or self.findings or self.amendments)
+
+
+def kept_name(sensor: str) -> str:
+    """The name under which a sensor's health memory is kept between lives."""
+    return f"health/{sensor}"
 
 
 @dataclass(slots=True)
@@ -56,7 +63,7 @@ class _Sensor:
     setup: SensorSetup
     health: SensorHealth
     cadence: Cadence
-    seq: int
+    seq: int | None = None
     accumulator: Accumulator = field(default_factory=Accumulator)
     climate: tuple[Climate, float] | None = None
     asleep_since: float | None = None
@@ -67,14 +74,16 @@ class _Sensor:
 
 
 class Pipeline:
-    """All sensors of one gateway. `seqs` gives each sensor's next sequence number."""
+    """All sensors of one gateway.
 
-    def __init__(
-        self, place: Place, interval_s: int, sensors: list[SensorSetup], at: Instant, seqs: Mapping[str, int]
-    ) -> None:
+    Until `resume` has said where the numbering goes on, health is judged but no reading is made: a figure without a
+    number of its own could never be told from another.
+    """
+
+    def __init__(self, place: Place, interval_s: int, sensors: list[SensorSetup], at: Instant) -> None:
         self._place = place
         self._interval = interval_s
-        self._sensors = {s.name: self._sensor(s, at, seqs.get(s.name, 1)) for s in sensors}
+        self._sensors = {s.name: self._sensor(s, at) for s in sensors}
         self._gateway = GatewayHealth()
         self._begin(at)
         self._next_judge = at.boot_s + JUDGE_EVERY_S
@@ -83,9 +92,20 @@ class Pipeline:
         self._amendments: list[AmendDocument] = []
 
     @staticmethod
-    def _sensor(setup: SensorSetup, at: Instant, seq: int) -> _Sensor:
+    def _sensor(setup: SensorSetup, at: Instant) -> _Sensor:
         health = SensorHealth(setup.name, setup.dialect, setup.period_s, at)
-        return _Sensor(setup, health, Cadence(setup.period_s, at.boot_s), seq)
+        return _Sensor(setup, health, Cadence(setup.period_s, at.boot_s))
+
+    def resume(self, seqs: Mapping[str, int], kept: Mapping[str, str], at: Instant) -> None:
+        """Go on from an earlier life: each sensor's next sequence number, and what `Harvest.keep` held last."""
+        for name, sensor in self._sensors.items():
+            sensor.seq = seqs[name]
+            if memory := kept.get(kept_name(name)):
+                sensor.health.restore(json.loads(memory), at)
+
+    @property
+    def sensors(self) -> list[str]:
+        return list(self._sensors)
 
     # -- what comes in ------------------------------------------------------------------------------------------
 
@@ -182,7 +202,7 @@ class Pipeline:
             sensor.accumulator = Accumulator()
             sensor.asleep_s = 0.0
             sensor.health.interval(interval)
-            if seconds < 1.0:
+            if seconds < 1.0 or sensor.seq is None:
                 continue  # a sliver before a clock step holds no figure
             reading = make_reading(
                 interval, sensor.setup.correction, sensor.health.flags_between(span.boot_s, end_s)
@@ -216,11 +236,14 @@ class Pipeline:
 
     def harvest(self) -> Harvest:
         """Everything finished since the last harvest."""
-        harvest = Harvest(
-            tuple(self._readings), tuple([finding_document(e) for e in self._events]), tuple(self._amendments)
-        )
+        readings, findings = tuple(self._readings), tuple([finding_document(e) for e in self._events])
+        keep = self._memories() if readings or findings else {}
+        harvest = Harvest(readings, findings, tuple(self._amendments), keep)
         self._readings, self._events, self._amendments = [], [], []
         return harvest
+
+    def _memories(self) -> dict[str, str]:
+        return {kept_name(name): json.dumps(sensor.health.dump()) for name, sensor in self._sensors.items()}
 
     def finish(self, at: Instant) -> None:
         """Close the span that is under way, short as it is: the end of a capture or of the daemon."""

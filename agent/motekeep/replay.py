@@ -75,7 +75,8 @@ def replay(
                 continue
             at = _instant(record.t)
             if pipeline is None:
-                pipeline = Pipeline(place, interval_s, sensors, at, {})
+                pipeline = Pipeline(place, interval_s, sensors, at)
+                pipeline.resume(dict.fromkeys(names, 1), {}, at)
                 summary.first, harvest_at = record.t, at
             if isinstance(record, FrameRecord):
                 summary.frames[record.sensor] += 1

@@ -53,8 +53,9 @@ class Housekeeping:
         """Call it every few seconds: re-plans all jobs after a step of the wall clock."""
         if self._offset is not None and abs(at.offset - self._offset) > STEP_S:
             log.info("clock.stepped", seconds=round(at.offset - self._offset, 1))
+            now = datetime.fromtimestamp(at.utc, UTC)
             for job in self._scheduler.get_jobs():
-                job.modify(next_run_time=datetime.now(UTC) + min(job.trigger.interval, timedelta(minutes=1)))
+                job.modify(next_run_time=now + min(job.trigger.interval, timedelta(minutes=1)))
         self._offset = at.offset
 
     def stop(self) -> None:

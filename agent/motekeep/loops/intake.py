@@ -4,13 +4,15 @@ Owns the lock; what happens under it is a few microseconds of pure work a frame,
 reach a serial reader.
 """
 
+from collections.abc import Callable, Mapping
 from threading import Lock
 
 from motekeep.health.check import LineState
+from motekeep.health.finding import Finding
 from motekeep.health.gateway import GatewayFacts
 from motekeep.instant import Instant
 from motekeep.measure.interval import Climate
-from motekeep.pipeline import Harvest, Pipeline
+from motekeep.pipeline import Harvest, Pipeline, kept_name
 
 
 class Intake:
@@ -30,10 +32,27 @@ class Intake:
         with self._lock:
             self._pipeline.climate(sensor, climate, at)
 
+    def resume(self, next_seq: Callable[[str], int], kept: Callable[[str], str | None], at: Instant) -> None:
+        """Go on where the journal says that the last life ended."""
+        with self._lock:
+            names = self._pipeline.sensors
+            memory = {key: text for key in map(kept_name, names) if (text := kept(key)) is not None}
+            self._pipeline.resume({name: next_seq(name) for name in names}, memory, at)
+
     def harvest(self, at: Instant, facts: GatewayFacts | None = None) -> Harvest:
         """Everything that is finished by `at`."""
         with self._lock:
             self._pipeline.advance(at)
             if facts is not None:
                 self._pipeline.gateway(facts, at)
-            return self._pipeline.harvest(at)
+            return self._pipeline.harvest()
+
+    def finish(self, at: Instant) -> Harvest:
+        """Everything, the span under way included."""
+        with self._lock:
+            self._pipeline.finish(at)
+            return self._pipeline.harvest()
+
+    def findings(self) -> Mapping[str | None, list[Finding]]:
+        with self._lock:
+            return self._pipeline.findings()

@@ -72,7 +72,7 @@ class Reader:
 
     def _read(self, line: Line) -> None:
         settings = self._settings
-        rhythm = _Rhythm(settings, self._clock.now().boot_s)
+        rhythm = Rhythm(settings.dialect, settings.period_s, settings.duty, self._clock.now().boot_s)
         while not self._stop.is_set():
             now = self._clock.now()
             self.ticked = now.boot_s
@@ -90,14 +90,17 @@ class Reader:
                 self._intake.receive(settings.sensor, data, self._clock.now())
 
 
-class _Rhythm:
-    """When to sleep, wake and poll. Rule: awake for the first `awake` seconds of every `every`; polls only awake."""
+class Rhythm:
+    """When to sleep, wake and poll. Rule: awake for the first `awake` seconds of every `every`; polls only awake.
 
-    def __init__(self, settings: ReaderSettings, start_s: float) -> None:
-        self._duty = settings.duty
+    `duty` is (every_s, awake_s) or None; a polled dialect is read each `period_s`.
+    """
+
+    def __init__(self, dialect: Dialect, period_s: float, duty: tuple[float, float] | None, start_s: float) -> None:
+        self._duty = duty
         self._start = start_s
         self._asleep = False
-        self._period = settings.period_s if settings.dialect.polled else None
+        self._period = period_s if dialect.polled else None
         self._next_poll = start_s
 
     def next(self, boot_s: float) -> str | None:

@@ -1,0 +1,1 @@
+"""What the commands do, one file a command; `cli.py` only parses their words."""

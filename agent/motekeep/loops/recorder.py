@@ -1,0 +1,190 @@
+"""From the pipeline to the journal: what is finished becomes durable, then the publisher is told.
+
+Owns the order (durable before published), the one transaction an interval, and when a health document is due. It has
+no thread of its own: the supervisor turns it, because the journal's writing connection belongs to the main thread.
+
+Without a journal at the start (no disk) it keeps trying to open one. Until then health is judged and told, but no reading
+is made: without the journal nobody knows which sequence numbers were used.
+"""
+
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from threading import Event
+from typing import Protocol
+
+import structlog
+
+from motekeep.edges.ports import Batch, JournalWriter, NewReading, Notice, StoreState
+from motekeep.errors import StoreError
+from motekeep.health.finding import Finding
+from motekeep.health.gateway import GatewayFacts
+from motekeep.instant import Instant, from_rfc3339, rfc3339
+from motekeep.loops.backoff import Backoff
+from motekeep.loops.intake import Intake
+from motekeep.message.compose import Place
+from motekeep.message.documents import LinkHealth, ReadingDocument, StoreHealth
+from motekeep.message.health import Life, health_document
+from motekeep.message.topics import Topics
+from motekeep.pipeline import Harvest
+
+log = structlog.get_logger()
+
+FACTS_EVERY_S = 5.0
+FLUSH_MARKS = 2000  # marks waiting in memory beyond this get a commit of their own: they bound what a crash repeats
+HEALTH = "health"  # the name under which the journal keeps the last health document
+GRACE_S = 30.0  # on top of two periods before a health document counts as stale
+
+
+class Outlet(Protocol):
+    """What the recorder needs of the publisher."""
+
+    def wake(self) -> None: ...
+
+    def post(self, topic: str, body: str) -> None: ...
+
+
+@dataclass(frozen=True, slots=True)
+class RecorderSettings:
+    place: Place
+    topics: Topics
+    health_every_s: float
+    life: Life
+
+
+class Recorder:
+    """`turn` once a second; `finish` once at the end. `opener` gives the journal, or raises StoreError."""
+
+    def __init__(
+        self,
+        settings: RecorderSettings,
+        intake: Intake,
+        opener: Callable[[], JournalWriter],
+        outlet: Outlet,
+        facts: Callable[[StoreState, Instant], tuple[GatewayFacts, LinkHealth]],
+    ) -> None:
+        self._settings = settings
+        self._intake = intake
+        self._opener = opener
+        self._journal: JournalWriter | None = None
+        self._open_at = float("-inf")
+        self._trouble = Backoff(log, "journal")
+        self._why_closed = ""
+        self._outlet = outlet
+        self._facts = facts
+        self._facts_at = self._health_at = float("-inf")
+        self._told: object = None
+        self._health = ""
+        self._vouched = False
+        self._prune_due = Event()
+
+    def turn(self, at: Instant) -> None:
+        if self._journal is None and at.boot_s >= self._open_at:
+            self._open(at)
+        facts = None
+        if at.boot_s - self._facts_at >= FACTS_EVERY_S:
+            self._facts_at = at.boot_s
+            self._store = self._state()
+            facts, self._link = self._facts(self._store, at)
+        self._record(self._intake.harvest(at, facts), at)
+        if self._journal is not None and self._prune_due.is_set():
+            self._prune_due.clear()
+            self._journal.prune(at)
+        if facts is not None:
+            self._tell_health(at)
+
+    def prune_soon(self) -> None:
+        """Prune at the next turn; from any thread."""
+        self._prune_due.set()
+
+    def _open(self, at: Instant) -> None:
+        try:
+            journal = self._opener()
+        except StoreError as error:
+            self._why_closed = str(error)
+            self._open_at = at.boot_s + self._trouble.failed(error, at.boot_s)
+            return
+        self._trouble.recovered()
+        self._journal = journal
+        self._intake.resume(journal.next_seq, journal.kept, at)
+        self._outlet.wake()
+
+    def _state(self) -> StoreState:
+        if self._journal is not None:
+            return self._journal.state()
+        return StoreState(0, None, 0, None, {}, self._why_closed, full=False, in_memory=0)
+
+    def finish(self, at: Instant) -> None:
+        """Store what was measured of the span under way, short as it is."""
+        self._record(self._intake.finish(at), at)
+        if self._journal is not None:
+            self._journal.flush(at)
+            self._journal.close()
+            self._journal = None
+
+    def _record(self, harvest: Harvest, at: Instant) -> None:
+        if self._journal is None:
+            return
+        if at.trusted and not self._vouched:
+            self._journal.restamp(at)
+            self._outlet.wake()
+        self._vouched = at.trusted
+        if harvest:
+            readings = [_row(r) for r in harvest.readings]
+            self._journal.commit(Batch(readings, self._notices(harvest), self._kept(harvest)), at)
+            self._outlet.wake()
+        elif self._journal.pending_marks() > FLUSH_MARKS:
+            self._journal.flush(at)
+
+    def _kept(self, harvest: Harvest) -> dict[str, str]:
+        """What the next life needs, and the health document for `motekeep status`: free in a transaction that is due."""
+        return {**harvest.keep, HEALTH: self._health} if self._health else dict(harvest.keep)
+
+    def _notices(self, harvest: Harvest) -> list[Notice]:
+        topics = self._settings.topics
+        found = [Notice(topics.finding, f.json_text()) for f in harvest.findings]
+        return found + [Notice(topics.amend(a.sensor), a.json_text()) for a in harvest.amendments]
+
+    def _tell_health(self, at: Instant) -> None:
+        """A health document when what is open changed, or when the next one is due."""
+        findings = self._intake.findings()
+        now = (_gist(findings), at.trusted)
+        if now == self._told and at.boot_s - self._health_at < self._settings.health_every_s:
+            return
+        self._told, self._health_at = now, at.boot_s
+        store, settings = self._store, self._settings
+        oldest = None if store.oldest_waiting is None else rfc3339(store.oldest_waiting)
+        document = health_document(
+            settings.place,
+            at,
+            2 * settings.health_every_s + GRACE_S,
+            settings.life,
+            findings,
+            StoreHealth(
+                waiting=store.waiting,
+                oldest_waiting=oldest,
+                bytes=store.bytes,
+                disk_free=store.disk_free,
+                lost=dict(store.lost),
+            ),
+            self._link,
+        )
+        self._health = document.json_text()
+        self._outlet.post(settings.topics.health, self._health)
+
+
+def _gist(findings: Mapping[str | None, Sequence[Finding]]) -> frozenset[tuple[str | None, str]]:
+    return frozenset((sensor, f.code) for sensor, open_ in findings.items() for f in open_)
+
+
+def _row(reading: ReadingDocument) -> NewReading:
+    return NewReading(
+        sensor=reading.sensor,
+        seq=reading.seq,
+        boot_id=reading.boot,
+        boot_s=reading.boot_s,
+        start=from_rfc3339(reading.start),
+        seconds=reading.seconds,
+        clock=reading.clock,
+        flag=reading.flag,
+        body=reading.json_text(),
+    )
