@@ -25,7 +25,9 @@ PRIORITY = (
     Category.MAINTENANCE_REQUIRED,
 )
 
-OPEN_UNIT = "Disconnect power before opening the unit: the laser inside is only eye-safe while the case is closed."
+# Usual cautions of the trade; each stands behind the remedies in which it can hurt.
+OPENING = "Disconnect power before opening the unit: the laser inside is only eye-safe while its case is closed."
+SUPPLY = "Check voltage and polarity before connecting: a wrong or reversed supply destroys the unit."
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,45 +45,70 @@ class Kind:
 
 F, C, S, M = PRIORITY
 
+# A flag is given where the number itself is in doubt. `warming-up` gives none: frames of warm-up are left out of the
+# statistics, so what an interval holds besides is good, and a sensor that sleeps between is not suspect for life.
 KINDS: dict[str, Kind] = {
     "fan-stopped": Kind(
         F,
         4,
-        "Listen for the fan; blow out the inlet, else replace the unit; take a spare unit along. " + OPEN_UNIT,
+        f"Take a spare unit, listen for the fan, clear its inlet, and replace the unit if it stays still. {OPENING}",
         explains=("output-frozen", "channels-inconsistent"),
     ),
-    "counts-saturated": Kind(S, 3, "Nothing to repair: the counter ran full; read these minutes as 'at least'."),
-    "mass-clipped": Kind(S, 3, "Nothing to repair unless it stays in clean air: the mass is outside its range."),
+    "counts-saturated": Kind(
+        S,
+        3,
+        "Nothing to repair: the air held more than the counter can tell, so read these minutes as 'at least'.",
+    ),
+    "mass-clipped": Kind(
+        S,
+        3,
+        "Nothing to repair after smoke or dust; replace the unit if its mass stays outside the range in clean air.",
+    ),
     "output-frozen": Kind(
-        F, 4, "Power-cycle the sensor; replace it if the output stays frozen. Check the supply polarity first."
+        F, 4, f"Switch the sensor's supply off and on, and replace the unit if it freezes again. {SUPPLY}"
     ),
     "channels-inconsistent": Kind(
-        F, 4, "Check that the configured dialect is the sensor's; then power-cycle it, else replace the unit."
+        F, 4, "Compare the configured dialect with what `motekeep listen` shows, then replace the unit if they agree."
     ),
     "frames-corrupt": Kind(
-        M, None, "Check cable, ground and connector; shorten the line; keep it away from motors and radios."
+        M, None, "Reseat the plug, check cable and ground, and lead the cable shorter and away from motors and radios."
     ),
     "frames-missing": Kind(
-        F, None, "Check plug, cable and 5 V supply at the sensor; then replace the adapter, then the unit."
+        F,
+        None,
+        f"Check plug, cable and 5 V at the sensor, then try another adapter, then a spare unit. {SUPPLY}",
+        explains=("frames-corrupt",),
     ),
     "sensor-error": Kind(
-        F, 4, "The sensor reports a fault of its own; power-cycle it, else replace the unit. " + OPEN_UNIT
+        F,
+        4,
+        f"Switch the sensor's supply off and on, and replace the unit if it reports the fault again. {OPENING}",
     ),
-    "warming-up": Kind(C, 3, "Nothing to do: the sensor has just started."),
-    "clock-unsynced": Kind(M, None, "Give the gateway a time service or a battery clock; check its network."),
-    "store-degraded": Kind(
-        M, None, "Replace the SD card soon and keep the set-aside journal file; check the 5 V supply of the gateway."
-    ),
-    "store-full": Kind(M, None, "Bring the uplink back or raise [store] max_bytes; old minutes are being merged."),
-    "disk-low": Kind(M, None, "Free space on the gateway's disk or put in a larger card."),
-    "supply-low": Kind(
+    "warming-up": Kind(C, None, "Nothing to do: the sensor has just started, and its first half minute is left out."),
+    "clock-unsynced": Kind(
         M,
         None,
-        "Replace the power supply or its cable: a weak 5 V slows the fan. Check polarity before connecting.",
+        "Let the gateway reach a time service, or give it a battery-backed clock, so that its readings can be dated.",
     ),
-    "uplink-lost": Kind(M, None, "Check network and broker; nothing is lost while the journal has room."),
+    "store-degraded": Kind(
+        M,
+        None,
+        "Replace the memory card soon, keep the journal file that was set aside, and check the gateway's 5 V supply.",
+    ),
+    "store-full": Kind(
+        M, None, "Bring the uplink back or raise `max_bytes` under [store]: old minutes are being merged into hours."
+    ),
+    "disk-low": Kind(M, None, "Free space on the gateway's disk, or put in a larger card."),
+    "supply-low": Kind(
+        M, None, f"Replace the gateway's power supply or its cable: a weak 5 V slows the fans of its sensors. {SUPPLY}"
+    ),
+    "uplink-lost": Kind(
+        M, None, "Check the gateway's network and the broker: nothing is lost while the journal has room."
+    ),
     "uplink-refused": Kind(
-        M, None, "Look at the broker's access rules, quota and packet size for this gateway; rows wait or are set aside."
+        M,
+        None,
+        "Check this gateway's login, topic rights, quota and packet size at the broker: what it refuses is kept here.",
     ),
 }
 
@@ -123,8 +150,12 @@ class FindingEvent:
 
 @dataclass(frozen=True, slots=True)
 class Suspicion:
-    """What a check holds at the moment: the condition is there, since when (boot seconds), how sure, on what evidence."""
+    """What a check holds at the moment: the condition is there, since when (boot seconds), how sure, on what evidence.
+
+    `until` is how far the evidence reaches, for checks that learn only at an interval's end; None means up to now.
+    """
 
     since: float
     confidence: float
     evidence: str
+    until: float | None = None

@@ -1,0 +1,75 @@
+"""What a sensor check is: the events it may listen to, and the one question it answers.
+
+Owns the shape of a check and the words for the state of a line. Must not know any single check, nor how findings
+open and close: that is the ledger's.
+"""
+
+from abc import ABC, abstractmethod
+from collections.abc import Mapping, Sequence
+from enum import StrEnum
+from typing import ClassVar
+
+from motekeep.health.finding import Suspicion
+from motekeep.instant import Instant
+from motekeep.measure.interval import Interval
+from motekeep.wire.frame import Damage, Observation
+
+# What a check remembers across a restart of the daemon: plain numbers, fit for JSON.
+Memory = Mapping[str, float | Sequence[float]]
+
+
+class LineState(StrEnum):
+    """What became of a sensor's line: port opened, port gone (with a reason), put to sleep, woken."""
+
+    OPENED = "opened"
+    GONE = "gone"
+    ASLEEP = "asleep"
+    AWAKE = "awake"
+
+
+class Check(ABC):
+    """One condition of one sensor. A check overrides the hooks it needs; the others cost nothing, see `listens`.
+
+    `code` names its finding. `clear_s`: how long the condition must be absent before the finding closes. `again_s`:
+    how long the check may need, after a restart of the daemon, to raise a condition that still holds. A check with
+    `settled` set sees no frame that came during warm-up.
+
+    All times are boot seconds of one boot and do not run backwards.
+    """
+
+    code: ClassVar[str]
+    clear_s: ClassVar[float]
+    again_s: ClassVar[float] = 300.0
+    settled: ClassVar[bool] = False
+
+    # The empty hooks are meant to be empty: a check says by overriding which ones it needs.
+    def observe(self, observation: Observation) -> None:  # noqa: B027
+        """A good frame came."""
+
+    def damaged(self, damage: Damage, at: Instant) -> None:  # noqa: B027
+        """Bytes came that were not a frame."""
+
+    def heard(self, size: int, at: Instant) -> None:  # noqa: B027
+        """`size` bytes came, whatever they turn out to be."""
+
+    def line(self, state: LineState, at: Instant, why: str) -> None:  # noqa: B027
+        """The line changed its state; `why` says the reason in words when it is GONE."""
+
+    def interval(self, interval: Interval) -> None:  # noqa: B027
+        """An interval was closed."""
+
+    @abstractmethod
+    def judge(self, at: Instant) -> Suspicion | None:
+        """Whether the condition holds now. Asked every few seconds and at each interval's end."""
+
+    def memory(self) -> Memory | None:
+        """What must survive a restart while the condition holds; None for nothing."""
+        return None
+
+    def recall(self, memory: Memory, at: Instant) -> None:  # noqa: B027
+        """Take up what `memory` gave before the restart. Must ignore what it cannot use."""
+
+
+def listens(check: Check, hook: str) -> bool:
+    """Whether `check` overrides this hook; found once, so that an unused hook is never called."""
+    return getattr(type(check), hook) is not getattr(Check, hook)

@@ -1,0 +1,272 @@
+"""A fan that stands still: fan-stopped, without a twin and without a wake to compare.
+
+Owns the shape of the collapse and what counts as its end. Must not know the line or the weather: it sees settled
+frames only.
+"""
+
+from collections import deque
+from collections.abc import Sequence
+from dataclasses import dataclass
+from math import sqrt
+from typing import ClassVar
+
+from motekeep.health.chance import poisson_at_least, poisson_at_most
+from motekeep.health.check import Check, LineState, Memory
+from motekeep.health.finding import Suspicion
+from motekeep.instant import Instant
+from motekeep.wire.frame import Frame, Layout, Observation
+
+Levels = tuple[float, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class _Block:
+    """Mean levels of all frames of some 12 s."""
+
+    start: float
+    levels: Levels
+
+
+@dataclass(frozen=True, slots=True)
+class _Collapse:
+    """What is known of a fan that stopped: levels before and after, and whether the large particles went further
+    down than the small ones."""
+
+    since: float
+    before: Levels
+    left: Levels
+    sorted: bool
+    evidence: str
+
+
+class FanStopped(Check):
+    """fan-stopped: counts collapse in every channel faster than air can, and stay down.
+
+    Without flow the cell is fed by a draught of warmth alone, within seconds about a hundredth of the flow; what is in
+    it falls out, large particles in seconds (1 cm in still air: 10 um 3 s, 2.5 um 50 s, 1 um 5 min, 0.3 um 40 min,
+    Stokes with slip). What is left is a drizzle of small pulses and the false counts of the smallest channel. Level
+    alone tells nothing, so four things are asked of the last three to four minutes, in blocks of 12 s:
+
+    1. Depth and speed. The mean over the last 108 to 168 s is at most a quarter (without counts: a seventh) of the
+       lowest two minutes of the half hour that ended 48 s earlier. Air that falls exponentially does that only with
+       a time constant under about two minutes; an air cleaner in a room takes 8 or more, rain and a clean night far
+       longer. The lowest two minutes, not the last: a plume that passes falls back to what was there before it.
+    2. Order. No channel with pulses enough has clearly kept more than the smallest one: smoke that ends and haze that
+       lifts take the small particles and leave the large ones.
+    3. Number. The pulses missing are too many for chance, also if the air had fallen to 0.6 of that lowest level.
+       How much of a printed number one pulse is comes from the scatter of the unit's own two-minute means before, and
+       while there are few of them from the worst that firmware does (one second of air of which half is looked at).
+    4. It lasts: all of the above over the whole span at once.
+
+    Then it holds until the smallest channel is back at half of before, or the large particles are back in their old
+    share. A daemon that restarts remembers it. Fog clearing fails 1 as small particles stay. Below some 60 /dL at a 6 s
+    cadence (10 /dL at 1 s) there are too few pulses to tell. A duty cycle with less than eight minutes awake is too
+    short to see a collapse in: the look at each spin-up is what finds it there, and that check is not this one.
+    """
+
+    code: ClassVar[str] = "fan-stopped"
+    clear_s: ClassVar[float] = 60.0
+    settled: ClassVar[bool] = True
+
+    BLOCK_S = 12.0
+    CHUNK = 10  # blocks of the two minutes that levels before are taken over
+    FALL = 4  # blocks left to the fall itself, firmware averaging included
+    AFTER = range(9, 15)  # blocks after the fall; the longer ones where pulses are few
+    HISTORY = 150  # blocks before the fall: half an hour
+    DEPTH = 0.25
+    DEPTH_MASS = 0.15
+    CHANCE = 1e-3
+    AIR_FALLS_TO = 0.6
+    LEAST_PULSES = 12.0
+    ORDER_PULSES = 8.0
+    BACK = 5  # blocks that must be back
+    GAP_S = 60.0
+
+    def __init__(self, flow_l_min: float, period_s: float) -> None:
+        self._block_s = max(self.BLOCK_S, 2.0 * period_s)
+        # one frame: 12/flow per dL and pulse, or 1 ug/m3 (two pulses a second per ug/m3, half of it looked at)
+        self._per_pulse_counts = 12.0 / flow_l_min
+        self._per_pulse_mass = 1.0
+        self._frames_a_block = max(self._block_s / period_s, 1.0)
+        self._frames: list[Frame] = []  # of one block
+        self._block_end = 0.0
+        self._block_start = 0.0
+        self._layout: Layout | None = None
+        self._blocks: deque[_Block] = deque(maxlen=self.HISTORY + self.FALL + self.AFTER.stop)
+        self._collapse: _Collapse | None = None
+        self._restarted = False
+
+    # -- gathering ----------------------------------------------------------------------------------------------
+
+    def observe(self, observation: Observation) -> None:
+        now = observation.at.boot_s
+        if now >= self._block_end:
+            self._next_block(observation.frame, now)
+        self._frames.append(observation.frame)
+
+    def _next_block(self, frame: Frame, now: float) -> None:
+        if now - self._block_end > self.GAP_S or frame.layout is not self._layout:
+            self._forget()
+            self._layout = frame.layout
+        if self._frames:
+            rows = [f.counts or f.mass for f in self._frames]
+            levels = tuple([sum(column) / len(rows) for column in zip(*rows, strict=True)])
+            self._blocks.append(_Block(self._block_start, levels))
+            self._frames.clear()
+            if self._collapse is None:
+                self._collapse = self._look()
+            elif self._is_back(self._collapse):
+                self._collapse = None
+                self._blocks.clear()
+        self._block_start, self._block_end = now, now + self._block_s
+
+    def _forget(self) -> None:
+        self._frames.clear()
+        self._blocks.clear()
+        self._restarted = True
+
+    def line(self, state: LineState, at: Instant, why: str) -> None:
+        if state is not LineState.GONE:
+            self._forget()
+
+    # -- the collapse -------------------------------------------------------------------------------------------
+
+    def _look(self) -> _Collapse | None:
+        """Whether the blocks end in a collapse. The first lines are the cheap way out, taken nearly always."""
+        n, shortest, chunk = len(self._blocks), self.AFTER.start, self.CHUNK
+        gap = n - shortest - self.FALL
+        if gap < 2 * chunk:
+            return None
+        smallest = [block.levels[0] for block in self._blocks]
+        just_before = max(sum(smallest[gap - chunk : gap]), sum(smallest[gap - 2 * chunk : gap - chunk])) / chunk
+        if just_before <= 0.0 or sum(smallest[-shortest:]) / shortest > 2.0 * self.DEPTH * just_before:
+            return None
+        blocks = list(self._blocks)
+        for length in self.AFTER:
+            split = n - length - self.FALL
+            if split < 2 * chunk:
+                return None
+            found = self._compare(blocks, smallest, split, length)
+            if found is not None:
+                return found
+        return None
+
+    def _compare(self, blocks: list[_Block], smallest: list[float], split: int, length: int) -> _Collapse | None:
+        ends = range(split, max(split - self.HISTORY, 0) + self.CHUNK - 1, -self.CHUNK)
+        lowest = min(ends, key=lambda end: sum(smallest[end - self.CHUNK : end]))
+        before = _mean(blocks[lowest - self.CHUNK : lowest])
+        left = _mean(blocks[-length:])
+        depth = self.DEPTH if self._has_counts else self.DEPTH_MASS
+        if before[0] <= 0.0 or left[0] > depth * before[0]:
+            return None
+        per_pulse = self._per_pulse(smallest[:split]) * self.CHUNK / length
+        expected = [level / per_pulse for level in before]
+        seen = [level / per_pulse for level in left]
+        if not self._has_counts and before[0] < 5.0 * self._resolution:
+            return None
+        if expected[0] < self.LEAST_PULSES:
+            return None
+        if poisson_at_most(int(seen[0]), self.AIR_FALLS_TO * expected[0]) > self.CHANCE:
+            return None
+        kept = left[0] / before[0]
+        told = [i for i, pulses in enumerate(expected) if i and pulses >= self.ORDER_PULSES]
+        for i in told:
+            if poisson_at_least(round(seen[i]), max(1.5 * kept, 0.1) * expected[i]) < 0.01:
+                return None  # this channel has kept clearly more
+        by_size = any(poisson_at_most(int(seen[i]), 0.5 * kept * expected[i]) < 0.05 for i in told)
+        return self._collapsed(blocks, before, left, per_pulse * length, by_size=by_size)
+
+    def _collapsed(
+        self, blocks: list[_Block], before: Levels, left: Levels, per_block_pulse: float, *, by_size: bool
+    ) -> _Collapse:
+        normal = max(before[0] - 2.0 * sqrt(before[0] * per_block_pulse), 0.5 * before[0])
+        first = len(blocks) - 1
+        while first > 0 and blocks[first - 1].levels[0] < normal:
+            first -= 1
+        return _Collapse(blocks[first].start, before, left, by_size, self._told(before, left, by_size=by_size))
+
+    def _per_pulse(self, smallest: Sequence[float]) -> float:
+        """How much of a two-minute mean one pulse is: half the mean square of differences between such means, over
+        their mean. They are taken 3 minutes apart, so that firmware averaging does not hide in it; slow changes of the
+        air make it larger, which is the safe side. The worst case counts like two such means."""
+        worst = self._per_pulse_counts if self._has_counts else self._per_pulse_mass
+        worst /= self._frames_a_block * self.CHUNK
+        sums = [0.0]
+        for level in smallest:
+            sums.append(sums[-1] + level)
+        means = [(b - a) / self.CHUNK for a, b in zip(sums, sums[self.CHUNK :], strict=False)]
+        apart = self.CHUNK + self.CHUNK // 2
+        squares = [(b - a) ** 2 / 2.0 for a, b in zip(means, means[apart:], strict=False)]
+        average = sums[-1] / len(smallest)
+        if not squares or average <= 0.0:
+            return worst
+        own = sum(squares) / len(squares) / average
+        independent = len(squares) / self.CHUNK
+        return (2.0 * worst + independent * own) / (2.0 + independent)
+
+    @property
+    def _has_counts(self) -> bool:
+        return self._layout is not None and bool(self._layout.sizes_um)
+
+    @property
+    def _resolution(self) -> float:
+        return self._layout.mass_resolution if self._layout is not None else 0.0
+
+    def _told(self, before: Levels, left: Levels, *, by_size: bool) -> str:
+        layout = self._layout
+        assert layout is not None  # noqa: S101 (blocks exist only under a layout)
+        names = [f"above {size:g} um" for size in layout.sizes_um] if layout.sizes_um else list(layout.mass)
+        unit = "/dL" if layout.sizes_um else "ug/m3"
+        pairs = [f"{name} {b:.4g} to {a:.3g}" for name, b, a in zip(names, before, left, strict=True) if b > 0.0]
+        order = ", large ones furthest" if by_size else ""
+        return f"fell within {self.FALL * self._block_s:.0f} s and stays down{order}: {', '.join(pairs[:4])} {unit}"
+
+    # -- the way back -------------------------------------------------------------------------------------------
+
+    def _is_back(self, collapse: _Collapse) -> bool:
+        """Whether air is drawn again. After a restart of sensor or daemon a level well above the drizzle is enough, as
+        somebody may have put in a new fan on a cleaner day."""
+        before, left = collapse.before, collapse.left
+        if len(self._blocks) < self.BACK or len(self._blocks[-1].levels) != len(before):
+            return False
+        now = _mean(list(self._blocks)[-self.BACK :])
+        if now[0] >= 0.5 * before[0]:
+            return True
+        if self._restarted and now[0] >= max(0.25 * before[0], 5.0 * left[0]):
+            return True
+        if not collapse.sorted or now[0] < 3.0 * left[0]:
+            return False
+        per_pulse = self._per_pulse_counts / (self._frames_a_block * self.BACK)
+        for i in range(len(now) - 1, 0, -1):
+            due = before[i] / before[0] * now[0]
+            if due >= self.ORDER_PULSES * per_pulse:
+                return now[i] >= 0.4 * due
+        return False
+
+    def judge(self, at: Instant) -> Suspicion | None:
+        collapse = self._collapse
+        if collapse is None:
+            return None
+        confidence = 0.97 if collapse.sorted else 0.9
+        if len(collapse.before) <= 3:  # masses
+            confidence = 0.6
+        return Suspicion(collapse.since, confidence, collapse.evidence)
+
+    # -- across a restart ---------------------------------------------------------------------------------------
+
+    def memory(self) -> Memory | None:
+        collapse = self._collapse
+        if collapse is None:
+            return None
+        return {"before": collapse.before, "left": collapse.left, "sorted": float(collapse.sorted)}
+
+    def recall(self, memory: Memory, at: Instant) -> None:
+        match memory:
+            case {"before": [*before], "left": [*left], "sorted": float() | int() as by_size}:
+                if 0 < len(before) == len(left) and before[0] > 0.0:
+                    evidence = f"stopped before the restart: smallest channel {before[0]:.4g} to {left[0]:.3g}"
+                    self._collapse = _Collapse(at.boot_s, tuple(before), tuple(left), bool(by_size), evidence)
+
+
+def _mean(blocks: Sequence[_Block]) -> Levels:
+    return tuple([sum(column) / len(blocks) for column in zip(*[b.levels for b in blocks], strict=True)])

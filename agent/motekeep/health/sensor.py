@@ -1,0 +1,141 @@
+"""The health of one sensor: its checks, fed and judged together.
+
+Owns which checks a sensor has and what each of them hears. Must not know any check's physics.
+"""
+
+from collections.abc import Callable, Mapping
+from typing import Any
+
+from motekeep.health.check import Check, LineState, listens
+from motekeep.health.fan import FanStopped
+from motekeep.health.finding import Finding, FindingEvent
+from motekeep.health.frozen import OutputFrozen
+from motekeep.health.ledger import Ledger, Terms
+from motekeep.health.line import FramesCorrupt, FramesMissing
+from motekeep.health.range import ChannelsInconsistent, CountsSaturated, MassClipped
+from motekeep.health.unit import SensorError, WarmingUp
+from motekeep.instant import Instant
+from motekeep.measure.interval import Interval
+from motekeep.wire.frame import Damage, Dialect, Observation
+
+Observe = Callable[[Observation], None]
+
+
+class SensorHealth:
+    """Hears everything that one sensor does; says what is wrong with it.
+
+    `at` is when the watch begins: from then on frames are due each `period_s`. `flow_l_min` is the nominal flow, which
+    says how many real pulses a printed count can rest on.
+    """
+
+    def __init__(self, sensor: str, dialect: Dialect, period_s: float, at: Instant, *, flow_l_min: float = 0.1) -> None:
+        self._warm_up = WarmingUp(dialect.warm_up_s, period_s, at)
+        self._checks: tuple[Check, ...] = (
+            self._warm_up,
+            FramesMissing(period_s, at),
+            FramesCorrupt(period_s, at),
+            OutputFrozen(flow_l_min, at),
+            CountsSaturated(),
+            MassClipped(),
+            ChannelsInconsistent(),
+            SensorError(),
+            FanStopped(flow_l_min, period_s),
+        )
+        terms = {check.code: Terms(check.clear_s, check.again_s) for check in self._checks}
+        self._ledger = Ledger(sensor, terms)
+        self._events: list[FindingEvent] = []  # those of an interval's end, until the next judge; a few
+        checks = self._checks
+        self._observe_all: tuple[Observe, ...] = tuple(
+            [c.observe for c in checks if listens(c, "observe") and not c.settled]
+        )
+        self._observe_settled: tuple[Observe, ...] = tuple(
+            [c.observe for c in checks if listens(c, "observe") and c.settled]
+        )
+        self._damaged = tuple([c.damaged for c in checks if listens(c, "damaged")])
+        self._heard = tuple([c.heard for c in checks if listens(c, "heard")])
+        self._line = tuple([c.line for c in checks if listens(c, "line")])
+        self._interval = tuple([c.interval for c in checks if listens(c, "interval")])
+
+    # -- what comes in ------------------------------------------------------------------------------------------
+
+    def observe(self, observation: Observation) -> None:
+        """A good frame came."""
+        for hook in self._observe_all:
+            hook(observation)
+        if observation.at.boot_s >= self._warm_up.until:
+            for hook in self._observe_settled:
+                hook(observation)
+
+    def damaged(self, damage: Damage, at: Instant) -> None:
+        """Bytes came that were not a frame."""
+        for hook in self._damaged:
+            hook(damage, at)
+
+    def heard(self, size: int, at: Instant) -> None:
+        """`size` bytes came, whatever they turn out to be."""
+        for hook in self._heard:
+            hook(size, at)
+
+    def line(self, state: LineState, at: Instant, why: str = "") -> None:
+        """The line was opened or lost (`why` in words), the sensor put to sleep or woken."""
+        for hook in self._line:
+            hook(state, at, why)
+
+    def interval(self, interval: Interval) -> None:
+        """An interval was closed. Judged at once, so that `flags_between` of its span is complete; the events come out
+        of the next `judge`."""
+        for hook in self._interval:
+            hook(interval)
+        start, seconds = interval.start, interval.seconds
+        end = Instant(start.utc + seconds, start.boot_s + seconds, start.boot_id, start.trusted)
+        self._events += self._update(end)
+
+    # -- what comes out -----------------------------------------------------------------------------------------
+
+    def warming(self, at: Instant) -> bool:
+        """Whether frames that come now are still those of warm-up, to be left out of the statistics."""
+        return at.boot_s < self._warm_up.until
+
+    def judge(self, at: Instant) -> list[FindingEvent]:
+        """Findings that opened and closed since the last call. To be asked every few seconds."""
+        events = self._events + self._update(at)
+        self._events = []
+        return events
+
+    def _update(self, at: Instant) -> list[FindingEvent]:
+        raised = {}
+        for check in self._checks:
+            suspicion = check.judge(at)
+            if suspicion is not None:
+                raised[check.code] = suspicion
+        return self._ledger.update(raised, at)
+
+    def open(self) -> list[Finding]:
+        """All open findings."""
+        return self._ledger.open()
+
+    def flags_between(self, start_s: float, end_s: float) -> dict[str, int]:
+        """Code to flag of each finding that holds in a part of the span (boot seconds)."""
+        return self._ledger.flags_between(start_s, end_s)
+
+    # -- across a restart ---------------------------------------------------------------------------------------
+
+    def dump(self) -> dict[str, Any]:
+        """What `restore` needs in the daemon's next life, as plain values fit for JSON. Any: JSON."""
+        memories = {check.code: check.memory() for check in self._checks}
+        return {"findings": self._ledger.dump(), "checks": {k: dict(m) for k, m in memories.items() if m is not None}}
+
+    def restore(self, kept: Mapping[str, Any], at: Instant) -> None:
+        """Take up what `dump` gave, before anything else is heard. What cannot be used is left out.
+
+        A finding so remembered stays open, with its `since`, when its check raises it again within the check's
+        `again_s`; else it closes.
+        """
+        findings = kept.get("findings")
+        if isinstance(findings, list):
+            self._ledger.restore([f for f in findings if isinstance(f, dict)], at)
+        memories = kept.get("checks")
+        for check in self._checks:
+            memory = memories.get(check.code) if isinstance(memories, dict) else None
+            if isinstance(memory, dict):
+                check.recall(memory, at)
