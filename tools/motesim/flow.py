@@ -29,7 +29,7 @@ def middle_sizes_um(edges_um: tuple[float, ...]) -> tuple[float, ...]:
 
 @dataclass(slots=True)
 class Fan:
-    """Flow as a factor of nominal. Spins up and down with first-order lags."""
+    """Flow as a factor of nominal. Follows its drive with the lag `up_s`, coasts to rest with `down_s`."""
 
     speed: float
     up_s: float
@@ -37,9 +37,7 @@ class Fan:
 
     def run(self, target: Floats, step_s: float) -> Floats:
         """The flow at each step while the fan is driven towards `target` (0 when it is off or stuck)."""
-        # rising or falling is judged against the target before: a lag of one step where the direction turns
-        before = np.concatenate([[self.speed], target[:-1]])
-        lag = np.where(target >= before, self.up_s, self.down_s)
+        lag = np.where(target > 0.0, self.up_s, self.down_s)
         flow = relax(np.array([self.speed]), (step_s / lag)[:, None], target[:, None])[:, 0]
         if len(flow):
             self.speed = float(flow[-1])

@@ -10,7 +10,7 @@ import numpy as np
 
 from motekeep.wire.dialects import DIALECTS
 from motekeep.wire.frame import Frame, Layout
-from motekeep.wire.stuffed import FAN, FAN_SPEED, LASER, STATE_AT, STATUS_BITS
+from motekeep.wire.stuffed import FAN, FAN_SPEED, FLAG, LASER, STATE_AT, STATUS_BITS
 from motesim.aerosol import Floats
 from motesim.emulator import STANDARD_EDGES_UM, Face, Printed
 from motesim.faults import FaultSet
@@ -63,7 +63,7 @@ class Line:
         self.layout = layout_of(plan)
         self.face = face_of(self.layout)
         self._faults = faults
-        self._identity = plan.seed & 0xFF
+        self.identity = plan.seed & 0xFF
         streams = generators(plan.seed, ["jitter", "damage"])
         self._jitter = streams["jitter"]
         self._damage = streams["damage"]
@@ -76,7 +76,7 @@ class Line:
         ambient = printed.columns.ambient.tolist() if layout.ambient else [[]] * len(masses)
         revisions = printed.revision
         if self.dialect.name == _ID_DIALECT:
-            revisions = revisions * 256 + self._identity
+            revisions = revisions * 256 + self.identity
         errors = printed.error
         if self.dialect.name == _SELF_WATCHING:
             known = np.where((errors != 0) & (errors & STATUS_BITS == 0), LASER, errors & STATUS_BITS)
@@ -89,6 +89,11 @@ class Line:
                 masses, counts, ambient, rh, warm, revisions.tolist(), errors.tolist(), strict=True
             )
         ]
+
+    def parts(self, said: bytes) -> tuple[bytes, bytes]:
+        """The status unit and the values unit of what a self-watching sensor said; all is values where it is marred."""
+        end = said.find(FLAG, 1) + 1
+        return (said[:end], said[end:]) if 0 < end < len(said) else (b"", said)
 
     def speak(self, printed: Printed) -> Spoken:
         """What comes out of the port, with the moment it came, in order of time."""
