@@ -6,13 +6,13 @@ A stretch is what lies between two good units. In it
 - a rejected unit of known extent (`checksum`, `tail`) is a hit: one event, and it covers the span that it claimed;
   false starts and lost bytes inside that span are the same hit;
 - everything else (`length`, `escape`, bytes without a start) is told once, and only when nothing else was told yet;
-- fewer than `FEW` bytes before the first unit after opening are the tail of what was sent before, not damage.
+- fewer than `FEW` bytes before a hit belong to it, and before the first unit after opening they are no damage.
 A good unit ends the stretch and every claim: a claim that reached over it was false.
 """
 
 from motekeep.wire.frame import Damage, Frame, Tally
 
-# Common practice, no source: a line that is opened sends a glitch byte or two.
+# Common practice, no source: a line that is opened gives a glitch byte or two.
 FEW = 4
 
 HITS = frozenset({"checksum", "tail"})
@@ -41,7 +41,8 @@ class Losses:
     def good(self, events: list[Frame | Damage], end: int) -> None:
         """A good unit ended at `end`."""
         if self.pending:
-            self.settle(events)
+            if self._started or self.pending >= FEW:
+                self._tell(events, "rubbish", self.pending)
             self.pending = 0
         self._covered = end
         self._started = True
@@ -62,8 +63,9 @@ class Losses:
         self._covered = at + size
 
     def settle(self, events: list[Frame | Damage]) -> None:
-        """Tell the rubbish that is certain by now; after every feed, and before anything else is told."""
-        if self.pending >= (1 if self._started else FEW):
+        """Tell the rubbish that stands by itself by now; after every feed, and before a hit. Fewer than `FEW` bytes
+        wait: they may be the torn first bytes of a unit whose hit follows, and then they are part of that."""
+        if self.pending >= FEW:
             self._tell(events, "rubbish", self.pending)
 
     def _tell(self, events: list[Frame | Damage], reason: str, size: int) -> None:

@@ -25,7 +25,7 @@ class Search(ABC):
     `longest` is the limit of the buffer: between calls it holds the bytes of one unfinished unit, fewer than that.
     """
 
-    __slots__ = ("_held", "_losses", "_start", "longest", "tally")
+    __slots__ = ("_held", "_losses", "_settled", "_start", "longest", "tally")
 
     def __init__(self, start: bytes, longest: int) -> None:
         self._start = start
@@ -33,6 +33,7 @@ class Search(ABC):
         self.tally = Tally()
         self._losses = Losses(self.tally)
         self._held = b""
+        self._settled = 0  # how many of the bytes held already belong to a good unit
 
     @abstractmethod
     def judge(self, buffer: bytes, start: int) -> Verdict:
@@ -44,7 +45,7 @@ class Search(ABC):
         return len(self._held)
 
     def reset(self) -> None:
-        self._held = b""
+        self._held, self._settled = b"", 0
         self._losses.restart()
 
     def feed(self, data: bytes) -> list[Frame | Damage]:
@@ -53,12 +54,12 @@ class Search(ABC):
         buffer = self._held + data if self._held else data
         base = tally.bytes - len(buffer)
         events: list[Frame | Damage] = []
-        settled = look = 0
+        settled, look = self._settled, 0
         while True:
             start = buffer.find(self._start, look)
             found = start >= 0
             if not found:
-                start = self._end_of_rubbish(buffer, settled)
+                start = self._end_of_rubbish(buffer, look)
             if start > settled:
                 losses.lost(base + settled, start - settled)
                 settled = start
@@ -68,25 +69,28 @@ class Search(ABC):
             if isinstance(outcome, str):
                 look = start + 1  # not after the claimed size: a good unit may begin inside it
                 if outcome == "idle":
-                    settled = look
+                    settled = max(settled, look)
                 elif outcome != "rubbish":
                     tally.headers += 1
                     losses.rejected(events, outcome, base + start, size)
                 continue
-            settled = look = start + size
+            look = settled = start + size
             losses.good(events, base + settled)
             tally.headers += 1
             if outcome is not None:
                 tally.frames += 1
                 events.append(outcome)
-        self._held = buffer[settled:]
+            if buffer[settled - 1] == self._start[0]:
+                # A unit that lost its last byte borrows the first one of the next unit when they happen to be equal.
+                look -= 1
+        self._held, self._settled = buffer[start:], settled - start
         if losses.pending:
             losses.settle(events)
         return events
 
-    def _end_of_rubbish(self, buffer: bytes, settled: int) -> int:
+    def _end_of_rubbish(self, buffer: bytes, look: int) -> int:
         """Where the buffer may break off inside the start bytes; its end when it does not."""
-        for size in range(min(len(self._start) - 1, len(buffer) - settled), 0, -1):
+        for size in range(min(len(self._start) - 1, len(buffer) - look), 0, -1):
             if buffer.endswith(self._start[:size]):
                 return len(buffer) - size
         return len(buffer)

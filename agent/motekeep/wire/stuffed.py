@@ -70,7 +70,7 @@ class StuffedDecoder(Search):
             return (LONGEST, "length") if len(buffer) - start >= LONGEST else MORE
         if close == start + 1:
             return 1, "idle"
-        size = close - start  # without the closing flag
+        size = close - start + 1
         body = unescaped(buffer[start + 1 : close])
         if body is None:
             return size, "escape"
