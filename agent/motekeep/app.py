@@ -43,6 +43,7 @@ def sensor_setups(config: Config) -> list[SensorSetup]:
             name=sensor.name,
             dialect=DIALECTS[sensor.dialect],
             period_s=sensor.period,
+            flow_l_min=sensor.flow,
             frame_climate=isinstance(sensor.climate, FrameClimate),
             climate_max_age_s=_climate_max_age_s(sensor),
         )
@@ -57,3 +58,177 @@ def _climate_max_age_s(sensor: Sensor) -> float:
         case FixedClimate():
             return float("inf")
     return 900.0
+
+
+class Daemon:
+    """Everything of one configuration, wired. `run` returns the exit code once `stop` is set."""
+
+    def __init__(self, config: Config, clock: Clock, stop: Event, alive: Callable[[], None]) -> None:
+        now = clock.now()
+        place = Place(config.site, config.gateway)
+        topics = Topics(config.broker.root, config.site, config.gateway)
+        names = [sensor.name for sensor in config.sensor]
+        self._clock = clock
+        self._intake = intake = Intake(Pipeline(place, config.interval, sensor_setups(config), now))
+        self._journal = LateJournal(str(config.store.path))
+        self._publisher = Publisher(
+            _publisher_settings(config),
+            topics,
+            names,
+            journal=self._journal,
+            broker=MqttBroker(_broker_settings(config, topics, place, now), clock),
+            clock=clock,
+            stop=stop,
+            farewell=lambda at: health_offline(place, at).json_text(),
+            climates=_climate_topics(config, intake, clock),
+        )
+        self._recorder = Recorder(
+            RecorderSettings(place, topics, config.health.every, Life(now.boot_s, __version__)),
+            intake,
+            lambda: self._open_journal(config, topics),
+            self._publisher,
+            Facts(Host(), config.store.path, self._publisher.facts),
+        )
+        self._climate = _climate_feed(config, intake, now)
+        self._housekeeping = Housekeeping({"prune": (PRUNE_EVERY_S, self._recorder.prune_soon)})
+        readers = [Hand(f"reader-{s.name}", _reader(s, intake, clock, stop)) for s in config.sensor]
+        hands = [Hand("publisher", self._publisher), *readers]
+        self._supervisor = Supervisor(hands, self._turn, alive, clock, stop)
+
+    def run(self) -> int:
+        self._housekeeping.start()
+        code = self._supervisor.run(self._stopping)
+        self._recorder.close(self._clock.now())
+        self._housekeeping.stop()
+        return code
+
+    def _turn(self, at: Instant) -> None:
+        self._climate.turn(at)
+        self._housekeeping.watch(at)
+        self._recorder.turn(at)
+
+    def _stopping(self) -> None:
+        self._recorder.finish(self._clock.now())
+        self._publisher.wake()
+
+    def _open_journal(self, config: Config, topics: Topics) -> JournalWriter:
+        journal = Journal.open(_journal_settings(config), topics, self._clock)
+        self._journal.attach(journal.reader())
+        return journal
+
+
+def run(config_path: Path, log_style: str) -> int:
+    """The command `run`: until SIGTERM or SIGINT. 0 after a clean stop, 1 when a loop crashed.
+
+    A configuration that is not there is waited for; one that is wrong ends with ConfigError, which systemd tries again.
+    """
+    _set_up_logging(log_style)
+    stop = Event()
+    manager = ServiceManager()
+    for number in (signal.SIGTERM, signal.SIGINT):
+        signal.signal(number, lambda *_: stop.set())
+    config = _wait_for_config(config_path, stop, manager)
+    if config is None:
+        return 0
+    log.info("daemon.starting", version=__version__, site=config.site, gateway=config.gateway)
+    clock = SystemClock(trust_rtc=config.store.trust_rtc)
+    daemon = Daemon(config, clock, stop, lambda: _feed(manager))
+    manager.ready(f"{len(config.sensor)} sensors, broker {config.broker.host}:{config.broker.port}")
+    code = daemon.run()
+    manager.stopping()
+    log.info("daemon.stopped", code=code)
+    sys.stdout.flush()
+    # Threads of libraries may still hang in a network call; everything of ours is stored, so nothing waits for them.
+    os._exit(code)
+
+
+def _feed(manager: ServiceManager) -> None:
+    manager.feed_watchdog()
+
+
+def _wait_for_config(path: Path, stop: Event, manager: ServiceManager) -> Config | None:
+    """The configuration, waited for while the file is absent; None when told to stop meanwhile."""
+    backoff = Backoff(log, "config", path=str(path))
+    clock = SystemClock()
+    told = False
+    while not path.exists():
+        error = ConfigError(f"reading {path}", "no such file", "copy config.example.toml there and edit it")
+        wait_s = backoff.failed(error, clock.now().boot_s)
+        if not told:
+            manager.ready(f"waiting for {path}")
+            told = True
+        if clock.wait(stop, min(wait_s, CONFIG_LOOK_S)):
+            return None
+        manager.feed_watchdog()
+    backoff.recovered()
+    return load(path)
+
+
+def _publisher_settings(config: Config) -> PublisherSettings:
+    broker = config.broker
+    return PublisherSettings(
+        interval_s=config.interval,
+        receipt=broker.receipt,
+        window=broker.window,
+        late_rate=broker.late_rate,
+        clock_wait_s=config.store.clock_wait,
+    )
+
+
+def _broker_settings(config: Config, topics: Topics, place: Place, now: Instant) -> BrokerSettings:
+    broker = config.broker
+    return BrokerSettings(
+        host=broker.host,
+        port=broker.port,
+        client_id=f"motekeep-{config.site}-{config.gateway}",
+        will=(topics.health, health_will(place.site, place.gateway, now.boot_id).json_text()),
+        filters=(topics.resend, topics.taken("+"), *_climate_filters(config)),
+        username=broker.username,
+        password_file=broker.password_file,
+        tls=None if broker.tls is None else Tls(broker.tls.ca, broker.tls.cert, broker.tls.key),
+        will_delay_s=WILL_DELAY_S,
+    )
+
+
+def _reader(sensor: Sensor, intake: Intake, clock: Clock, stop: Event) -> Reader:
+    dialect = DIALECTS[sensor.dialect]
+    duty = None if sensor.duty is None else (sensor.duty.every, sensor.duty.awake)
+    settings = ReaderSettings(sensor.name, sensor.port, dialect, sensor.period, duty)
+
+    def opener(port: str, baud: int) -> Line:
+        return open_line(port, baud, dialect.longest)
+
+    return Reader(settings, intake, opener, clock, stop)
+
+
+def _climate_feed(config: Config, intake: Intake, now: Instant) -> ClimateFeed:
+    """Fixed climate is set once, here; sysfs is read again and again."""
+    sources = {}
+    for sensor in config.sensor:
+        match sensor.climate:
+            case FixedClimate(rh=rh, t=t):
+                intake.climate(sensor.name, Climate(rh, t, "fixed"), now)
+            case FileClimate(path=path):
+                sources[sensor.name] = SysfsClimate(path).read
+    return ClimateFeed(sources, intake)
+
+
+def _set_up_logging(style: str) -> None:
+    """One JSON line an event on stderr for the service manager's log, or text for people. Through the standard library's
+    handlers, because structlog's own printer would raise into the caller on a full disk or a closed pipe."""
+    logging.basicConfig(format="%(message)s", stream=sys.stderr, level=logging.INFO)
+    logging.raiseExceptions = False
+    renderer: Any = (  # Any: structlog's processors share no narrower type
+        structlog.processors.JSONRenderer() if style == "json" else structlog.dev.ConsoleRenderer(colors=False)
+    )
+    structlog.configure(
+        processors=[
+            structlog.processors.add_log_level,
+            structlog.processors.TimeStamper(fmt="iso", utc=True),
+            structlog.processors.format_exc_info,
+            renderer,
+        ],
+        wrapper_class=structlog.make_filtering_bound_logger(logging.INFO),
+        logger_factory=structlog.stdlib.LoggerFactory(),
+        cache_logger_on_first_use=True,
+    )

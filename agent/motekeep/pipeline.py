@@ -19,7 +19,7 @@ from motekeep.measure.interval import Accumulator, Cadence, Climate, frame_clima
 from motekeep.measure.reading import Correction, make_reading, uncorrected
 from motekeep.message.compose import Place, amend_document, finding_document, reading_document
 from motekeep.message.documents import AmendDocument, FindingDocument, ReadingDocument
-from motekeep.wire.frame import Damage, Dialect, Observation
+from motekeep.wire.frame import Damage, Decoder, Dialect, Observation
 
 STEP_S = 1.0  # a jump of the wall clock beyond this is a step; time services slew smaller ones
 JUDGE_EVERY_S = 5.0  # fine enough for findings due within three minutes, coarse enough to cost nothing
@@ -33,6 +33,7 @@ class SensorSetup:
     name: str
     dialect: Dialect
     period_s: float = 1.0
+    flow_l_min: float = 0.1
     frame_climate: bool = False
     climate_max_age_s: float = 900.0
     correction: Correction = uncorrected
@@ -51,6 +52,9 @@ class Harvest:
         return bool(self.readings or self.findings or self.amendments)
 
 
+GATEWAY_KEPT = "health"
+
+
 def kept_name(sensor: str) -> str:
     """The name under which a sensor's health memory is kept between lives."""
     return f"health/{sensor}"
@@ -63,14 +67,12 @@ class _Sensor:
     setup: SensorSetup
     health: SensorHealth
     cadence: Cadence
+    decoder: Decoder
     seq: int | None = None
     accumulator: Accumulator = field(default_factory=Accumulator)
     climate: tuple[Climate, float] | None = None
     asleep_since: float | None = None
     asleep_s: float = 0.0
-
-    def __post_init__(self) -> None:
-        self.decoder = self.setup.dialect.decoder()
 
 
 class Pipeline:
@@ -93,8 +95,8 @@ class Pipeline:
 
     @staticmethod
     def _sensor(setup: SensorSetup, at: Instant) -> _Sensor:
-        health = SensorHealth(setup.name, setup.dialect, setup.period_s, at)
-        return _Sensor(setup, health, Cadence(setup.period_s, at.boot_s))
+        health = SensorHealth(setup.name, setup.dialect, setup.period_s, at, flow_l_min=setup.flow_l_min)
+        return _Sensor(setup, health, Cadence(setup.period_s, at.boot_s), setup.dialect.decoder())
 
     def resume(self, seqs: Mapping[str, int], kept: Mapping[str, str], at: Instant) -> None:
         """Go on from an earlier life: each sensor's next sequence number, and what `Harvest.keep` held last."""
@@ -102,6 +104,13 @@ class Pipeline:
             sensor.seq = seqs[name]
             if memory := kept.get(kept_name(name)):
                 sensor.health.restore(json.loads(memory), at)
+        if memory := kept.get(GATEWAY_KEPT):
+            self._gateway.restore(json.loads(memory), at)
+
+    @property
+    def kept_names(self) -> list[str]:
+        """Every name that `Harvest.keep` may use."""
+        return [GATEWAY_KEPT, *map(kept_name, self._sensors)]
 
     @property
     def sensors(self) -> list[str]:
@@ -243,7 +252,8 @@ class Pipeline:
         return harvest
 
     def _memories(self) -> dict[str, str]:
-        return {kept_name(name): json.dumps(sensor.health.dump()) for name, sensor in self._sensors.items()}
+        sensors = {kept_name(name): json.dumps(sensor.health.dump()) for name, sensor in self._sensors.items()}
+        return {**sensors, GATEWAY_KEPT: json.dumps(self._gateway.dump())}
 
     def finish(self, at: Instant) -> None:
         """Close the span that is under way, short as it is: the end of a capture or of the daemon."""

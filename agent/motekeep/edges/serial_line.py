@@ -11,7 +11,7 @@ from pathlib import Path
 
 import serial
 
-from motekeep.edges.host import port_holder
+from motekeep.edges.host import Host
 from motekeep.errors import PortError
 
 LOST = (OSError, TypeError, termios.error)  # serial.SerialException is an OSError
@@ -88,9 +88,7 @@ def _told(port: str, error: BaseException) -> tuple[str, str]:
     if number == 2 or not Path(port).exists():
         return "no such device", "plug the adapter in, or name one of /dev/serial/by-id/"
     if number in (11, 16) or "exclusively lock" in text:
-        holder = port_holder(port)
-        who = f" by {holder}" if holder else ""
-        return f"it is held{who}", "end that program, or give the sensor a port of its own"
+        return f"another program has it open: {Host().who_holds(port)}", "end that program, or use another port"
     if number == 13:
         return "permission denied", "put the user into the group of the device (dialout)"
     if number == 1:

@@ -14,8 +14,10 @@ from motekeep.wire.frame import Damage, Observation
 class WarmingUp(Check):
     """warming-up: from the first frame after power, wake or silence for as long as the dialect says.
 
-    Power is not seen. So a line that was opened counts as power, and so does a silence of 5 s or 3 periods: a unit
-    cannot restart faster. In a network study most isolated outliers were first records after a reset (METHODS: 2018
+    Power is not seen. So a line that comes back counts as power, and so do a silence of 5 s or 3 periods (a unit cannot
+    restart faster) and the first frame within two minutes of the gateway's own boot, since both hang on one supply. A
+    daemon that starts later finds a sensor that has been running: its restart must not cost half a minute of record.
+    In a network study most isolated outliers were first records after a reset (2018
     conference material); 30 s is the usual advice of makers (common practice, no source).
     """
 
@@ -25,11 +27,14 @@ class WarmingUp(Check):
 
     SILENT_S = 5.0
     SILENT_PERIODS = 3.0
+    BOOT_S = 120.0
 
     def __init__(self, warm_up_s: float, period_s: float, at: Instant) -> None:
         self._warm_up = warm_up_s
         self._silent = max(self.SILENT_S, self.SILENT_PERIODS * period_s)
-        self._why: str | None = "the line was opened"  # what the next frame is the first one after
+        booted = at.boot_s < self.BOOT_S
+        self._why: str | None = "the gateway booted" if booted else None  # what the next frame is the first one after
+        self._gone = False
         self._started_by = ""
         self._last = self._since = at.boot_s
         self.until = at.boot_s
@@ -50,8 +55,11 @@ class WarmingUp(Check):
             self._last = max(self._last, at.boot_s)
 
     def line(self, state: LineState, at: Instant, why: str) -> None:
-        if state is LineState.OPENED:
-            self._why = "the line was opened"
+        if state is LineState.GONE:
+            self._gone = True
+        elif state is LineState.OPENED and self._gone:
+            self._gone = False
+            self._why = "the line came back"
         elif state is LineState.AWAKE:
             self._why = None
             self._last = at.boot_s + self._warm_up  # frames are late after a wake, and that is no second start

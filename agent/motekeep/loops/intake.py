@@ -12,7 +12,7 @@ from motekeep.health.finding import Finding
 from motekeep.health.gateway import GatewayFacts
 from motekeep.instant import Instant
 from motekeep.measure.interval import Climate
-from motekeep.pipeline import Harvest, Pipeline, kept_name
+from motekeep.pipeline import Harvest, Pipeline
 
 
 class Intake:
@@ -35,9 +35,8 @@ class Intake:
     def resume(self, next_seq: Callable[[str], int], kept: Callable[[str], str | None], at: Instant) -> None:
         """Go on where the journal says that the last life ended."""
         with self._lock:
-            names = self._pipeline.sensors
-            memory = {key: text for key in map(kept_name, names) if (text := kept(key)) is not None}
-            self._pipeline.resume({name: next_seq(name) for name in names}, memory, at)
+            memory = {key: text for key in self._pipeline.kept_names if (text := kept(key)) is not None}
+            self._pipeline.resume({name: next_seq(name) for name in self._pipeline.sensors}, memory, at)
 
     def harvest(self, at: Instant, facts: GatewayFacts | None = None) -> Harvest:
         """Everything that is finished by `at`."""

@@ -31,7 +31,7 @@ log = structlog.get_logger()
 
 FACTS_EVERY_S = 5.0
 FLUSH_MARKS = 2000  # marks waiting in memory beyond this get a commit of their own: they bound what a crash repeats
-HEALTH = "health"  # the name under which the journal keeps the last health document
+HEALTH = "health-document"  # the name under which the journal keeps the last health document
 GRACE_S = 30.0  # on top of two periods before a health document counts as stale
 
 
@@ -52,7 +52,7 @@ class RecorderSettings:
 
 
 class Recorder:
-    """`turn` once a second; `finish` once at the end. `opener` gives the journal, or raises StoreError."""
+    """`turn` once a second; at the end `finish`, then `close` when nobody marks rows any more. `opener` gives the journal, or raises StoreError."""
 
     def __init__(
         self,
@@ -116,6 +116,9 @@ class Recorder:
     def finish(self, at: Instant) -> None:
         """Store what was measured of the span under way, short as it is."""
         self._record(self._intake.finish(at), at)
+
+    def close(self, at: Instant) -> None:
+        """Write the last marks and close the journal."""
         if self._journal is not None:
             self._journal.flush(at)
             self._journal.close()

@@ -18,7 +18,7 @@ log = structlog.get_logger()
 
 TURN_S = 1.0
 STALLED_S = 90.0  # longer than any wait of a loop: reading 2 s, backing off 30 s, connecting with TLS 60 s
-JOIN_S = 2.0  # SIGTERM is to be answered within five seconds, the last commit and the farewell included
+JOIN_S = 2.5  # the farewell takes up to 2 s; SIGTERM is to be answered within five, the last commits included
 
 
 class Loop(Protocol):
@@ -56,7 +56,8 @@ class Supervisor:
         self._crashed = False
         self._stalled: set[str] = set()
 
-    def run(self) -> int:
+    def run(self, stopping: Callable[[], None]) -> int:
+        """`stopping` stores what is under way: it runs as soon as the stop is seen, before the loops are waited for."""
         threads = [Thread(target=self._guard, args=(hand,), name=hand.name, daemon=True) for hand in self._hands]
         for thread in threads:
             thread.start()
@@ -66,6 +67,7 @@ class Supervisor:
             if self._progressing(now):
                 self._alive()
             self._clock.wait(self._stop, TURN_S)
+        stopping()
         deadline = self._clock.now().boot_s + JOIN_S
         for thread in threads:
             thread.join(max(deadline - self._clock.now().boot_s, 0.05))

@@ -68,8 +68,8 @@ class Interval:
     """What one sensor did in one span. `start` is its first moment; `seconds` its true length by the boot clock.
 
     `mass`, `mass_ambient` and `counts` follow the order of `layout`, which is None when no frame came. `asleep_s`
-    counts the seconds that the sensor was asleep by duty, `warming_s` those within warm-up: frames of both are left
-    out of the statistics, and no frame is missed in them.
+    counts the seconds that the sensor was asleep by duty, in which no frame is missed; `warming_frames` the frames
+    of warm-up, which are left out of the statistics.
     """
 
     sensor: str
@@ -82,13 +82,12 @@ class Interval:
     counts: tuple[Channel, ...]
     climate: Climate | None
     asleep_s: float = 0.0
-    warming_s: float = 0.0
     warming_frames: int = 0
 
     @property
     def completeness(self) -> float:
-        """Share of the frames due in this span that were good, 0..1."""
-        due = self.frames.good + self.frames.bad + self.frames.missing
+        """Share of the frames due in this span that were good and not of warm-up, 0..1."""
+        due = self.frames.good + self.frames.bad + self.frames.missing + self.warming_frames
         return self.frames.good / due if due else 0.0
 
 
@@ -144,7 +143,6 @@ class Accumulator:
         *,
         climate: Climate | None,
         asleep_s: float = 0.0,
-        warming_s: float = 0.0,
     ) -> Interval:
         """The interval of all that was added. Without a good frame every tuple is empty and `layout` is None."""
         frames = self._frames
@@ -161,7 +159,6 @@ class Accumulator:
             counts=tuple([channel(values, top) for values in zip(*[f.counts for f in frames], strict=True)]),
             climate=climate,
             asleep_s=asleep_s,
-            warming_s=warming_s,
             warming_frames=self.warming_frames,
         )
 

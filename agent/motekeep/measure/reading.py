@@ -23,12 +23,14 @@ COMPLETENESS = 0.75
 class Value:
     """One published figure in ug/m3: as the sensor gave it, after correction, and its standard uncertainty.
 
-    `raw` and `value` are None when nothing was measured; `u` is None when it was not evaluated.
+    `raw` and `value` are None when nothing was measured; `u` is None when it was not evaluated. `u_random` is the part
+    of `u` that is independent from one interval to the next and so averages out; the rest of `u` does not.
     """
 
     raw: float | None
     value: float | None
     u: float | None
+    u_random: float | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -82,10 +84,11 @@ def make_reading(interval: Interval, correction: Correction, findings: dict[str,
     """
     layout = interval.layout
     if layout is None:
-        asleep = interval.asleep_s >= interval.seconds - 1.0
-        return Reading(interval, {}, MISSING, ("asleep" if asleep else "no-frames", *findings))
+        return Reading(interval, {}, MISSING, tuple(dict.fromkeys((_why_empty(interval), *findings))))
     corrected = correction(interval)
     flags, reasons = [corrected.flag], list(corrected.reasons)
+    if interval.warming_frames:
+        reasons.append("warming-up")
     if interval.completeness < COMPLETENESS:
         flags.append(SUSPECT)
         reasons.append("incomplete")
@@ -98,6 +101,12 @@ def make_reading(interval: Interval, correction: Correction, findings: dict[str,
             reasons.append(code)
     values = dict(zip(layout.mass, corrected.values, strict=True))
     return Reading(interval, values, worst(flags), tuple(reasons), corrected.calibration)
+
+
+def _why_empty(interval: Interval) -> str:
+    if interval.warming_frames:
+        return "warming-up"
+    return "asleep" if interval.asleep_s >= interval.seconds - 1.0 else "no-frames"
 
 
 def saturated(counts: Channel) -> bool:
