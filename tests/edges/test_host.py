@@ -9,7 +9,7 @@ from pathlib import Path
 
 import pytest
 
-from motekeep.edges.host import Host, holders, port_holder
+from motekeep.edges.host import Host
 
 
 def write(root: Path, files: dict[str, str]) -> Host:
@@ -133,20 +133,21 @@ class TestHolders:
             assert child.stdout is not None
             assert child.stdout.readline() == "open\n"
 
-            assert [holder.pid for holder in holders(link)] == [child.pid]
-            assert (port_holder(str(link)) or "").startswith(f"process {child.pid} (python")
+            assert [holder.pid for holder in Host().holders(link)] == [child.pid]
+            assert Host().who_holds(str(link)).startswith(f"process {child.pid} (python")
         finally:
             child.communicate("\n")
 
     def test_this_process_itself_is_told_as_such(self, port: str) -> None:
         handle = os.open(port, os.O_RDWR | os.O_NOCTTY)
         try:
-            assert port_holder(port) == "this process itself (is the port configured twice?)"
+            assert Host().who_holds(port) == "this process itself (is the port configured twice?)"
         finally:
             os.close(handle)
 
     def test_a_free_port_has_no_holder(self, port: str) -> None:
-        assert port_holder(port) is None
+        assert Host().holders(port) == []
+        assert "motekeep check` as root" in Host().who_holds(port)
 
     def test_processes_that_cannot_be_looked_into_are_passed_over(self, tmp_path: Path) -> None:
         device = tmp_path / "ttyUSB0"
@@ -160,4 +161,4 @@ class TestHolders:
                 (folder / "fd" / "3").symlink_to(target)
         (tmp_path / "proc" / "self").symlink_to("7")
 
-        assert port_holder(device, proc_root=tmp_path / "proc") == "process 52 (terminal)"
+        assert Host(proc_root=tmp_path / "proc").who_holds(device) == "process 52 (terminal)"

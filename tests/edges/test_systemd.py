@@ -9,7 +9,7 @@ from pathlib import Path
 import pytest
 from structlog.testing import capture_logs
 
-from motekeep.edges.systemd import CREDENTIAL_BYTES, ServiceManager, read_secret
+from motekeep.edges.systemd import CREDENTIAL_BYTES, UNIT_CREDENTIALS, ServiceManager, read_secret, secret_file
 
 Listen = Callable[[str], socket.socket]
 
@@ -168,3 +168,18 @@ class TestCredentials:
 
     def test_a_folder_in_the_place_of_a_secret_is_none(self, tmp_path: Path) -> None:
         assert read_secret(tmp_path) is None
+
+
+class TestSecretFile:
+    def test_outside_the_unit_a_credential_is_read_where_the_unit_loads_it_from(self, tmp_path: Path) -> None:
+        (tmp_path / "mqtt-password").write_text("heron lake")
+
+        assert secret_file(UNIT_CREDENTIALS / "mqtt-password", tmp_path) == tmp_path / "mqtt-password"
+
+    def test_without_that_file_the_message_will_name_what_is_configured(self, tmp_path: Path) -> None:
+        assert secret_file(UNIT_CREDENTIALS / "mqtt-key", tmp_path) == UNIT_CREDENTIALS / "mqtt-key"
+
+    def test_any_other_path_is_taken_as_it_is(self, tmp_path: Path) -> None:
+        (tmp_path / "mqtt-password").write_text("heron lake")
+
+        assert secret_file(Path("/srv/mqtt-password"), tmp_path) == Path("/srv/mqtt-password")

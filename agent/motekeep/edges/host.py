@@ -39,10 +39,11 @@ class Holder:
 
 
 class Host:
-    """Reads the machine below `sys_root`; another root is for tests."""
+    """Reads the machine below `sys_root` and `proc_root`; other roots are for tests."""
 
-    def __init__(self, *, sys_root: Path = Path("/sys")) -> None:
+    def __init__(self, *, sys_root: Path = Path("/sys"), proc_root: Path = Path("/proc")) -> None:
         self._sys = sys_root
+        self._proc = proc_root
 
     def disk(self, path: Path) -> Disk | None:
         """Of the file system that `path` is on, or would be on once made."""
@@ -79,23 +80,21 @@ class Host:
                 readings.append(millidegrees / 1000)
         return max(readings, default=None)
 
+    def holders(self, port: str | Path) -> list[Holder]:
+        """Processes that have `port` (a device or a link to it) open, as far as this user may see: root sees all, the
+        daemon under its unit only itself. An empty list therefore does not mean that nobody has."""
+        device = os.path.realpath(port)
+        found = []
+        for process in sorted(self._proc.glob("[0-9]*"), key=lambda folder: int(folder.name)):
+            if _has_open(process, device):
+                found.append(Holder(int(process.name), _read_text(process / "comm") or "?"))
+            if len(found) == HOLDERS:
+                break
+        return found
 
-def holders(port: str | Path, *, proc_root: Path = Path("/proc")) -> list[Holder]:
-    """Processes that have `port` (a device or a link to it) open, as far as this user may see: root sees all, the
-    daemon under its unit only itself. An empty list therefore does not mean that nobody has."""
-    device = os.path.realpath(port)
-    found = []
-    for process in sorted(proc_root.glob("[0-9]*"), key=lambda folder: int(folder.name)):
-        if _has_open(process, device):
-            found.append(Holder(int(process.name), _read_text(process / "comm") or "?"))
-        if len(found) == HOLDERS:
-            break
-    return found
-
-
-def port_holder(port: str | Path, *, proc_root: Path = Path("/proc")) -> str | None:
-    """Who holds a port, for an error message: `process 412 (picocom)`; None when nobody is seen to."""
-    return " and ".join(map(str, holders(port, proc_root=proc_root))) or None
+    def who_holds(self, port: str | Path) -> str:
+        """For the end of an error message: `process 412 (picocom)`, or how to find out."""
+        return " and ".join(map(str, self.holders(port))) or "`motekeep check` as root can see which"
 
 
 def _has_open(process: Path, device: str) -> bool:

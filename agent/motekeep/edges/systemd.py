@@ -20,6 +20,9 @@ SEND_TIMEOUT_S = 0.5
 STATUS_CHARACTERS = 500
 # A password or a PEM key; more is a mistaken path, and the device should not read it all into memory.
 CREDENTIAL_BYTES = 64 * 1024
+# As the unit has them; a test holds the two together.
+UNIT_CREDENTIALS = Path("/run/credentials/motekeep.service")
+LOADED_FROM = Path("/etc/motekeep")
 
 
 class ServiceManager:
@@ -102,6 +105,15 @@ class ServiceManager:
             log.info("systemd.notify_works_again")
         self._failing = False
         return True
+
+
+def secret_file(path: Path, etc: Path = LOADED_FROM) -> Path:
+    """Where to read a configured secret. Commands that people run stand outside of the unit: while it is stopped its
+    credential folder does not exist. They, run as root, then find the file that the unit would load it from."""
+    loaded_from = etc / path.name
+    if path.parent == UNIT_CREDENTIALS and not path.exists() and loaded_from.exists():
+        return loaded_from
+    return path
 
 
 def read_secret(path: Path) -> bytes | None:
