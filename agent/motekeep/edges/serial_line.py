@@ -68,7 +68,11 @@ def _open(port: str, baud: int) -> serial.SerialBase:
     local = "://" not in port
     try:
         line: serial.SerialBase = serial.serial_for_url(
-            port, baudrate=baud, timeout=1.0, write_timeout=2.0, exclusive=True if local else None
+            port,
+            baudrate=baud,
+            timeout=1.0,
+            write_timeout=2.0 if local else None,  # rfc2217:// has none
+            exclusive=True if local else None,
         )
         if local:
             # the advisory lock stops only those who ask for it; this stops everybody but root

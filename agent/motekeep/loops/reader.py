@@ -17,6 +17,7 @@ from motekeep.wire.frame import Dialect
 
 log = structlog.get_logger()
 
+STATUS_EVERY_S = 10.0  # a fan or laser bit is due within minutes; ten seconds cost one short exchange
 READ_TIMEOUT_S = 2.0  # how often an idle reader wakes: half a wake-up a second, and SIGTERM is met in time
 
 
@@ -85,6 +86,8 @@ class Reader:
                     self._intake.line(settings.sensor, LineState.AWAKE, now)
                 case "poll":
                     line.write(settings.dialect.commands.read or b"")
+                case "status":
+                    line.write(settings.dialect.commands.status or b"")
             data = line.read(rhythm.patience(now.boot_s))
             if data:
                 self._intake.receive(settings.sensor, data, self._clock.now())
@@ -93,7 +96,8 @@ class Reader:
 class Rhythm:
     """When to sleep, wake and poll. Rule: awake for the first `awake` seconds of every `every`; polls only awake.
 
-    `duty` is (every_s, awake_s) or None; a polled dialect is read each `period_s`.
+    `duty` is (every_s, awake_s) or None; a polled dialect is read each `period_s`, and asked for its status word, where
+    it has one, every STATUS_EVERY_S.
     """
 
     def __init__(self, dialect: Dialect, period_s: float, duty: tuple[float, float] | None, start_s: float) -> None:
@@ -102,6 +106,7 @@ class Rhythm:
         self._asleep = False
         self._period = period_s if dialect.polled else None
         self._next_poll = start_s
+        self._next_status = start_s if dialect.commands.status else float("inf")
 
     def next(self, boot_s: float) -> str | None:
         if self._duty is not None:
@@ -113,6 +118,9 @@ class Rhythm:
         if self._period is not None and not self._asleep and boot_s >= self._next_poll:
             self._next_poll = max(self._next_poll + self._period, boot_s)
             return "poll"
+        if boot_s >= self._next_status and not self._asleep:
+            self._next_status = boot_s + STATUS_EVERY_S
+            return "status"
         return None
 
     def patience(self, boot_s: float) -> float:
