@@ -51,3 +51,11 @@ class ClimateError(MotekeepError):
 
 class CaptureError(MotekeepError):
     """A capture file has a line that is not of the capture format."""
+
+
+class DocumentError(MotekeepError):
+    """A calibration document cannot be used; `path` is the key that is at fault, `<text>` for the file as a whole."""
+
+    def __init__(self, path: str, why: str, mend: str) -> None:
+        self.path = path
+        super().__init__(f"calibration document, {path}", why, mend)
