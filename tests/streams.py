@@ -1,7 +1,7 @@
 """Frames, streams and a reference decoder for the tests of `wire`.
 
-The reference is written from the layouts alone and shares nothing with the decoders: at each place from the left it asks
-whether a whole good unit stands there, and steps over it (its last byte may begin the next) or on by one byte.
+The reference is written from the layouts alone and shares nothing with the decoders: at each place from the left it
+asks whether a whole good unit stands there, and steps over it (its last byte may begin the next) or on by one byte.
 """
 
 from collections.abc import Iterator, Sequence
@@ -85,9 +85,11 @@ def reference(dialect: str, data: bytes) -> list[bytes]:
 
 
 def framed_at(data: bytes, at: int, lengths: tuple[int, ...] = (20, 28, 36)) -> tuple[int, bytes | None]:
+    if data[at : at + 2] != b"BM":
+        return 0, None
     length = int.from_bytes(data[at + 2 : at + 4], "big")
     end = at + 4 + length
-    if data[at : at + 2] != b"BM" or length not in (4, *lengths) or end > len(data):
+    if length not in (4, *lengths) or end > len(data):
         return 0, None
     if sum(data[at : end - 2]) % 65536 != int.from_bytes(data[end - 2 : end], "big"):
         return 0, None
@@ -99,8 +101,10 @@ def climate_at(data: bytes, at: int) -> tuple[int, bytes | None]:
 
 
 def aa_at(data: bytes, at: int) -> tuple[int, bytes | None]:
+    if data[at] != 0xAA:
+        return 0, None
     unit = data[at : at + 10]
-    if len(unit) < 10 or unit[0] != 0xAA or unit[9] != 0xAB or sum(unit[2:8]) % 256 != unit[8]:
+    if len(unit) < 10 or unit[9] != 0xAB or sum(unit[2:8]) % 256 != unit[8]:
         return 0, None
     if unit[1] == 0xC0:
         return 10, unit[2:8]
@@ -108,8 +112,10 @@ def aa_at(data: bytes, at: int) -> tuple[int, bytes | None]:
 
 
 def stuffed_at(data: bytes, at: int) -> tuple[int, bytes | None]:
+    if data[at] != 0x7E:
+        return 0, None
     end = data.find(b"\x7e", at + 1)
-    if data[at] != 0x7E or end < 0 or end + 1 - at > 92:
+    if end < 0 or end + 1 - at > 92:
         return 0, None
     body, escaping = bytearray(), False
     for byte in data[at + 1 : end]:

@@ -5,10 +5,10 @@ from random import Random
 import pytest
 from hypothesis import assume, given, settings
 from hypothesis import strategies as st
-from streams import LAYOUTS, damage_of, fed, frames_of, random_frame, reasons_of, reference, split
 
 from motekeep.wire.dialects import DIALECTS
 from motekeep.wire.frame import Damage, Dialect, Frame
+from streams import LAYOUTS, damage_of, fed, frames_of, random_frame, reasons_of, reference, split
 
 layouts = pytest.mark.parametrize("name", LAYOUTS)
 randoms = st.builds(Random, st.integers(0, 2**32 - 1))

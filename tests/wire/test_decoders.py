@@ -6,10 +6,10 @@ from random import Random
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from streams import LAYOUTS, damage_of, fed, frames_of, random_frame, reasons_of, reference, split
 
 from motekeep.wire.dialects import DIALECTS
 from motekeep.wire.frame import Damage, Frame
+from streams import LAYOUTS, damage_of, fed, frames_of, random_frame, reasons_of, reference, split
 
 layouts = pytest.mark.parametrize("name", LAYOUTS)
 dialects = pytest.mark.parametrize("name", DIALECTS)

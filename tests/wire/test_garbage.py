@@ -77,7 +77,9 @@ def test_good_frames_are_frames() -> None:
 
 def test_an_unknown_protocol_comes_again_and_again() -> None:
     random = Random(5)
-    lines = [b"T=%d.%d RH=%d\r\n" % (random.randrange(30), random.randrange(9), random.randrange(99)) for _ in range(40)]
+    lines = [
+        b"T=%d.%d RH=%d\r\n" % (random.randrange(30), random.randrange(9), random.randrange(99)) for _ in range(40)
+    ]
     found = explain(b"".join(lines), "bm", 9600)
     assert found.kind is Kind.OTHER_DIALECT
     assert found.confidence <= 0.5
@@ -128,7 +130,13 @@ def test_no_input_raises(seed: int) -> None:
 
 def test_headers_are_what_every_frame_begins_with() -> None:
     known = {(name, header.hex()) for name, header in headers()}
-    assert known == {("bm", "424d0014"), ("bm", "424d001c"), ("bm", "424d0024"), ("bm-climate", "424d001c"), ("aa", "aac0")}
+    assert known == {
+        ("bm", "424d0014"),
+        ("bm", "424d001c"),
+        ("bm", "424d0024"),
+        ("bm-climate", "424d001c"),
+        ("aa", "aac0"),
+    }
 
 
 def test_interior_runs_leave_out_what_may_go_on_outside_the_byte() -> None:

@@ -89,7 +89,9 @@ def test_the_long_form_is_bm_beyond_doubt() -> None:
 @pytest.mark.parametrize("name", ["aa", "stuffed"])
 def test_the_other_framings_are_found_by_their_frames_alone(name: str) -> None:
     layout = DIALECTS[name].layouts[0]
-    frame = Frame(layout, (3.0, 5.0, 6.0, 8.0)[: len(layout.mass)], (900.0, 300.0, 80.0, 20.0, 10.0)[: len(layout.sizes_um)], b"")
+    frame = Frame(
+        layout, (3.0, 5.0, 6.0, 8.0)[: len(layout.mass)], (900.0, 300.0, 80.0, 20.0, 10.0)[: len(layout.sizes_um)], b""
+    )
     (only,) = guessed(name, lambda _: frame, 10)
     assert only.dialect == name
     assert only.confidence > 0.95

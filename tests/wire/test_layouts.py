@@ -5,11 +5,11 @@ from random import Random
 from struct import pack
 
 import pytest
-from streams import LAYOUTS, frames_of, random_frame
 
 from motekeep.wire import aa, bm, bm_climate, stuffed
 from motekeep.wire.dialects import DIALECTS
 from motekeep.wire.frame import Damage, Frame
+from streams import LAYOUTS, frames_of, random_frame
 
 
 def only_frame(dialect: str, data: bytes) -> Frame:
@@ -92,7 +92,7 @@ def ten_floats(*values: float) -> bytes:
 VALUES = ten_floats(1.5, 2.5, 3.5, 4.5, 10.0, 15.0, 17.0, 17.5, 18.0, 0.6)
 
 
-def test_stuffed_numbers_that_accumulate_upwards_become_counts_above_a_size_per_dL() -> None:
+def test_stuffed_numbers_that_accumulate_upwards_become_counts_above_a_size_in_a_decilitre() -> None:
     frame = only_frame("stuffed", stuffed_unit(3, 0, VALUES))
     assert frame.layout is stuffed.STUFFED
     assert frame.mass == (1.5, 2.5, 3.5, 4.5)
