@@ -4,7 +4,7 @@ from math import erfc as exact_erfc
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from motesim.aerosol import CATALOGUE, Mode, above, erfc, mass_below
@@ -14,6 +14,7 @@ from motesim.settling import settling_m_s, slip
 EDGES_UM = (0.3, 0.5, 1.0, 2.5, 5.0, 10.0)
 
 
+@settings(deadline=None)
 @given(st.floats(-8.0, 25.0))
 def test_erfc_keeps_its_relative_error_far_out_in_the_tail(x: float) -> None:
     assert float(erfc(np.array([x]))[0]) == pytest.approx(exact_erfc(x), rel=1.3e-7)
@@ -59,7 +60,9 @@ def test_an_aerodynamic_cut_admits_smaller_geometric_particles_of_dense_matter()
     assert dust.mass_below(1e6) == pytest.approx(2.6 * dust.volume, rel=1e-6)
 
 
-@pytest.mark.parametrize(("kappa", "rh", "growth"), [(0.61, 90.0, 1.86529), (1.28, 90.0, 2.32203), (0.3, 80.0, 1.30059)])
+@pytest.mark.parametrize(
+    ("kappa", "rh", "growth"), [(0.61, 90.0, 1.86529), (1.28, 90.0, 2.32203), (0.3, 80.0, 1.30059)]
+)
 def test_growth_by_humidity(kappa: float, rh: float, growth: float) -> None:
     # Petters and Kreidenweis 2007, without the Kelvin term
     assert float(growth_factor(kappa, np.array([rh]))[0]) == pytest.approx(growth, abs=1e-5)

@@ -1,5 +1,7 @@
 """Printed numbers: scaling, averaging, tops, masses."""
 
+from itertools import pairwise
+
 import numpy as np
 import pytest
 
@@ -85,7 +87,7 @@ def test_the_ambient_triple_is_the_factory_one_up_to_its_bend() -> None:
 
 def test_volume_mean_diameters_of_the_channels() -> None:
     # computed for a number even in ln D: ((b^3 - a^3)/(3 ln(b/a)))^(1/3)
-    means = [volume_mean_um(a, b) for a, b in zip(EDGES_UM, EDGES_UM[1:], strict=False)]
+    means = [volume_mean_um(a, b) for a, b in pairwise(EDGES_UM)]
     assert means == pytest.approx([0.3999, 0.7494, 1.7457, 3.7468, 7.4935], abs=1e-4)
 
 

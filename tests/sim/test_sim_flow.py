@@ -2,7 +2,7 @@
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from motesim.flow import NOMINAL_CM3_S, Cell, Fan
@@ -68,6 +68,7 @@ def test_falling_particles_pass_the_beam_without_a_flow() -> None:
     assert passing[0] < 100.0 * 1e-4
 
 
+@settings(max_examples=40, deadline=None)
 @given(st.integers(1, 400), st.floats(1e-4, 400.0), st.integers(0, 2**32 - 1))
 def test_relaxation_in_blocks_equals_the_step_by_step_recursion(n: int, largest: float, seed: int) -> None:
     rng = np.random.default_rng(seed)

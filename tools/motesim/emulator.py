@@ -15,7 +15,7 @@ from motesim.faults import FaultSet
 from motesim.firmware import Columns, Firmware
 from motesim.flow import NOMINAL_CM3_S, Cell, Fan
 from motesim.humidity import warmed
-from motesim.optics import coincident, shifted_threshold_um, visible
+from motesim.optics import coincident, shifted_thresholds_um, visible
 from motesim.relaxation import Course, generators
 from motesim.unit import Unit, draw, drawn_with
 from motesim.weather import STEP_S
@@ -154,7 +154,8 @@ class Emulator:
         warming = np.exp(-since_wake_s / unit.warm_s)
         rates *= (1.0 + unit.warm_gain * warming)[:, None]
         coarse = np.array(self.face.edges_um) >= _COARSE_CHANNEL_UM
-        rates += np.outer(np.exp(-since_wake_s / _BURST_S) * unit.burst * unit.view * step, coarse)
+        stirred = np.exp(-since_wake_s / _BURST_S) * unit.burst * unit.view + faults.level("insect", times)
+        rates += np.outer(stirred * step, coarse)
 
         leak = faults.level("light-leak", times) * np.interp(times, air.times, air.daylight)
         floor = unit.floor + faults.level("floor-raised", times) + leak
@@ -234,8 +235,7 @@ class Emulator:
 
     def thresholds_um(self, gain: float = 1.0) -> tuple[float, ...]:
         """Latex diameters that this unit's thresholds sit at when its optics give `gain` of their first signal."""
-        total = np.array([self.unit.gain * gain])
-        return tuple(float(shifted_threshold_um(edge, total)[0]) for edge in self._edges)
+        return tuple(shifted_thresholds_um(self._edges, np.array([self.unit.gain * gain]))[:, 0].tolist())
 
 
 def _at(times: Floats, grid: Floats, values: Floats) -> Floats:

@@ -83,7 +83,7 @@ def _fog(event: Event, times: Floats, effect: Effect) -> None:
     shape = _pulse(event, times, 0.5 * HOUR_S, 0.4 * HOUR_S)
     effect.add(FOG, event.strength * shape**2 * _ripple(event, times, 240.0, 0.3))
     effect.moisten(99.8, np.minimum(1.3 * shape, 1.0))
-    effect.fine *= 1.0 - 0.15 * shape  # part of the haze becomes droplet nuclei
+    effect.fine *= 1.0 - 0.05 * shape  # part of the haze becomes droplet nuclei
 
 
 def _rain(event: Event, times: Floats, effect: Effect) -> None:

@@ -29,6 +29,7 @@ KINDS: dict[str, FaultKind] = {
     "optics-fouled": FaultKind("share of the optical signal lost", 0.25, 0.99),
     "floor-raised": FaultKind("false counts per 0.1 L in the smallest channel", 900.0),
     "light-leak": FaultKind("false counts per 0.1 L in the smallest channel under a clear high sun", 1500.0),
+    "insect": FaultKind("large pulses a second while it sits in the inlet", 3.0),
     "output-frozen": FaultKind("no meaning: the last frame repeats", 1.0),
     "silent": FaultKind("no meaning: no bytes come", 1.0),
     "port-gone": FaultKind("no meaning: the port is away", 1.0),

@@ -19,8 +19,8 @@ _FACTORY_DENSITY = 1.65
 # What no channel sees (most of the mass below the first threshold) is put into the smallest channel as a factor;
 # large channels are trusted less and less. Both are ours: they give a fine slope above 1 and a slope against dust
 # below 0.1, as published field work found (Kaur and Kelly 2023).
-_UNSEEN_FACTOR = 3.0
-_TRUSTED_UM = 1.5
+_UNSEEN_FACTOR = 3.4
+_TRUSTED_UM = 1.0
 BEND_UG_M3 = 30.0
 _BENT_SLOPE = 0.65  # of the ambient triple above the bend; ours
 

@@ -26,10 +26,10 @@ def _log_signal(log_diameter: Floats) -> Floats:
     return np.where(log_diameter < _DIAMETERS[0], below, np.where(log_diameter > _DIAMETERS[-1], above, inside))
 
 
-def shifted_threshold_um(edge_um: float, gain: Floats) -> Floats:
-    """Diameter of the latex particle that just reaches the threshold set at `edge_um` when the signal is `gain` times
-    what it was at calibration."""
-    needed = float(_log_signal(np.array([log(edge_um)]))[0]) - np.log(gain)
+def shifted_thresholds_um(edges_um: tuple[float, ...], gain: Floats) -> Floats:
+    """Diameters of the latex particles that just reach the thresholds set at `edges_um` when the signal is `gain`
+    times what it was at calibration, (edges, gains)."""
+    needed = _log_signal(np.log(edges_um))[:, None] - np.log(gain)
     inside = np.interp(needed, _SIGNALS, _DIAMETERS)
     below = _DIAMETERS[0] + (needed - _SIGNALS[0]) / _LOW_EXPONENT
     above = _DIAMETERS[-1] + (needed - _SIGNALS[-1]) / _HIGH_EXPONENT
@@ -43,9 +43,9 @@ def visible(air: Air, rh_cell: Floats, edges_um: tuple[float, ...], gain: Floats
     lognormally by `resolution` (a factor of size; ISO 21501-4 asks for 15 % or better), which makes the counting
     efficiency 50 % at each threshold and widens each population: both lognormal, so the widths add in quadrature.
     """
-    thresholds = [np.log(shifted_threshold_um(edge, gain)) for edge in edges_um]
-    above = np.zeros((len(air.times), len(edges_um) + 1))
-    smallest = min(float(t.min()) for t in thresholds)
+    thresholds = np.log(shifted_thresholds_um(edges_um, gain))
+    above = np.zeros((len(edges_um) + 1, len(air.times)))
+    smallest = float(thresholds.min())
     for mode, factor in zip(air.modes, air.factors, strict=True):
         if not factor.any():
             continue
@@ -54,9 +54,8 @@ def visible(air: Air, rh_cell: Floats, edges_um: tuple[float, ...], gain: Floats
         width = np.sqrt(2.0) * np.hypot(log(mode.sigma), log(resolution))
         if (smallest - float(centre.max())) / width > 4.7:  # erfc there is 3e-11: not one pulse in a month
             continue
-        for channel, threshold in enumerate(thresholds):
-            above[:, channel] += factor * (mode.number / 2.0) * erfc((threshold - centre) / width)
-    return above[:, :-1] - above[:, 1:]
+        above[:-1] += factor * (mode.number / 2.0) * erfc((thresholds - centre) / width)
+    return (above[:-1] - above[1:]).T
 
 
 def coincident(rates: Floats, seen_per_cm3: Floats, sensing_volume_cm3: float) -> Floats:

@@ -30,7 +30,7 @@ class Unit:
     fan_down: float = 1.2
     view: float = 0.75
     averaging: int = 3
-    sensing_volume: float = 2.0e-4
+    sensing_volume: float = 1.0e-4
     floor: float = 6.0
     mass_gain: float = 1.0
     warmth: float = 2.0
@@ -63,7 +63,7 @@ def draw(seed: int) -> Unit:
         fan_down=1.2 * spread(0.25),
         view=float(rng.uniform(0.5, 1.0)),
         averaging=int(rng.choice([1, 2, 3, 5, 10], p=[0.15, 0.15, 0.35, 0.2, 0.15])),
-        sensing_volume=2.0e-4 * spread(0.3),
+        sensing_volume=1.0e-4 * spread(0.3),
         floor=6.0 * spread(0.7),
         mass_gain=spread(0.10),
         warmth=2.0 * spread(0.25),
