@@ -4,6 +4,7 @@ Owns which edge meets which loop. Nothing here decides anything about data.
 """
 
 import logging
+import os
 import signal
 import sys
 from collections.abc import Callable
@@ -15,25 +16,41 @@ import structlog
 
 from motekeep import __version__
 from motekeep.config import Config, FileClimate, FixedClimate, FrameClimate, Sensor, TopicClimate, load
-from motekeep.edges.broker import BrokerSettings, MqttBroker, Tls
+from motekeep.edges.broker import MqttBroker
+from motekeep.edges.climate import SysfsClimate
 from motekeep.edges.clock import SystemClock
 from motekeep.edges.host import Host
-from motekeep.edges.ports import Clock, Line
+from motekeep.edges.journal import Journal, JournalSettings
+from motekeep.edges.login import BrokerSettings, Tls
+from motekeep.edges.ports import Clock, JournalWriter, Line
 from motekeep.edges.serial_line import open_line
 from motekeep.edges.systemd import ServiceManager
 from motekeep.errors import ConfigError
+from motekeep.instant import Instant
 from motekeep.loops.backoff import Backoff
+from motekeep.loops.climate import ClimateFeed
+from motekeep.loops.facts import Facts
+from motekeep.loops.housekeeping import Housekeeping
 from motekeep.loops.intake import Intake
+from motekeep.loops.late_journal import LateJournal
 from motekeep.loops.publisher import Publisher, PublisherSettings
 from motekeep.loops.reader import Reader, ReaderSettings
 from motekeep.loops.recorder import Recorder, RecorderSettings
+from motekeep.loops.rows import RowSettings
 from motekeep.loops.supervisor import Hand, Supervisor
+from motekeep.measure.interval import Climate
 from motekeep.message.compose import Place
+from motekeep.message.documents import health_offline
+from motekeep.message.health import Life
 from motekeep.message.topics import Topics
 from motekeep.pipeline import Pipeline, SensorSetup
 from motekeep.wire.dialects import DIALECTS
 
 log = structlog.get_logger()
+
+PRUNE_EVERY_S = 3600.0
+CONFIG_LOOK_S = 10.0
+WILL_DELAY_S = 10  # forgives a link that is back at once; from afar ten seconds more are nothing
 
 
 def sensor_setups(config: Config) -> list[SensorSetup]:
@@ -69,6 +86,7 @@ class Daemon:
         topics = Topics(config.broker.root, config.site, config.gateway)
         names = [sensor.name for sensor in config.sensor]
         self._clock = clock
+        self._alive = alive
         self._intake = intake = Intake(Pipeline(place, config.interval, sensor_setups(config), now))
         self._journal = LateJournal(str(config.store.path))
         self._publisher = Publisher(
@@ -76,14 +94,13 @@ class Daemon:
             topics,
             names,
             journal=self._journal,
-            broker=MqttBroker(_broker_settings(config, topics, place, now), clock),
+            broker=MqttBroker(_broker_settings(config, topics, now), clock),
             clock=clock,
             stop=stop,
-            farewell=lambda at: health_offline(place, at).json_text(),
-            climates=_climate_topics(config, intake, clock),
+            farewell=lambda at: health_offline(config.site, config.gateway, at.boot_id).json_text(),
         )
         self._recorder = Recorder(
-            RecorderSettings(place, topics, config.health.every, Life(now.boot_s, __version__)),
+            RecorderSettings(place, topics, config.health.every, Life(0, now.boot_s, __version__)),
             intake,
             lambda: self._open_journal(config, topics),
             self._publisher,
@@ -112,7 +129,9 @@ class Daemon:
         self._publisher.wake()
 
     def _open_journal(self, config: Config, topics: Topics) -> JournalWriter:
-        journal = Journal.open(_journal_settings(config), topics, self._clock)
+        store = config.store
+        settings = JournalSettings(store.path, topics, store.keep_days, store.max_bytes, store.clock_wait)
+        journal = Journal(settings, self._clock, self._alive)
         self._journal.attach(journal.reader())
         return journal
 
@@ -132,7 +151,7 @@ def run(config_path: Path, log_style: str) -> int:
         return 0
     log.info("daemon.starting", version=__version__, site=config.site, gateway=config.gateway)
     clock = SystemClock(trust_rtc=config.store.trust_rtc)
-    daemon = Daemon(config, clock, stop, lambda: _feed(manager))
+    daemon = Daemon(config, clock, stop, lambda: _alive(manager))
     manager.ready(f"{len(config.sensor)} sensors, broker {config.broker.host}:{config.broker.port}")
     code = daemon.run()
     manager.stopping()
@@ -142,7 +161,7 @@ def run(config_path: Path, log_style: str) -> int:
     os._exit(code)
 
 
-def _feed(manager: ServiceManager) -> None:
+def _alive(manager: ServiceManager) -> None:
     manager.feed_watchdog()
 
 
@@ -167,22 +186,18 @@ def _wait_for_config(path: Path, stop: Event, manager: ServiceManager) -> Config
 def _publisher_settings(config: Config) -> PublisherSettings:
     broker = config.broker
     return PublisherSettings(
-        interval_s=config.interval,
-        receipt=broker.receipt,
-        window=broker.window,
-        late_rate=broker.late_rate,
-        clock_wait_s=config.store.clock_wait,
+        RowSettings(config.interval, broker.receipt, broker.late_rate, config.store.clock_wait), broker.window
     )
 
 
-def _broker_settings(config: Config, topics: Topics, place: Place, now: Instant) -> BrokerSettings:
+def _broker_settings(config: Config, topics: Topics, now: Instant) -> BrokerSettings:
     broker = config.broker
     return BrokerSettings(
         host=broker.host,
         port=broker.port,
         client_id=f"motekeep-{config.site}-{config.gateway}",
-        will=(topics.health, health_will(place.site, place.gateway, now.boot_id).json_text()),
-        filters=(topics.resend, topics.taken("+"), *_climate_filters(config)),
+        will=(topics.health, health_offline(config.site, config.gateway, now.boot_id).json_text()),
+        filters=(topics.resend, topics.taken("+")),
         username=broker.username,
         password_file=broker.password_file,
         tls=None if broker.tls is None else Tls(broker.tls.ca, broker.tls.cert, broker.tls.key),
@@ -214,10 +229,13 @@ def _climate_feed(config: Config, intake: Intake, now: Instant) -> ClimateFeed:
 
 
 def _set_up_logging(style: str) -> None:
-    """One JSON line an event on stderr for the service manager's log, or text for people. Through the standard library's
-    handlers, because structlog's own printer would raise into the caller on a full disk or a closed pipe."""
+    """One JSON line an event on stderr for the service manager's log, or text for people.
+
+    Through the standard library's handlers: structlog's own printer would raise into the caller on a full disk.
+    """
     logging.basicConfig(format="%(message)s", stream=sys.stderr, level=logging.INFO)
     logging.raiseExceptions = False
+    logging.getLogger("apscheduler").setLevel(logging.WARNING)
     renderer: Any = (  # Any: structlog's processors share no narrower type
         structlog.processors.JSONRenderer() if style == "json" else structlog.dev.ConsoleRenderer(colors=False)
     )

@@ -50,7 +50,9 @@ def main() -> None:
 
 @main.command()
 @with_config
-@click.option("--log", "log_style", type=click.Choice(["json", "text"]), default="json", help="Form of the log on stderr.")
+@click.option(
+    "--log", "log_style", type=click.Choice(["json", "text"]), default="json", help="Form of the log on stderr."
+)
 def run(config_path: Path, log_style: str) -> None:
     """The daemon: runs until it is told to stop."""
     from motekeep.app import run as run_daemon  # noqa: PLC0415 (see the top of this file)
@@ -136,9 +138,7 @@ def replay(config_path: Path, captures: tuple[Path, ...], out: Path) -> None:
 @click.option("--format", "form", type=click.Choice(["csv", "ndjson"]), default="csv", show_default=True)
 @click.option("--sensor", "sensors", multiple=True, help="Only this sensor; may repeat.")
 @click.option("--out", type=click.Path(path_type=Path, dir_okay=False), help="A file instead of standard output.")
-def export(
-    config_path: Path, from_: str, to: str, form: str, sensors: tuple[str, ...], out: Path | None
-) -> None:
+def export(config_path: Path, from_: str, to: str, form: str, sensors: tuple[str, ...], out: Path | None) -> None:
     """Readings of the journal, whatever became of their delivery."""
     from motekeep.commands.export import export as run_export  # noqa: PLC0415
     from motekeep.config import load  # noqa: PLC0415

@@ -175,7 +175,9 @@ class Config(Section):
             if sensor.twin is not None and (sensor.twin == sensor.name or sensor.twin not in names):
                 raise ValueError(f"twin {sensor.twin!r} of {sensor.name!r} is not another sensor of this file")
             if sensor.period * 2 > self.interval:
-                raise ValueError(f"sensor {sensor.name!r}: period {sensor.period:g} s leaves too few frames an interval")
+                raise ValueError(
+                    f"sensor {sensor.name!r}: period {sensor.period:g} s leaves too few frames an interval"
+                )
         return self
 
     def sensor_named(self, name: str) -> Sensor | None:
@@ -233,5 +235,6 @@ def _told(error: ValidationError, data: dict[str, Any], name: str) -> ConfigErro
 
 
 def _known_keys() -> list[str]:
-    sections = [Config, Sensor, Broker, Store, Calibration, Health, Tls, Duty, Limits, FixedClimate, TopicClimate]
+    sections: list[type[Section]] = [Config, Sensor, Broker, Store, Calibration, Health, Tls, Duty, Limits]
+    sections += [FixedClimate, FileClimate, TopicClimate]
     return sorted({field.alias or key for section in sections for key, field in section.model_fields.items()})

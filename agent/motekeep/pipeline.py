@@ -213,9 +213,7 @@ class Pipeline:
             sensor.health.interval(interval)
             if seconds < 1.0 or sensor.seq is None:
                 continue  # a sliver before a clock step holds no figure
-            reading = make_reading(
-                interval, sensor.setup.correction, sensor.health.flags_between(span.boot_s, end_s)
-            )
+            reading = make_reading(interval, sensor.setup.correction, sensor.health.flags_between(span.boot_s, end_s))
             self._readings.append(reading_document(reading, self._place, sensor.seq))
             sensor.seq += 1
 

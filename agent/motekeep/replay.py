@@ -101,7 +101,9 @@ def _instant(t: float) -> Instant:
 
 def _records(stack: ExitStack, path: Path, progress: Callable[[int], None]) -> Iterator[Record]:
     try:
-        raw = stack.enter_context(gzip.open(path, "rt") if path.suffix == ".gz" else path.open(encoding="ascii"))
+        # SIM115: the stack closes it
+        opened = gzip.open(path, "rt") if path.suffix == ".gz" else path.open(encoding="ascii")  # noqa: SIM115
+        raw = stack.enter_context(opened)
     except OSError as error:
         raise CaptureError(f"opening {path}", str(error), "name a capture file") from error
     return _lines(raw, path.name, progress)
@@ -119,7 +121,9 @@ def _lines(lines: IO[str], name: str, progress: Callable[[int], None]) -> Iterat
             if record is None:
                 continue
             if record.t < last:
-                raise CaptureError(f"{name}, line {number}", "time runs backwards", "sort the capture by its first column")
+                raise CaptureError(
+                    f"{name}, line {number}", "time runs backwards", "sort the capture by its first column"
+                )
             last = record.t
             yield record
     except (UnicodeDecodeError, EOFError, gzip.BadGzipFile) as error:

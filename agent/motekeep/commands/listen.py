@@ -61,7 +61,8 @@ class _Ear:
         counts = "  ".join(f">{size_key(s)} {c:g}" for s, c in zip(frame.layout.sizes_um, frame.counts, strict=True))
         climate = "" if frame.rh_pct is None else f"  rh {frame.rh_pct:g} %  t {frame.temperature_c or 0:g} Cel"
         fault = f"  error bits {frame.error:#x}" if frame.error else ""
-        return f"{self.name:<12} {self.dialect.name:<11} {self.good:>6} {self.bad:>4}  {mass} ug/m3  {counts} /dL{climate}{fault}"
+        head = f"{self.name:<12} {self.dialect.name:<11} {self.good:>6} {self.bad:>4}"
+        return f"{head}  {mass} ug/m3  {counts} /dL{climate}{fault}"
 
 
 def listen(config_path: Path, port: str | None, dialect: str | None, seconds: float | None) -> None:
@@ -127,4 +128,6 @@ def _guessed(port: str) -> Dialect:
             click.echo(f"at {baud} baud it looks like {best.dialect} ({best.confidence:.0%} sure: {best.reason})")
             return DIALECTS[best.dialect]
         click.echo(f"at {baud} baud: {f'{len(heard)} bytes, no frame of any dialect' if heard else 'silence'}")
-    raise ConfigError("guessing the dialect", "nothing that is understood came", "check wiring and supply, or name --dialect")
+    raise ConfigError(
+        "guessing the dialect", "nothing that is understood came", "check wiring and supply, or name --dialect"
+    )

@@ -24,5 +24,3 @@ def bytes_bar(label: str, files: list[Path]) -> Iterator[Callable[[int], None]]:
 def _text_size(file: Path) -> int:
     size = file.stat().st_size
     return size * GZIP_RATIO if file.suffix == ".gz" else size
-
-

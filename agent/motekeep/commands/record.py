@@ -55,7 +55,7 @@ def record(config: Config, seconds: float, out: Path) -> bool:
 
 
 def _open(out: Path) -> IO[str]:
-    return cast(IO[str], gzip.open(out, "wt")) if out.suffix == ".gz" else out.open("w", encoding="ascii")
+    return cast("IO[str]", gzip.open(out, "wt")) if out.suffix == ".gz" else out.open("w", encoding="ascii")
 
 
 def _read(sensor: Sensor, bursts: "Queue[FrameRecord | PortError]", stop: Event) -> None:

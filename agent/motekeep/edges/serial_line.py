@@ -8,6 +8,7 @@ import fcntl
 import termios
 import time
 from pathlib import Path
+from typing import Any
 
 import serial
 
@@ -26,7 +27,7 @@ class SerialLine:
     def __init__(self, port: str, baud: int, burst_s: float) -> None:
         self._name = port
         self._burst_s = burst_s
-        self._serial = _open(port, baud)
+        self._serial: Any = _open(port, baud)  # Any: in_waiting is not in the base class that the stubs know
 
     def read(self, timeout_s: float) -> bytes:
         """All that came with the next burst, at most 4096 bytes; empty when none came in `timeout_s`."""

@@ -3,12 +3,12 @@
 Owns the order (durable before published), the one transaction an interval, and when a health document is due. It has
 no thread of its own: the supervisor turns it, because the journal's writing connection belongs to the main thread.
 
-Without a journal at the start (no disk) it keeps trying to open one. Until then health is judged and told, but no reading
-is made: without the journal nobody knows which sequence numbers were used.
+Without a journal at the start (no disk) it keeps trying to open one. Until then health is judged and told, but no
+reading is made: without the journal nobody knows which sequence numbers were used.
 """
 
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from threading import Event
 from typing import Protocol
 
@@ -45,6 +45,8 @@ class Outlet(Protocol):
 
 @dataclass(frozen=True, slots=True)
 class RecorderSettings:
+    """`life` gets its number from the journal, once that is open."""
+
     place: Place
     topics: Topics
     health_every_s: float
@@ -52,7 +54,10 @@ class RecorderSettings:
 
 
 class Recorder:
-    """`turn` once a second; at the end `finish`, then `close` when nobody marks rows any more. `opener` gives the journal, or raises StoreError."""
+    """`turn` once a second; at the end `finish`, then `close` when nobody marks rows any more.
+
+    `opener` gives the journal, or raises StoreError.
+    """
 
     def __init__(
         self,
@@ -63,6 +68,7 @@ class Recorder:
         facts: Callable[[StoreState, Instant], tuple[GatewayFacts, LinkHealth]],
     ) -> None:
         self._settings = settings
+        self._life = settings.life
         self._intake = intake
         self._opener = opener
         self._journal: JournalWriter | None = None
@@ -105,6 +111,7 @@ class Recorder:
             return
         self._trouble.recovered()
         self._journal = journal
+        self._life = replace(self._life, number=journal.life)
         self._intake.resume(journal.next_seq, journal.kept, at)
         self._outlet.wake()
 
@@ -139,7 +146,7 @@ class Recorder:
             self._journal.flush(at)
 
     def _kept(self, harvest: Harvest) -> dict[str, str]:
-        """What the next life needs, and the health document for `motekeep status`: free in a transaction that is due."""
+        """What the next life needs, and the health document for `motekeep status`: free in a transaction due anyway."""
         return {**harvest.keep, HEALTH: self._health} if self._health else dict(harvest.keep)
 
     def _notices(self, harvest: Harvest) -> list[Notice]:
@@ -160,16 +167,16 @@ class Recorder:
             settings.place,
             at,
             2 * settings.health_every_s + GRACE_S,
-            settings.life,
-            findings,
-            StoreHealth(
+            life=self._life,
+            findings=findings,
+            store=StoreHealth(
                 waiting=store.waiting,
                 oldest_waiting=oldest,
                 bytes=store.bytes,
                 disk_free=store.disk_free,
                 lost=dict(store.lost),
             ),
-            self._link,
+            link=self._link,
         )
         self._health = document.json_text()
         self._outlet.post(settings.topics.health, self._health)

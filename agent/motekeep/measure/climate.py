@@ -34,12 +34,8 @@ def from_message(payload: bytes, source: str) -> Climate:
     if not isinstance(document, dict):
         raise ValueError("not a JSON object")
     humid, warm = document.get("rh"), document.get("t")
-    if not _number(humid):
+    if not isinstance(humid, int | float) or isinstance(humid, bool):
         raise ValueError('no number under "rh"')
-    if warm is not None and not _number(warm):
+    if warm is not None and (not isinstance(warm, int | float) or isinstance(warm, bool)):
         raise ValueError('"t" is not a number')
     return plausible(float(humid), None if warm is None else float(warm), source)
-
-
-def _number(value: object) -> bool:
-    return isinstance(value, int | float) and not isinstance(value, bool)

@@ -47,9 +47,7 @@ def reading_document(reading: Reading, place: Place, seq: int) -> ReadingDocumen
         "boot_s": round(start.boot_s, 1),
         "unit": "ug/m3",
         "k": 1,
-        "frames": FramesDocument(
-            good=interval.frames.good, bad=interval.frames.bad, missing=interval.frames.missing
-        ),
+        "frames": FramesDocument(good=interval.frames.good, bad=interval.frames.bad, missing=interval.frames.missing),
         "flag": reading.flag,
         "reasons": list(reading.reasons),
     }
@@ -67,9 +65,7 @@ def reading_document(reading: Reading, place: Place, seq: int) -> ReadingDocumen
             t=None if climate.temperature_c is None else round(climate.temperature_c, 1),
         )
     if reading.calibration is not None:
-        document["calibration"] = ProvenanceDocument(
-            issue=reading.calibration.issue, digest=reading.calibration.digest
-        )
+        document["calibration"] = ProvenanceDocument(issue=reading.calibration.issue, digest=reading.calibration.digest)
     return ReadingDocument.model_validate(document)
 
 

@@ -26,6 +26,7 @@ def health_document(  # noqa: PLR0913 (the parts of one document; a class for th
     place: Place,
     at: Instant,
     next_by_s: float,
+    *,
     life: Life,
     findings: Mapping[str | None, Sequence[Finding]],
     store: StoreHealth,
