@@ -107,7 +107,10 @@ class StoreState:
 class JournalWriter(Protocol):
     """The writing side; bound to the thread that opened it."""
 
-    life: int
+    @property
+    def life(self) -> int:
+        """How many times a daemon has started with this journal."""
+        ...
 
     def next_seq(self, sensor: str) -> int: ...
 

@@ -1,0 +1,58 @@
+"""A file that only takes up room, to be given back when the disk is full.
+
+On a full disk SQLite can neither insert nor delete; a few megabytes given back at that moment keep the journal going
+for days. Owns the file; does not decide when.
+"""
+
+import os
+from pathlib import Path
+
+# Restored only when the disk has this many times its size: else it would take the room it has just given.
+PLENTY = 4
+
+
+class Ballast:
+    """`bytes_` of really allocated blocks at `path`; a size of 0 means none."""
+
+    def __init__(self, path: Path, bytes_: int) -> None:
+        self._path = path
+        self._bytes = bytes_
+
+    @property
+    def present(self) -> bool:
+        return self._path.exists()
+
+    def give_back(self) -> bool:
+        """Whether there was something to give. Raises nothing: without it the disk is as full as before."""
+        try:
+            self._path.unlink()
+        except OSError:
+            return False
+        return True
+
+    def restore(self, free: int | None) -> bool:
+        """Lay it down again when the disk has plenty (`free` bytes); whether it is there now."""
+        if self.present:
+            return True
+        if not self._bytes or free is None or free < PLENTY * self._bytes:
+            return False
+        try:
+            descriptor = os.open(self._path, os.O_WRONLY | os.O_CREAT | os.O_CLOEXEC, 0o640)
+            try:
+                # allocates blocks, where truncate would only promise them
+                os.posix_fallocate(descriptor, 0, self._bytes)
+            finally:
+                os.close(descriptor)
+        except OSError:
+            self.give_back()
+            return False
+        return True
+
+
+def free_bytes(folder: Path) -> int | None:
+    """Bytes that this user may still write on the file system of `folder`; None when that cannot be told."""
+    try:
+        state = os.statvfs(folder)
+    except OSError:
+        return None
+    return state.f_bavail * state.f_frsize
