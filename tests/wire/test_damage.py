@@ -192,3 +192,10 @@ def test_the_answer_to_a_command_is_neither_data_nor_damage(name: str, answer: b
     assert [dialect.encode(frame) for frame in frames_of(events)] == units[:2]
     assert damage_of(events) == []
     assert decoder.tally.dropped == {}
+
+
+def test_a_data_frame_of_aa_hit_in_its_second_byte_does_not_pass_for_an_answer() -> None:
+    dialect, units = units_of("aa", Random(13))
+    hit = b"\xaa\xc5" + units[1][2:]
+    assert hit[2] not in (2, 5, 6, 7, 8)
+    assert reasons_of(dialect.decoder().feed(units[0] + hit + units[2])) == ["frame", "checksum", "frame"]
