@@ -30,6 +30,9 @@ class ValueDocument(Document):
     raw: float | None
     value: float | None
     u: float | None
+    u_random: float | None = Field(
+        default=None, description="the part of u that is independent from reading to reading; the rest is common to all"
+    )
 
 
 class ClimateDocument(Document):
@@ -79,6 +82,50 @@ class ReadingDocument(Document):
     climate: ClimateDocument | None = None
     frames: FramesDocument
     calibration: ProvenanceDocument | None = None
+    flag: Flag
+    reasons: list[str]
+
+
+Category = Literal[
+    "good", "moderate", "unhealthy for sensitive groups", "unhealthy", "very unhealthy", "hazardous"
+]
+
+
+class HourlyValueDocument(Document):
+    """One channel of an hour. `mean` is null when under three quarters of what was due were measured.
+
+    `nowcast`, `aqi` and `category` exist for PM2.5 and PM10 only: US EPA NowCast, and the index of it by the table of
+    2024. `mean_24h` is over this hour and the 23 before it and needs 18 of them; `hours_24h` says how many there are.
+    """
+
+    mean: float | None
+    u: float | None
+    completeness: float = Field(ge=0, le=1, description="share of the seconds due that were measured")
+    nowcast: float | None = None
+    aqi: int | None = None
+    category: Category | None = None
+    mean_24h: float | None
+    hours_24h: int
+
+
+class HourlyDocument(Document):
+    """The last full hour of a sensor, retained. Information only: not a regulatory figure and not an alarm.
+
+    Sent again for the same `start` when an amendment or a late reading changed it.
+    """
+
+    schema_: Literal["motekeep/hourly/1"] = Field(alias="schema")
+    site: str
+    gateway: str
+    sensor: str
+    start: Time
+    seconds: Literal[3600]
+    pm1: HourlyValueDocument | None = None
+    pm2_5: HourlyValueDocument | None = None
+    pm4: HourlyValueDocument | None = None
+    pm10: HourlyValueDocument | None = None
+    unit: Literal["ug/m3"]
+    k: Literal[1] = Field(description="coverage factor of u")
     flag: Flag
     reasons: list[str]
 
