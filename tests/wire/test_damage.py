@@ -41,7 +41,7 @@ def wrong_sum(unit: bytes) -> bytes:
 
 
 @layouts
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=40, deadline=None)
 @given(randoms, st.data())
 def test_one_changed_byte_costs_one_frame_and_is_one_event(name: str, random: Random, data: st.DataObject) -> None:
     dialect, units = units_of(name, random)
@@ -58,7 +58,7 @@ def test_one_changed_byte_costs_one_frame_and_is_one_event(name: str, random: Ra
 
 
 @layouts
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=40, deadline=None)
 @given(randoms, st.data())
 def test_any_bytes_of_one_frame_overwritten_cost_no_other_frame(name: str, random: Random, data: st.DataObject) -> None:
     dialect, units = units_of(name, random)
@@ -74,7 +74,7 @@ def test_any_bytes_of_one_frame_overwritten_cost_no_other_frame(name: str, rando
 
 
 @layouts
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=40, deadline=None)
 @given(randoms, st.data())
 def test_a_false_start_anywhere_costs_at_most_the_frame_it_stands_in(
     name: str, random: Random, data: st.DataObject
@@ -91,7 +91,7 @@ def test_a_false_start_anywhere_costs_at_most_the_frame_it_stands_in(
 
 
 @layouts
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=40, deadline=None)
 @given(randoms, st.data())
 def test_bytes_cut_out_of_one_frame_cost_no_other_frame(name: str, random: Random, data: st.DataObject) -> None:
     dialect, units = units_of(name, random)
@@ -106,7 +106,7 @@ def test_bytes_cut_out_of_one_frame_cost_no_other_frame(name: str, random: Rando
 
 
 @layouts
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=40, deadline=None)
 @given(randoms)
 def test_two_frames_hit_in_a_row_are_two_events(name: str, random: Random) -> None:
     dialect, units = units_of(name, random)

@@ -43,7 +43,7 @@ def test_byte_by_byte_gives_the_frame_with_its_last_byte(name: str) -> None:
 
 
 @layouts
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=40, deadline=None)
 @given(randoms)
 def test_decoding_what_was_encoded_gives_the_frame_under_any_split(name: str, random: Random) -> None:
     dialect, layout = LAYOUTS[name]
@@ -55,7 +55,7 @@ def test_decoding_what_was_encoded_gives_the_frame_under_any_split(name: str, ra
 
 
 @dialects
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=40, deadline=None)
 @given(randoms)
 def test_frames_of_all_lengths_are_told_apart_in_one_stream(name: str, random: Random) -> None:
     dialect = DIALECTS[name]
@@ -67,7 +67,7 @@ def test_frames_of_all_lengths_are_told_apart_in_one_stream(name: str, random: R
 
 
 @dialects
-@settings(max_examples=150, deadline=None)
+@settings(max_examples=80, deadline=None)
 @given(st.data(), st.lists(st.binary(max_size=300), max_size=6))
 def test_no_input_raises_or_makes_the_buffer_grow(name: str, data: st.DataObject, pieces: list[bytes]) -> None:
     dialect = DIALECTS[name]
@@ -85,7 +85,7 @@ def test_no_input_raises_or_makes_the_buffer_grow(name: str, data: st.DataObject
 
 
 @dialects
-@settings(max_examples=60, deadline=None)
+@settings(max_examples=40, deadline=None)
 @given(randoms)
 def test_what_comes_out_does_not_depend_on_the_split(name: str, random: Random) -> None:
     parts = [random.choice((random.randbytes(random.randrange(40)), b"\x42\x4d\x00", b"\xaa\xc0", b"\x7e\x00"))]

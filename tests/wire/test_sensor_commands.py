@@ -58,7 +58,7 @@ def test_what_is_sent_on_opening_wakes_the_sensor_and_makes_it_measure(dialect: 
 
 
 @pytest.mark.parametrize("dialect", DIALECTS)
-@settings(max_examples=50, deadline=None)
+@settings(max_examples=25, deadline=None)
 @given(st.integers(0, 2**32 - 1))
 def test_commands_are_found_among_rubbish_under_any_split(dialect: str, seed: int) -> None:
     random = Random(seed)
@@ -71,7 +71,7 @@ def test_commands_are_found_among_rubbish_under_any_split(dialect: str, seed: in
 
 
 @pytest.mark.parametrize("dialect", DIALECTS)
-@settings(max_examples=50, deadline=None)
+@settings(max_examples=25, deadline=None)
 @given(st.lists(st.binary(max_size=100), max_size=5))
 def test_no_input_raises_or_makes_the_listener_grow(dialect: str, pieces: list[bytes]) -> None:
     listener = CommandListener(DIALECTS[dialect].commands)
