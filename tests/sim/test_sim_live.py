@@ -233,7 +233,7 @@ def test_a_scenario_plays_on_ports_and_takes_orders(tmp_path: Path) -> None:
 
         emulation.order("fault north fan-stopped")
         wait_for(lambda: "done: fault north" in emulation.said.read_text())
-        after = frames(north, "bm", 30)[-15:]
+        after = frames(north, "bm", 60)[-15:]
         assert sum(f.counts[0] for f in after) < 0.3 * sum(f.counts[0] for f in before)
 
         emulation.order("unplug north")

@@ -17,11 +17,12 @@ DAY_S = 86_400.0
 YEAR_S = 365.25 * DAY_S
 STEP_S = 10.0  # of all courses; faster changes than tens of seconds are the business of the sensing cell
 
+# Half of the variance each: the hourly means then have the lag-1-hour 0.79 and the lag-24-hour autocorrelation 0.32 of
+# a real year of hourly PM2.5 (public record of Imperial County, distributed with pvlib 0.16.1).
 _SLOW_S = 2.5 * DAY_S
-# exp(-1 h/tau) = 0.79: lag-1-hour autocorrelation of a real year of hourly PM2.5 (public record of Imperial County,
-# distributed with pvlib 0.16.1)
-_HOURS_S = 4.24 * 3600.0
+_HOURS_S = 1.3 * 3600.0
 _GUSTS_S = 90.0
+_DEW_FROM = 80.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,7 +88,10 @@ class Weather:
         temperature = c.temperature + season + daily + 2.5 * x["warm"]
         # the vapour follows the slow part of the temperature only: nights grow humid, afternoons dry
         base = saturation_hpa(c.temperature + season + 2.0 * x["warm"]) * c.humidity / 100.0
-        rh = np.clip(100.0 * base * np.exp(0.12 * x["moist"]) / saturation_hpa(temperature), 4.0, 99.0)
+        rh = 100.0 * base * np.exp(0.12 * x["moist"]) / saturation_hpa(temperature)
+        # what would go beyond saturation falls out as dew; humidity nears 98 % and fog is an event of its own
+        dew = _DEW_FROM + (98.0 - _DEW_FROM) * -np.expm1(-(rh - _DEW_FROM) / (98.0 - _DEW_FROM))
+        rh = np.clip(np.where(rh > _DEW_FROM, dew, rh), 4.0, 98.0)
 
         peaks = np.exp(-0.5 * ((hour - 7.5) / 1.3) ** 2) + np.exp(-0.5 * ((hour - 18.5) / 1.8) ** 2)
         share = c.variability / np.sqrt(2.0)
