@@ -1,6 +1,7 @@
 """Whole sensors in emulated time: what faults and weather look like in the printed numbers."""
 
 from dataclasses import replace
+from functools import cache
 
 import numpy as np
 import pytest
@@ -37,6 +38,17 @@ def masses(plan: SitePlan) -> np.ndarray:
 
 def steady(seconds: int, rh: float = 40.0, faults: FaultSet | None = None, **unit: float) -> np.ndarray:
     """Counts of one sensor in air that does not change at all."""
+    if faults is None:
+        return plain(seconds, rh, tuple(unit.items()))
+    return emulated(seconds, rh, faults, unit)
+
+
+@cache
+def plain(seconds: int, rh: float, unit: tuple[tuple[str, float], ...]) -> np.ndarray:
+    return emulated(seconds, rh, FaultSet(), dict(unit))
+
+
+def emulated(seconds: int, rh: float, faults: FaultSet, unit: dict[str, float]) -> np.ndarray:
     emulator = Emulator(FACE, 5, 1.0, faults=faults, overrides={**PLAIN, **unit})
     air = still_air(STEADY, rh, 15.0, samples=seconds // 10 + 2)
     times = np.arange(seconds, dtype=np.float64)
@@ -181,6 +193,13 @@ def test_waking_stirs_up_large_particles_for_a_moment() -> None:
     since_wake = (block.printed.times - START) % 600.0
     large = block.printed.columns.counts[:, 4]
     assert large[since_wake < 3.0].mean() > 10.0 * max(large[since_wake > 30.0].mean(), 1.0)
+
+
+def test_an_insect_in_the_inlet_is_large_pulses_only() -> None:
+    seen = steady(40_000, faults=FaultSet((Fault("insect", -1.0, strength=1.0),))).mean(axis=0)
+    clean = steady(40_000).mean(axis=0)
+    assert seen[5] - clean[5] == pytest.approx(60.0, rel=0.05)  # one pulse a second at a scale of 60
+    assert (seen[0] - seen[2]) == pytest.approx(clean[0] - clean[2], rel=0.02)
 
 
 def test_a_frozen_output_repeats_the_frame_before() -> None:

@@ -18,6 +18,7 @@ from motesim.faults import Fault
 from motesim.live import LiveSensor
 from motesim.plan import SensorPlan
 from motesim.port import Port
+from motesim.run import Station
 
 SCENARIO = """
 site = "here"
@@ -155,6 +156,22 @@ def test_a_port_carries_bytes_both_ways_and_shows_an_unplug(tmp_path: Path) -> N
     port.plug()
     assert port.link.is_symlink()
     port.unplug()
+
+
+def test_a_port_that_goes_away_comes_back_with_a_sensor_at_power_on(tmp_path: Path) -> None:
+    fault = Fault("port-gone", 12.0, lasts_s=5.0)
+    bench = Bench("bm", fault)
+    station = Station(bench.sensor, Port(tmp_path / "north"), now=0.0)
+    station.port.plug()
+    ages, there = [], []
+    for second in range(1, 25):
+        station.tick(bench.air, float(second), float(second))
+        ages.append(bench.sensor.emulator.age)
+        there.append(station.port.link.is_symlink())
+    station.port.unplug()
+    assert there == [not 12 <= second < 17 for second in range(1, 25)]
+    assert ages[10] == 11
+    assert ages[-1] == 8
 
 
 class Emulation:

@@ -1,6 +1,18 @@
 """Scenarios: TOML files that say what a site is, what happens in its air and what goes wrong with its sensors.
 
 Owns the reading and refusing. Must not know physics. Every refusal is one line that names file, key and mend.
+
+    site, start, duration         and optional: about, seed, period (seconds between frames of every sensor)
+    [air]                         aerosol, pm2_5, coarse, kappa and the weather (`weather.Climate`)
+    [air.often]                   how many events of each kind happen in 30 days, at random by the seed
+    [[event]]                     kind (`events.KINDS`), at, lasts, strength
+    [[sensor]]                    name, dialect, length, seed, period, cold, duty = { every, awake },
+                                  probe = { every, rh_error, temperature_error }
+    [sensor.unit]                 parameters of the personality set by hand (`unit.Unit`)
+    [[sensor.fault]]              kind (`faults.KINDS`), at, lasts, ramp, strength
+    [[sensor.service]]            kind of service record, at
+
+Durations are seconds or texts such as "2d6h", "90m"; `at` counts from the start.
 """
 
 import re
