@@ -59,6 +59,7 @@ class Supervisor:
     def run(self, stopping: Callable[[], None]) -> int:
         """`stopping` stores what is under way: it runs as soon as the stop is seen, before the loops are waited for."""
         threads = [Thread(target=self._guard, args=(hand,), name=hand.name, daemon=True) for hand in self._hands]
+        self._turn(self._clock.now())  # the journal is open, where there is one, before anybody asks for it
         for thread in threads:
             thread.start()
         while not self._stop.is_set():
