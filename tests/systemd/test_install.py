@@ -30,6 +30,7 @@ case "$*" in
   *version_info*) echo "${VERSION:-3.11}" ;;
   *ensurepip*) [ -z "${NO_VENV:-}" ] ;;
   *realpath*) echo "${HOME_OF_PYTHON:-/usr/bin/python3.11}" ;;
+  *"import motekeep.app"*) [ -z "${NO_DAEMON:-}" ] || { echo Traceback; echo "ImportError: $NO_DAEMON"; exit 1; } ;;
   "-m venv "*)
     mkdir -p "$3/bin" && cp "$0" "$3/bin/python" && echo "command = $0 -m venv $3" > "$3/pyvenv.cfg" ;;
   "-m pip install "*)
@@ -217,6 +218,7 @@ class TestAgain:
         [
             ({"PIP": "echo 'ERROR: No matching distribution found for paho-mqtt'; false"}, "No matching distribution"),
             ({"RUNS": "ImportError: no module"}, "does not run: ImportError: no module"),
+            ({"NO_DAEMON": "no module paho"}, "does not run: ImportError: no module paho"),
         ],
     )
     def test_a_version_that_cannot_be_built_or_run_leaves_the_old_one_alone(
@@ -390,8 +392,8 @@ class TestRefusals:
 
 
 # A machine in a mount namespace: /etc and /opt of the host are seen, what is written goes to memory and is gone
-# afterwards. `systemctl` is a stand-in that remembers what it was told, and refuses to start a release that holds a
-# file `broken`.
+# afterwards. `systemctl` is a stand-in that remembers what it was told; it refuses to start a release that holds a file
+# `broken`, and one that holds `dying` does not stay up. Nobody sleeps.
 MACHINE = """\
 set -e
 mount -t tmpfs none "$MACHINE"
@@ -406,10 +408,13 @@ case "$*" in
   *is-active*chrony*) [ -e "$MACHINE/chrony" ] ;;
   *is-active*) [ -e "$MACHINE/active" ] ;;
   *is-enabled*) [ -e "$MACHINE/enabled" ] ;;
-  *restart*|*--now*) [ ! -e /opt/motekeep/broken ] && touch "$MACHINE/active" ;;
+  *restart*|*--now*)
+    rm -f "$MACHINE/active"
+    [ ! -e /opt/motekeep/broken ] || exit 1
+    [ -e /opt/motekeep/dying ] || touch "$MACHINE/active" ;;
 esac
 END
-printf '#!/bin/sh\\n' > "$MACHINE/bin/udevadm"
+printf '#!/bin/sh\\n' | tee "$MACHINE/bin/udevadm" > "$MACHINE/bin/sleep"
 chmod +x "$MACHINE/bin/"*
 export PATH="$MACHINE/bin:$PATH"
 cd /
@@ -438,9 +443,9 @@ class TestLive:
             yield process
 
     @staticmethod
-    def story(run: "subprocess.Popen[str]", script: str) -> str:
-        tool = f'INSTALL="{CHECKOUT}/tools/install --python $PYTHON"\n'
-        said, _ = run.communicate(MACHINE + tool + textwrap.dedent(script), timeout=60)
+    def story(run: "subprocess.Popen[str]", script: str, fault: str = "") -> str:
+        given = f'INSTALL="{CHECKOUT}/tools/install --python $PYTHON"\nexport FAULT={fault}\n'
+        said, _ = run.communicate(MACHINE + given + textwrap.dedent(script), timeout=60)
         return said
 
     def test_a_running_service_is_restarted_with_the_new_version_after_systemd_read_the_unit(
@@ -472,8 +477,9 @@ class TestLive:
 
         assert said.splitlines() == ["not started", "started"]
 
-    def test_a_new_version_that_does_not_start_gives_way_to_the_old_one_with_its_unit(
-        self, run: "subprocess.Popen[str]"
+    @pytest.mark.parametrize("fault", ["broken", "dying"])
+    def test_a_new_version_that_does_not_keep_running_gives_way_to_the_old_one_with_its_unit(
+        self, run: "subprocess.Popen[str]", fault: str
     ) -> None:
         said = self.story(
             run,
@@ -482,15 +488,16 @@ class TestLive:
             touch "$MACHINE/active"
             before=$(readlink /opt/motekeep)
             echo "# of the old version" >> /opt/motekeep/systemd/motekeep.service
-            PIP='touch "$(dirname "$0")/../broken"' $INSTALL >/dev/null || echo "exit $?"
+            PIP='touch "$(dirname "$0")/../$FAULT"' $INSTALL >/dev/null || echo "exit $?"
             [ "$(readlink /opt/motekeep)" = "$before" ] && echo back in use
             tail -n 1 /etc/systemd/system/motekeep.service
             [ -e "$MACHINE/active" ] && echo running
             """,
+            fault,
         )
 
         error, code, *rest = said.splitlines()
-        assert "did not start (journalctl -u motekeep says why)" in error
+        assert "does not keep running (journalctl -u motekeep says why)" in error
         assert "is back in service" in error
         assert code == "exit 1"
         assert rest == ["back in use", "# of the old version", "running"]
