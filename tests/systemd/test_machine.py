@@ -91,8 +91,9 @@ def report(tmp_path_factory: pytest.TempPathFactory) -> dict[str, str]:
     (root / "story").write_text(STORY)
     (root / "story").chmod(0o755)
     (root / "etc/systemd/system/story.service").write_text(UNIT)
-    (root / "etc/systemd/system/multi-user.target.wants/story.service").symlink_to("/etc/systemd/system/story.service")
-    # No network inside: the broker of the example cannot be found, as on a gateway whose uplink is down. A container that
+    wanted = root / "etc/systemd/system/multi-user.target.wants/story.service"
+    wanted.symlink_to("/etc/systemd/system/story.service")
+    # No network inside: the broker of the example cannot be found, as on a gateway whose uplink is down. One that
     # hangs is asked to power off before it is killed: its processes would outlive its leader, and this test.
     quiet = ["--quiet", "--register=no", "--keep-unit", "--private-network", "--machine=motekeep-test"]
     subprocess.run(
