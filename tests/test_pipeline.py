@@ -210,3 +210,13 @@ def test_any_split_of_the_bytes_gives_the_same_readings(cuts: list[int], phase: 
     whole.advance(at(60))
     split.advance(at(60))
     assert readings(whole) == readings(split)
+
+
+def test_a_torn_frame_that_only_the_next_one_proves_is_bad_and_not_missing_as_well() -> None:
+    pipeline = started()
+    for second in range(1, 61):
+        frame = data(second)
+        pipeline.receive("north", frame[:20] if second == 10 else frame, at(second - 0.5))
+    pipeline.advance(at(60))
+    [reading] = readings(pipeline)
+    assert reading.frames.model_dump() == {"good": 59, "bad": 1, "missing": 0}

@@ -124,8 +124,12 @@ class Pipeline:
         sensor = self._sensors[name]
         health = sensor.health
         health.heard(len(data), at)
-        for event in sensor.decoder.feed(data):
-            sensor.accumulator.missing += sensor.cadence.arrived(at.boot_s)
+        events = sensor.decoder.feed(data)
+        if not events:
+            return
+        # a torn frame is often proven only by the next one: both come at once, and fill two slots
+        sensor.accumulator.missing += max(sensor.cadence.arrived(at.boot_s) + 1 - len(events), 0)
+        for event in events:
             if isinstance(event, Damage):
                 sensor.accumulator.bad += 1
                 health.damaged(event, at)
