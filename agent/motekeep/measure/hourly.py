@@ -269,27 +269,30 @@ class Hourly:
         return hourly
 
 
-# start, seconds, measured, asleep, flag, number of reasons; then value, u, u_random of each channel, NaN for None.
-_FORMAT = Struct("<dfffBH" + "ddd" * len(CHANNELS))
+# start, seconds, measured, asleep, flag, channels as bits, number of reasons; then value, u, u_random of each channel,
+# NaN for None.
+_FORMAT = Struct("<dfffBBH" + "ddd" * len(CHANNELS))
 
 
 def _pack(sample: Sample, reasons: int) -> bytes:
     numbers: list[float] = []
-    for channel in CHANNELS:
+    present = 0
+    for i, channel in enumerate(CHANNELS):
         figure = sample.figures.get(channel)
+        present |= (figure is not None) << i
         parts = (figure.value, figure.u, figure.u_random) if figure else (None, None, None)
         numbers += [nan if part is None else part for part in parts]
     return _FORMAT.pack(
-        sample.start, sample.seconds, sample.measured_s, sample.asleep_s, sample.flag, reasons, *numbers
+        sample.start, sample.seconds, sample.measured_s, sample.asleep_s, sample.flag, present, reasons, *numbers
     )
 
 
 def _unpack(record: bytes, reasons: Sequence[tuple[str, ...]]) -> Sample:
-    start, seconds, measured_s, asleep_s, flag, number, *numbers = _FORMAT.unpack(record)
+    start, seconds, measured_s, asleep_s, flag, present, number, *numbers = _FORMAT.unpack(record)
     figures: dict[str, Value] = {}
     for i, channel in enumerate(CHANNELS):
-        value, u, u_random = [None if isnan(n) else n for n in numbers[3 * i : 3 * i + 3]]
-        if value is not None:
+        if present >> i & 1:
+            value, u, u_random = [None if isnan(n) else n for n in numbers[3 * i : 3 * i + 3]]
             figures[channel] = Value(None, value, u, u_random)
     return Sample(start, seconds, measured_s, asleep_s, flag, reasons[number], figures)
 
@@ -311,7 +314,7 @@ def summarise(samples: Sequence[Sample]) -> Summary:
     for channel in CHANNELS:
         if not any(channel in s.figures for s in samples):
             continue
-        kept, evaluated = _one_kind([s for s in sound if channel in s.figures], channel)
+        kept, evaluated = _one_kind([s for s in sound if _has_value(s, channel)], channel)
         measured = sum(s.measured_s for s in kept)
         if not complete(measured, due):
             means[channel] = (None, None, min(measured / due, 1.0) if due > 0.0 else 0.0)
@@ -332,6 +335,11 @@ def _one_kind(samples: Sequence[Sample], channel: str) -> tuple[list[Sample], bo
     raw = [s for s in samples if s.figures[channel].u is None]
     evaluated = sum(s.measured_s for s in corrected) >= sum(s.measured_s for s in raw) and bool(corrected)
     return (corrected if evaluated else raw), evaluated
+
+
+def _has_value(sample: Sample, channel: str) -> bool:
+    figure = sample.figures.get(channel)
+    return figure is not None and figure.value is not None
 
 
 def _value(sample: Sample, channel: str) -> float:
