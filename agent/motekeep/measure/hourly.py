@@ -8,8 +8,8 @@ The rules.
 - Readings that fail, and figures without a value, are left out. Suspect ones are used.
 - Corrected and raw figures are never averaged together: the kind that covers more of the hour is used.
 - The flag: 9 when no channel is complete; else 3 when more than a quarter of what was used is suspect, or when anything
-  censored was in the hour, since the missing highest minutes make its mean a lower bound; else 2 when the raw kind was
-  used; else 1. Reasons are listed from frequent to rare.
+  censored was in the hour, since the missing highest minutes make its mean a lower bound; else 2 when more than a
+  quarter of it was not evaluated; else 1. Reasons are listed from frequent to rare.
 - u: the random parts of the readings add in quadrature, their common parts linearly (JCGM 100:2008, 5.2.2), and where
   the hour was not measured through, the scatter of its readings counts for the part not seen (Cochran 1977, Sampling
   Techniques, 2.3).
@@ -310,7 +310,6 @@ def summarise(samples: Sequence[Sample]) -> Summary:
     sound = [s for s in samples if s.flag not in (FAIL, MISSING)]
     means: dict[str, tuple[float | None, float | None, float]] = {}
     used: dict[float, Sample] = {}
-    raw_kind = False
     for channel in CHANNELS:
         if not any(channel in s.figures for s in samples):
             continue
@@ -322,11 +321,10 @@ def summarise(samples: Sequence[Sample]) -> Summary:
         mean = sum(s.measured_s * _value(s, channel) for s in kept) / measured
         u = _uncertainty(kept, channel, mean) if evaluated else None
         means[channel] = (mean, u, min(measured / due, 1.0))
-        raw_kind = raw_kind or not evaluated
         used.update((s.start, s) for s in kept)
     listed = Counter(reason for s in samples for reason in s.reasons)
     reasons = tuple([reason for reason, _ in listed.most_common(MOST_REASONS)])
-    return Summary(_flag(list(used.values()), CENSORING.isdisjoint(listed), raw_kind), reasons, means)
+    return Summary(_flag(list(used.values()), CENSORING.isdisjoint(listed)), reasons, means)
 
 
 def _one_kind(samples: Sequence[Sample], channel: str) -> tuple[list[Sample], bool]:
@@ -361,10 +359,10 @@ def _uncertainty(samples: Sequence[Sample], channel: str, mean: float) -> float:
     return hypot(sqrt(random + missed), common)
 
 
-def _flag(used: Sequence[Sample], uncensored: bool, raw_kind: bool) -> int:
+def _flag(used: Sequence[Sample], uncensored: bool) -> int:
     if not used:
         return MISSING
-    suspect = sum(s.measured_s for s in used if s.flag == SUSPECT)
-    if not uncensored or suspect > 0.25 * sum(s.measured_s for s in used):
+    quarter = 0.25 * sum(s.measured_s for s in used)
+    if not uncensored or sum(s.measured_s for s in used if s.flag == SUSPECT) > quarter:
         return SUSPECT
-    return NOT_EVALUATED if raw_kind else PASS
+    return NOT_EVALUATED if sum(s.measured_s for s in used if s.flag == NOT_EVALUATED) > quarter else PASS
