@@ -567,5 +567,5 @@ def test_the_real_package_installs_with_the_pinned_versions_and_its_command_runs
     assert "motekeep, version" in version
     assert dependencies
     assert dependencies <= set((CHECKOUT / "tools/constraints.txt").read_text().splitlines())
-    # DESIGN: heavy things are never on a device
+    # heavy things are never on a device: they double its memory, and some have no wheel for it
     assert not [package for package in packages if package.startswith(("numpy", "scipy", "rich", "typer", "cffi"))]
