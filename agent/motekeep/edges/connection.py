@@ -112,6 +112,8 @@ class Connection:
         self._clock = clock
         self._subscribed: dict[int, tuple[str, ...]] = {}
         self._telling = threading.Lock()
+        self._leaving = False
+        self._trouble = ""  # what paho last said of the socket; it tells no callback
         self.over = threading.Event()
         self.up_since: float | None = None
         self.began_s = clock.now().boot_s
@@ -157,6 +159,7 @@ class Connection:
     def leave(self, within_s: float) -> None:
         """Disconnect so that the broker discards the will and the session, or cut when that takes too long."""
         properties = _properties(PacketTypes.DISCONNECT, SessionExpiryInterval=0)
+        self._leaving = True
         if self.up_since is not None:
             self._client.disconnect(properties=properties)
             self.over.wait(within_s)
@@ -191,6 +194,7 @@ class Connection:
             client.tls_set_context(tls_context(settings.tls))
         will = _properties(PacketTypes.WILLMESSAGE, WillDelayInterval=settings.will_delay_s)
         client.will_set(*settings.will, qos=1, retain=True, properties=will)
+        client.on_log = _safely(self._logged)
         client.on_socket_open = _safely(self._opened)
         client.on_connect = _safely(self._connected)
         client.on_connect_fail = _safely(self._connect_failed)
@@ -215,6 +219,10 @@ class Connection:
         sock.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
         # Unacknowledged bytes end the connection as soon as paho's keepalive ends an idle one (tcp(7)).
         sock.setsockopt(socket.IPPROTO_TCP, socket.TCP_USER_TIMEOUT, 2000 * self._settings.keepalive_s)
+
+    def _logged(self, _client: mqtt.Client, _userdata: Any, level: int, text: str) -> None:
+        if level == mqtt.MQTT_LOG_ERR:
+            self._trouble = text.removeprefix("failed to receive on socket: ")
 
     def _connected(
         self,
@@ -249,16 +257,24 @@ class Connection:
         reason: ReasonCode,
         _properties: Properties | None,
     ) -> None:
-        if flags.is_disconnect_packet_from_server:
+        if self._leaving:
+            self.tell("stopped")
+        elif flags.is_disconnect_packet_from_server:
             self.tell(f"the broker ended it: {_words(reason)}")
+        elif self.up_since is None and "alert" in self._trouble:  # TLS 1.3 refuses a client after the handshake
+            self.tell(f"the broker refuses our certificate{self._said()}; look at [broker] tls.cert and tls.key")
         elif self.up_since is None:
+            said = self._said()
             self.tell(
-                "the broker closed it before answering; does it speak MQTT 5 on this port, with TLS as configured?"
+                f"the broker closed it before answering{said}; does it speak MQTT 5 on this port, with or without TLS?"
             )
         elif reason.getName() == "Keep alive timeout":
             self.tell(f"no sign of life from the broker for {2 * self._settings.keepalive_s} s")
         else:
-            self.tell("the connection broke")
+            self.tell(f"the connection broke{self._said()}")
+
+    def _said(self) -> str:
+        return f" ({self._trouble})" if self._trouble else ""
 
     def _published(
         self, _client: mqtt.Client, _userdata: Any, mid: int, reason: ReasonCode, _properties: Properties | None

@@ -61,7 +61,7 @@ def tls_context(tls: Tls) -> ssl.SSLContext:
         context = ssl.create_default_context(cafile=tls.ca)
         context.minimum_version = ssl.TLSVersion.TLSv1_2
         if tls.cert is not None:
-            context.load_cert_chain(tls.cert, tls.key)
+            context.load_cert_chain(tls.cert, tls.key, password="")  # else OpenSSL asks on a terminal
     except OSError as error:  # SSLError is one
         files = ", ".join(str(file) for file in (tls.ca, tls.cert, tls.key) if file is not None)
         raise BrokerError(f"loading the TLS files {files}", str(error), "see [broker] tls") from error

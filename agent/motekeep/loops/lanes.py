@@ -3,7 +3,8 @@
 Owns the choice of the next late batch, the order, and the rules below. Pure but for its own state: time, rows and
 answers come in with the calls.
 
-A refused topic is held: one probe at a time, after 1 s, then twice as long each time, up to 300 s. A pass ends it.
+A refused topic is held: one probe at a time, after 1 s, then twice as long each time, up to 300 s. A pass ends it, and so
+does a new connection, unless the last one ended by a refusal: some brokers hang up after each.
 A refused or fatal batch is taken apart: its rows go alone until each has passed or was struck.
 A row is struck when the broker refuses it alone, or when it was the oldest unanswered message of a connection that had
 worked and that the broker's side ended. It is set aside at three strikes, if others of its topic have passed since the
@@ -156,7 +157,8 @@ class Lane:
             self.passes += 1
         for seq in seqs if self.strikes else ():
             self.strikes.pop(seq, None)
-        self.look_again()
+        if self.strikes:
+            self._rewind(min(self.strikes))
 
     def refused(self, rows: Sequence[Row], hold: Hold, sent_s: float, now_s: float) -> Sequence[Row]:
         """The broker refused them. Gives the rows to set aside.
@@ -177,6 +179,7 @@ class Lane:
             self.give_up(row)
             return rows
         if len(self.strikes) >= SUSPECTS and all(self.passes == s.first for s in self.strikes.values()):
+            self._rewind(min(self.strikes))
             self.strikes.clear()
         return ()
 
@@ -198,15 +201,16 @@ class Lane:
         self.alone.discard(row.seq)
 
     def look_again(self) -> None:
-        """Now and then: there may be new rows, and struck ones that were passed over get their turn."""
-        self.idle = False
-        if self.strikes:
-            self._rewind(min(self.strikes))
+        """There may be new rows, and struck ones that were passed over get their turn. With nothing on its way it costs
+        nothing to look from the beginning, so no row depends on the cursor being right."""
+        self._rewind(min(self.strikes, default=self.late_after + 1) if self.flying else 1)
 
     def restart(self) -> None:
         """A new connection: nothing is on its way, everything that waits is looked at again."""
         self.flying.clear()
         self._rewind(1)
+
+    def forgive(self) -> None:
         self.live = Hold()
         self.late = Hold()
 
@@ -214,6 +218,7 @@ class Lane:
         strike = self.strikes.get(row.seq)
         if strike is None:
             if len(self.strikes) >= SUSPECTS:
+                self._rewind(min(self.strikes))
                 del self.strikes[min(self.strikes)]
             strike = self.strikes[row.seq] = Strike(0, self.passes, self.passes)
         strike.count += 1

@@ -39,10 +39,13 @@ class Papers:
 
     def opened(self) -> None:
         """A new connection: the broker may have forgotten what it had retained, so everything goes again."""
-        self._holds.clear()
         self._flying.clear()
         with self._lock:
             self._unsent = set(self._retained)
+
+    def forgive(self) -> None:
+        """The broker may have changed its mind: no topic is held."""
+        self._holds.clear()
 
     def send_retained(self, now_s: float) -> None:
         outbox = self._outbox

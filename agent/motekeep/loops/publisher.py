@@ -82,6 +82,7 @@ class Publisher:
         self._papers = Papers(self._outbox, journal)
         self._rows = Rows(settings.rows, topics, sensors, self._outbox, journal)
         self._dropped_by_us = False
+        self._ended_by_refusal = False
         self._fresh = True
         self._looked_s = now.boot_s
         self._journal_due_s = now.boot_s
@@ -172,7 +173,8 @@ class Publisher:
                 self._take(event)
         said = self._broker.stop((self._topics.health, self._farewell(self._clock.now())), LEAVE_LINK_S)
         while (event := self._broker.event(0.0)) is not None:
-            self._take(event)
+            if isinstance(event, Acknowledged):
+                self._take(event)
         log.info("link.closed", farewell=said)
 
     # -- what the broker says -----------------------------------------------------------------------------------
@@ -201,15 +203,22 @@ class Publisher:
         self._link_trouble.recovered()
         log.info("link.connected", window=window.most, maximum_packet_bytes=event.maximum_packet)
         self._papers.opened()
-        self._rows.opened(now.boot_s)
+        self._rows.opened()
+        if not self._ended_by_refusal:
+            self._papers.forgive()
+            self._rows.forgive()
 
     def _disconnected(self, event: Disconnected, now: Instant) -> None:
         window = self._outbox.closed()
         self._rows.closed()
         self._ledger.disconnected(now, event.why)
         self._link_trouble.failed(BrokerError("the link to the broker", event.why, ""), now.boot_s)
-        head = window.oldest() if window is not None else None
-        if window is None or head is None or self._dropped_by_us or not window.answers:
+        if window is None:
+            return  # a connection that was never made says nothing about messages
+        # mosquitto 2.0.11, Debian's, answers a publish that its access rules refuse, and then hangs up
+        self._ended_by_refusal = window.last_was_refusal
+        head = window.oldest()
+        if head is None or self._ended_by_refusal or self._dropped_by_us or not window.answers:
             return  # for all we can tell it was the line; no message is to blame
         if head.rows:
             self._rows.ended_link(head, event.why)
@@ -218,7 +227,9 @@ class Publisher:
 
     def _answered(self, event: Acknowledged, now: Instant) -> None:
         window = self._outbox.window
-        flight = window.answered(event.mid, now.boot_s) if window is not None else None
+        flight = (
+            window.answered(event.mid, now.boot_s, refused=event.refusal is not None) if window is not None else None
+        )
         if window is None or flight is None:
             return
         unheard = event.code == NO_MATCHING_SUBSCRIBERS

@@ -21,19 +21,17 @@ log = structlog.get_logger()
 
 LIVE_GRACE_S = 30.0  # a reading is live for its own interval and this
 LIVE_PAGE = 10
-CLOCK_GRACE_S = 30.0  # after a connection comes up a time service needs some seconds as well
 ALL = 2**62
 
 
 @dataclass(frozen=True, slots=True)
 class RowSettings:
     """`receipt` is what counts as delivered: `puback` or `taken`. `late_rate` is late messages a second, 0 for no
-    limit. Unsynced readings wait until `clock_wait_s` after boot."""
+    limit. That unsynced readings wait for the clock is the journal's doing."""
 
     interval_s: float
     receipt: str = "puback"
     late_rate: float = 5.0
-    clock_wait_s: float = 900.0
 
 
 class Rows:
@@ -57,17 +55,20 @@ class Rows:
         self._turns = list(sensors)  # whose turn it is on late
         self._late_ways: tuple[Callable[[Instant], bool], ...] = (self._send_backlog, self._send_again)
         self._allowance = Allowance(settings.late_rate)
-        self._opened_s = 0.0
 
-    def opened(self, now_s: float) -> None:
+    def opened(self) -> None:
         """A new connection: nothing is on its way."""
-        self._opened_s = now_s
         interval_s = self._settings.interval_s
         look_back = int((interval_s + LIVE_GRACE_S) / interval_s) + 2
         for lane in self._lanes.values():
             lane.restart()
             lane.newest = self._newest(lane)
             lane.live_after = max(lane.newest - look_back, 0)
+
+    def forgive(self) -> None:
+        """The broker may have changed its mind: no topic is held."""
+        for lane in self._lanes.values():
+            lane.forgive()
 
     def closed(self) -> None:
         self.inbox.forget()
@@ -86,7 +87,7 @@ class Rows:
             for row in page:
                 lane.newest = max(lane.newest, row.seq)
                 if self._is_live(row, now) and row.seq not in lane.flying:
-                    if self._must_wait(row, now) or self._outbox.full() or lane.live.blocked(now.boot_s):
+                    if self._outbox.full() or lane.live.blocked(now.boot_s):
                         return
                     if size(row.body) > self._outbox.room(topic):
                         self._give_up(lane, row, TOO_LARGE)
@@ -114,7 +115,7 @@ class Rows:
         """One late message of the next sensor that has one."""
 
         def ready(row: Row) -> bool:
-            return not self._is_live(row, now) and not self._must_wait(row, now)
+            return not self._is_live(row, now)
 
         for sensor in self._turns:
             lane, topic = self._lanes[sensor], self._topics.late(sensor)
@@ -226,11 +227,3 @@ class Rows:
         """Made in this boot, and ended so lately that it is the present. By the boot clock: the wall clock steps."""
         age_s = now.boot_s - row.boot_s - row.seconds
         return row.boot_id == now.boot_id and age_s <= self._settings.interval_s + LIVE_GRACE_S
-
-    def _must_wait(self, row: Row, now: Instant) -> bool:
-        """An unsynced reading waits for the clock while there is hope: in the first `clock_wait_s` after boot, and in
-        the first seconds of a connection, since a time service needs the network as well."""
-        if row.clock != "unsynced":
-            return False
-        wait_s = self._settings.clock_wait_s
-        return now.boot_s < wait_s or now.boot_s - self._opened_s < min(CLOCK_GRACE_S, wait_s)

@@ -85,7 +85,8 @@ class Allowance:
             return 0.0
         self.left = min(self.left + max(now_s - self.at_s, 0.0) * self.rate, max(self.rate, 1.0))
         self.at_s = now_s
-        return max((1.0 - self.left) / self.rate, 0.0)
+        lacks = 1.0 - self.left
+        return lacks / self.rate if lacks > 1e-6 else 0.0  # rounding must not make a wait too short to end
 
     def take(self) -> None:
         self.left -= 1.0 if self.rate > 0 else 0.0
@@ -97,6 +98,7 @@ class Window:
     def __init__(self, most: int) -> None:
         self.most = most
         self.answers = 0
+        self.last_was_refusal = False
         self._flights: dict[int, Flight] = {}
         self._backlog = 0
         self._progress_s = 0.0
@@ -125,10 +127,11 @@ class Window:
         self._flights[mid] = flight
         self._backlog += flight.way in BACKLOG
 
-    def answered(self, mid: int, now_s: float) -> Flight | None:
+    def answered(self, mid: int, now_s: float, *, refused: bool = False) -> Flight | None:
         flight = self._flights.pop(mid, None)
         if flight is not None:
             self.answers += 1
+            self.last_was_refusal = refused
             self._progress_s = now_s
             self._backlog -= flight.way in BACKLOG
         return flight
