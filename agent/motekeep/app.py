@@ -185,9 +185,7 @@ def _wait_for_config(path: Path, stop: Event, manager: ServiceManager) -> Config
 
 def _publisher_settings(config: Config) -> PublisherSettings:
     broker = config.broker
-    return PublisherSettings(
-        RowSettings(config.interval, broker.receipt, broker.late_rate, config.store.clock_wait), broker.window
-    )
+    return PublisherSettings(RowSettings(config.interval, broker.receipt, broker.late_rate), broker.window)
 
 
 def _broker_settings(config: Config, topics: Topics, now: Instant) -> BrokerSettings:
