@@ -172,6 +172,7 @@ class TestFirst:
         }
 
 
+@pytest.mark.whole
 class TestAgain:
     def test_configuration_and_data_stay_and_the_new_example_lies_beside(self, copy: Device) -> None:
         copy.installed()
@@ -235,7 +236,6 @@ class TestAgain:
         assert device.releases == {before.name}
         assert (device.root / UNIT).stat().st_mtime_ns == unit
 
-    @pytest.mark.whole
     def test_what_a_killed_run_left_behind_goes_with_the_next(self, device: Device) -> None:
         device.installed()
         before = device.in_use
@@ -259,6 +259,7 @@ class TestAgain:
         assert device.releases == {before.name, device.in_use.name}
 
 
+@pytest.mark.whole
 class TestUninstall:
     def test_configuration_and_data_are_left_and_named_and_all_else_goes(self, device: Device) -> None:
         device.installed("--enable", "--drop-in", "memory")
