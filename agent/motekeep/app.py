@@ -24,10 +24,12 @@ from motekeep.edges.journal import Journal, JournalSettings
 from motekeep.edges.login import BrokerSettings, Tls
 from motekeep.edges.ports import Clock, JournalWriter, Line
 from motekeep.edges.serial_line import open_line
+from motekeep.edges.shelf import Shelf
 from motekeep.edges.systemd import ServiceManager
 from motekeep.errors import ConfigError
 from motekeep.instant import Instant
 from motekeep.loops.backoff import Backoff
+from motekeep.loops.calibration import CalibrationFeed
 from motekeep.loops.climate import ClimateFeed
 from motekeep.loops.facts import Facts
 from motekeep.loops.housekeeping import Housekeeping
@@ -106,6 +108,8 @@ class Daemon:
             self._publisher,
             Facts(Host(), config.store.path, self._publisher.facts),
         )
+        shelf = Shelf(config.calibration.folder, config.site, config.gateway)
+        self._calibration = CalibrationFeed(shelf, names, intake)
         self._climate = _climate_feed(config, intake, now)
         self._housekeeping = Housekeeping({"prune": (PRUNE_EVERY_S, self._recorder.prune_soon)})
         readers = [Hand(f"reader-{s.name}", _reader(s, intake, clock, stop)) for s in config.sensor]
@@ -121,6 +125,7 @@ class Daemon:
 
     def _turn(self, at: Instant) -> None:
         self._climate.turn(at)
+        self._calibration.turn(at)
         self._housekeeping.watch(at)
         self._recorder.turn(at)
 

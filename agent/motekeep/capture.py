@@ -8,6 +8,7 @@ opens no file.
 from dataclasses import dataclass
 
 from motekeep.errors import CaptureError
+from motekeep.measure.dose import ServiceKind
 
 # the longest burst that one read of a line gives, in hex, with its time and name
 LONGEST_LINE = 9000
@@ -51,7 +52,7 @@ def parse_line(line: str, name: str = "capture", number: int = 0) -> Record | No
             warm = None if len(fields) < 5 or fields[4] == "-" else float(fields[4])
             return ClimateRecord(t, sensor, float(fields[3]), warm)
         if kind == "service":
-            return ServiceRecord(t, sensor, fields[3])
+            return ServiceRecord(t, sensor, ServiceKind(fields[3]).value)
     except (ValueError, IndexError) as error:
         raise CaptureError(f"{name}, line {number}", f"not a capture line ({error})", _MEND) from error
     raise CaptureError(f"{name}, line {number}", f"unknown kind {kind!r}", _MEND)

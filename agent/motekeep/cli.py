@@ -110,32 +110,20 @@ def capture(config_path: Path, seconds: float, out: Path) -> None:
 @with_config
 @click.argument("captures", nargs=-1, required=True, type=existing)
 @click.option("--out", required=True, type=click.Path(path_type=Path, file_okay=False), help="Folder for the results.")
-def replay(config_path: Path, captures: tuple[Path, ...], out: Path) -> None:
+@click.option("--calibration", "documents", multiple=True, type=existing, help="A document, unsigned; may repeat.")
+def replay(config_path: Path, captures: tuple[Path, ...], out: Path, documents: tuple[Path, ...]) -> None:
     """Run captures through the daemon's own pipeline, as fast as it can."""
-    from motekeep.app import sensor_setups  # noqa: PLC0415
-    from motekeep.commands.progress import bytes_bar  # noqa: PLC0415
+    from motekeep.commands.offline import run_captures  # noqa: PLC0415
     from motekeep.config import load  # noqa: PLC0415
-    from motekeep.message.compose import Place  # noqa: PLC0415
-    from motekeep.replay import replay as run_replay  # noqa: PLC0415
 
-    config = load(config_path)
-    with bytes_bar("replay", list(captures)) as progress:
-        summary = run_replay(
-            list(captures), out, Place(config.site, config.gateway), config.interval, sensor_setups(config), progress
-        )
-    if summary.unknown_sensors:
-        names = ", ".join(sorted(summary.unknown_sensors))
-        click.echo(f"motekeep: not in {config_path}, left out: {names}", err=True)
-    if summary.first is None:
-        click.echo("motekeep: no line of a sensor of this configuration; nothing was replayed", err=True)
-        sys.exit(1)
+    sys.exit(0 if run_captures(load(config_path), list(captures), out, list(documents)) else 1)
 
 
 @main.command()
 @with_config
 @click.option("--from", "from_", required=True, help="Start, RFC 3339, like 2026-12-01T00:00:00Z.")
 @click.option("--to", required=True, help="End, exclusive.")
-@click.option("--format", "form", type=click.Choice(["csv", "ndjson"]), default="csv", show_default=True)
+@click.option("--format", "form", type=click.Choice(["csv", "ndjson", "senml"]), default="csv", show_default=True)
 @click.option("--sensor", "sensors", multiple=True, help="Only this sensor; may repeat.")
 @click.option("--out", type=click.Path(path_type=Path, dir_okay=False), help="A file instead of standard output.")
 def export(config_path: Path, from_: str, to: str, form: str, sensors: tuple[str, ...], out: Path | None) -> None:

@@ -6,19 +6,24 @@ call and must not run backwards by the boot clock.
 """
 
 import json
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
-from itertools import chain
 
 from motekeep.health.check import LineState
 from motekeep.health.finding import Finding, FindingEvent
 from motekeep.health.gateway import GatewayFacts, GatewayHealth
 from motekeep.health.sensor import SensorHealth
 from motekeep.instant import Instant
+from motekeep.measure.correction import compile_document
+from motekeep.measure.document import CalibrationDocument
+from motekeep.measure.dose import Dose, ServiceKind
+from motekeep.measure.hourly import Hourly, sample_of
 from motekeep.measure.interval import Accumulator, Cadence, Climate, frame_climate
-from motekeep.measure.reading import Correction, make_reading, uncorrected
+from motekeep.measure.reading import Correction, make_reading, refused, uncorrected
 from motekeep.message.compose import Place, amend_document, finding_document, reading_document
-from motekeep.message.documents import AmendDocument, FindingDocument, ReadingDocument
+from motekeep.message.documents import AmendDocument, FindingDocument, HourlyDocument, ReadingDocument
+from motekeep.message.health import SensorAccount
+from motekeep.message.hourly import hourly_document, sample_of_document
 from motekeep.wire.frame import Damage, Decoder, Dialect, Observation
 
 STEP_S = 1.0  # a jump of the wall clock beyond this is a step; time services slew smaller ones
@@ -36,7 +41,6 @@ class SensorSetup:
     flow_l_min: float = 0.1
     frame_climate: bool = False
     climate_max_age_s: float = 900.0
-    correction: Correction = uncorrected
 
 
 @dataclass(frozen=True, slots=True)
@@ -44,6 +48,7 @@ class Harvest:
     """Everything finished since the last harvest, in order, and what changed of the state to keep."""
 
     readings: tuple[ReadingDocument, ...] = ()
+    hours: tuple[HourlyDocument, ...] = ()
     findings: tuple[FindingDocument, ...] = ()
     amendments: tuple[AmendDocument, ...] = ()
     keep: Mapping[str, str] = field(default_factory=dict)
@@ -60,6 +65,11 @@ def kept_name(sensor: str) -> str:
     return f"health/{sensor}"
 
 
+def dose_name(sensor: str) -> str:
+    """The name under which a sensor's dose and laser hours are kept."""
+    return f"dose/{sensor}"
+
+
 @dataclass(slots=True)
 class _Sensor:
     """The running state of one sensor."""
@@ -71,6 +81,10 @@ class _Sensor:
     seq: int | None = None
     accumulator: Accumulator = field(default_factory=Accumulator)
     climate: tuple[Climate, float] | None = None
+    calibration: CalibrationDocument | None = None
+    correction: Correction = uncorrected
+    dose: Dose = field(default_factory=Dose)
+    hourly: Hourly = field(default_factory=Hourly)
     asleep_since: float | None = None
     asleep_s: float = 0.0
 
@@ -104,13 +118,15 @@ class Pipeline:
             sensor.seq = seqs[name]
             if memory := kept.get(kept_name(name)):
                 sensor.health.restore(json.loads(memory), at)
+            if dose := kept.get(dose_name(name)):
+                sensor.dose = Dose.restored(dose)
         if memory := kept.get(GATEWAY_KEPT):
             self._gateway.restore(json.loads(memory), at)
 
     @property
     def kept_names(self) -> list[str]:
         """Every name that `Harvest.keep` may use."""
-        return [GATEWAY_KEPT, *map(kept_name, self._sensors)]
+        return [GATEWAY_KEPT, *map(kept_name, self._sensors), *map(dose_name, self._sensors)]
 
     @property
     def sensors(self) -> list[str]:
@@ -163,6 +179,31 @@ class Pipeline:
         """Air at the sensor from another source than its frames; from then on frames are not asked for it."""
         self.advance(at)
         self._sensors[name].climate = (climate, at.boot_s)
+
+    def calibrate(self, name: str, document: CalibrationDocument | None, *, damaged: bool = False) -> None:
+        """The document in force from the span under way on; None for none, or for one that is `damaged`.
+
+        A document acts on whole intervals, so no reading mixes two of them.
+        """
+        sensor = self._sensors[name]
+        sensor.calibration = document
+        if document is not None:
+            sensor.correction = compile_document(document)
+        else:
+            sensor.correction = refused if damaged else uncorrected
+
+    def service(self, name: str, kind: ServiceKind, done_utc: float, at: Instant) -> None:
+        """A person did something at the sensor at `done_utc`, and it is told now."""
+        self.advance(at)
+        sensor = self._sensors[name]
+        sensor.dose = sensor.dose.serviced(kind, done_utc, at.utc)
+
+    def remember(self, name: str, stored: Iterable[ReadingDocument]) -> None:
+        """Earlier readings of the journal, for the hours that they are part of."""
+        hourly = self._sensors[name].hourly
+        for document in stored:
+            if (sample := sample_of_document(document)) is not None:
+                hourly.add(sample)
 
     def gateway(self, facts: GatewayFacts, at: Instant) -> None:
         """What is known of the gateway itself."""
@@ -217,9 +258,13 @@ class Pipeline:
             sensor.health.interval(interval)
             if seconds < 1.0 or sensor.seq is None:
                 continue  # a sliver before a clock step holds no figure
-            reading = make_reading(interval, sensor.setup.correction, sensor.health.flags_between(span.boot_s, end_s))
+            flags = sensor.health.flags_between(span.boot_s, end_s)
+            reading = make_reading(interval, sensor.correction, flags)
             self._readings.append(reading_document(reading, self._place, sensor.seq))
             sensor.seq += 1
+            sensor.dose = sensor.dose.after(reading, sensor.setup.flow_l_min)
+            if span.trusted:
+                sensor.hourly.add(sample_of(reading))
 
     def _climate_of(self, sensor: _Sensor, end_s: float) -> Climate | None:
         if sensor.climate is not None:
@@ -241,6 +286,7 @@ class Pipeline:
             }
             for code, (flag, since) in backdated.items():
                 if flag is not None:
+                    sensor.hourly.amend(since, self._span.utc, flag, (code,))
                     self._amendments.append(amend_document(sensor.setup.name, since, self._span.utc, {code: flag}))
 
     # -- what goes out ------------------------------------------------------------------------------------------
@@ -249,13 +295,27 @@ class Pipeline:
         """Everything finished since the last harvest."""
         readings, findings = tuple(self._readings), tuple([finding_document(e) for e in self._events])
         keep = self._memories() if readings or findings else {}
-        harvest = Harvest(readings, findings, tuple(self._amendments), keep)
+        hours = self._hours() if readings or self._amendments else ()
+        harvest = Harvest(readings, hours, findings, tuple(self._amendments), keep)
         self._readings, self._events, self._amendments = [], [], []
         return harvest
 
+    def _hours(self) -> tuple[HourlyDocument, ...]:
+        """Hours that are full by the last border and new or changed, oldest first for each sensor."""
+        if not self._span.trusted:
+            return ()
+        return tuple(
+            [
+                hourly_document(hour, self._place, name)
+                for name, sensor in self._sensors.items()
+                for hour in sensor.hourly.due(self._span.utc)
+            ]
+        )
+
     def _memories(self) -> dict[str, str]:
         sensors = {kept_name(name): json.dumps(sensor.health.dump()) for name, sensor in self._sensors.items()}
-        return {**sensors, GATEWAY_KEPT: json.dumps(self._gateway.dump())}
+        doses = {dose_name(name): sensor.dose.state() for name, sensor in self._sensors.items()}
+        return {**sensors, **doses, GATEWAY_KEPT: json.dumps(self._gateway.dump())}
 
     def finish(self, at: Instant) -> None:
         """Close the span that is under way, short as it is: the end of a capture or of the daemon."""
@@ -270,5 +330,13 @@ class Pipeline:
         by_sensor[None] = self._gateway.open()
         return by_sensor
 
-    def all_open(self) -> list[Finding]:
-        return list(chain.from_iterable(self.findings().values()))
+    def accounts(self) -> Mapping[str, SensorAccount]:
+        """What each sensor has been through and is read with."""
+        return {
+            name: SensorAccount(
+                s.dose.laser_hours,
+                s.dose.dust_ug,
+                None if s.calibration is None else (s.calibration.issue, s.calibration.valid_until),
+            )
+            for name, s in self._sensors.items()
+        }

@@ -7,15 +7,17 @@ import gzip
 import heapq
 import json
 from collections import Counter
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import ExitStack
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import IO
 
-from motekeep.capture import ClimateRecord, FrameRecord, Record, parse_line
+from motekeep.capture import ClimateRecord, FrameRecord, Record, ServiceRecord, parse_line
 from motekeep.errors import CaptureError
 from motekeep.instant import Instant, rfc3339
+from motekeep.measure.document import CalibrationDocument
+from motekeep.measure.dose import ServiceKind
 from motekeep.measure.interval import Climate
 from motekeep.message.compose import Place
 from motekeep.pipeline import Harvest, Pipeline, SensorSetup
@@ -46,25 +48,56 @@ class Summary:
         }
 
 
-def replay(
-    captures: list[Path],
-    out: Path,
-    place: Place,
-    interval_s: int,
-    sensors: list[SensorSetup],
-    progress: Callable[[int], None] = lambda _size: None,
-) -> Summary:
-    """Run captures through the pipeline and write readings.ndjson, findings.ndjson and summary.json into `out`.
+class Results:
+    """The result files while they grow. Hours are kept until the end: an amendment may still change one."""
 
-    Lines of several captures are merged by time; within a file time must not run backwards. `progress` is told the
-    bytes of text consumed. Raises CaptureError naming file and line.
+    def __init__(self, readings: IO[str], findings: IO[str], summary: Summary) -> None:
+        self._readings = readings
+        self._findings = findings
+        self._summary = summary
+        self._hours: dict[tuple[str, str], str] = {}  # start and sensor to the line; 9,000 a sensor and year
+
+    def write(self, harvest: Harvest) -> None:
+        for reading in harvest.readings:
+            self._readings.write(reading.json_text() + "\n")
+            self._summary.readings[reading.sensor] += 1
+        for finding in harvest.findings:
+            line = finding.model_dump(mode="json", exclude={"schema_", "remedy"})
+            self._findings.write(json.dumps(line) + "\n")
+            if finding.event == "opened":
+                self._summary.findings[finding.code] += 1
+        for hour in harvest.hours:
+            self._hours[hour.start, hour.sensor] = hour.json_text()
+
+    def write_hours(self, path: Path) -> None:
+        path.write_text("".join(f"{line}\n" for _, line in sorted(self._hours.items())), encoding="utf-8")
+
+
+@dataclass(frozen=True, slots=True)
+class Plan:
+    """What captures are replayed as: the gateway, its sensors, and the calibration documents to read them with."""
+
+    place: Place
+    interval_s: int
+    sensors: list[SensorSetup]
+    documents: Sequence[CalibrationDocument] = ()
+
+
+def replay(
+    captures: list[Path], out: Path, plan: Plan, progress: Callable[[int], None] = lambda _size: None
+) -> Summary:
+    """Run captures through the pipeline and write readings.ndjson, hourly.ndjson, findings.ndjson and summary.json.
+
+    An hour stands once in hourly.ndjson, as it ended. Lines of several captures are merged by time; within a file time
+    must not run backwards. `progress` is told the bytes of text consumed. Raises CaptureError naming file and line.
     """
     summary = Summary()
-    names = {s.name for s in sensors}
+    names = {s.name for s in plan.sensors}
     out.mkdir(parents=True, exist_ok=True)
     with ExitStack() as stack:
         readings = stack.enter_context((out / "readings.ndjson").open("w", encoding="utf-8"))
         findings = stack.enter_context((out / "findings.ndjson").open("w", encoding="utf-8"))
+        results = Results(readings, findings, summary)
         streams = [_records(stack, path, progress) for path in captures]
         merged = streams[0] if len(streams) == 1 else heapq.merge(*streams, key=lambda r: r.t)
         pipeline: Pipeline | None = None
@@ -75,21 +108,26 @@ def replay(
                 continue
             at = _instant(record.t)
             if pipeline is None:
-                pipeline = Pipeline(place, interval_s, sensors, at)
+                pipeline = Pipeline(plan.place, plan.interval_s, plan.sensors, at)
                 pipeline.resume(dict.fromkeys(names, 1), {}, at)
+                for document in plan.documents:
+                    pipeline.calibrate(document.sensor, document)
                 summary.first, harvest_at = record.t, at
             if isinstance(record, FrameRecord):
                 summary.frames[record.sensor] += 1
                 pipeline.receive(record.sensor, record.data, at)
             elif isinstance(record, ClimateRecord):
                 pipeline.climate(record.sensor, Climate(record.rh_pct, record.temperature_c, "capture"), at)
+            elif isinstance(record, ServiceRecord):
+                pipeline.service(record.sensor, ServiceKind(record.kind), record.t, at)
             if at.boot_s - harvest_at.boot_s >= HARVEST_EVERY_S:
                 harvest_at = at
-                _write(pipeline.harvest(), readings, findings, summary)
+                results.write(pipeline.harvest())
         if pipeline is not None:
             pipeline.finish(at)
-            _write(pipeline.harvest(), readings, findings, summary)
+            results.write(pipeline.harvest())
             summary.last = at.utc
+        results.write_hours(out / "hourly.ndjson")
     (out / "summary.json").write_text(json.dumps(summary.as_dict(), indent=1) + "\n", encoding="utf-8")
     return summary
 
@@ -129,14 +167,3 @@ def _lines(lines: IO[str], name: str, progress: Callable[[int], None]) -> Iterat
     except (UnicodeDecodeError, EOFError, gzip.BadGzipFile) as error:
         raise CaptureError(name, f"not a capture ({error})", "give a text capture or its .gz") from error
     progress(done)
-
-
-def _write(harvest: Harvest, readings: IO[str], findings: IO[str], summary: Summary) -> None:
-    for reading in harvest.readings:
-        readings.write(reading.json_text() + "\n")
-        summary.readings[reading.sensor] += 1
-    for finding in harvest.findings:
-        line = finding.model_dump(mode="json", exclude={"schema_", "remedy"})
-        findings.write(json.dumps(line) + "\n")
-        if finding.event == "opened":
-            summary.findings[finding.code] += 1

@@ -125,7 +125,7 @@ def _clock(config: Config) -> Line:
         return Line(
             "warn",
             "clock",
-            f"{now}, but no time service vouches for it; readings go out `unsynced` after {config.store.clock_wait:.0f} s",
+            f"{now}, vouched for by no time service; readings go out unsynced after {config.store.clock_wait:.0f} s",
         )
     return Line("ok", "clock", f"{now}, by {voucher.value}")
 

@@ -27,8 +27,9 @@ class SteadyInterval(IntervalTrigger):  # type: ignore[misc]  # apscheduler 3 sh
     """An interval trigger that, more than three periods behind, goes on from now instead of listing what it missed."""
 
     def get_next_fire_time(self, previous_fire_time: datetime | None, now: datetime) -> datetime | None:
-        if previous_fire_time is not None and now - previous_fire_time > BEHIND * self.interval:
-            return now + self.interval
+        period: timedelta = self.interval
+        if previous_fire_time is not None and now - previous_fire_time > BEHIND * period:
+            return now + period
         following: datetime | None = super().get_next_fire_time(previous_fire_time, now)
         return following
 

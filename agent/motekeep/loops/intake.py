@@ -4,14 +4,17 @@ Owns the lock; what happens under it is a few microseconds of pure work a frame,
 reach a serial reader.
 """
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from threading import Lock
 
 from motekeep.health.check import LineState
 from motekeep.health.finding import Finding
 from motekeep.health.gateway import GatewayFacts
 from motekeep.instant import Instant
+from motekeep.measure.document import CalibrationDocument
 from motekeep.measure.interval import Climate
+from motekeep.message.documents import ReadingDocument
+from motekeep.message.health import SensorAccount
 from motekeep.pipeline import Harvest, Pipeline
 
 
@@ -55,3 +58,15 @@ class Intake:
     def findings(self) -> Mapping[str | None, list[Finding]]:
         with self._lock:
             return self._pipeline.findings()
+
+    def accounts(self) -> Mapping[str, SensorAccount]:
+        with self._lock:
+            return self._pipeline.accounts()
+
+    def calibrate(self, sensor: str, document: CalibrationDocument | None, *, damaged: bool = False) -> None:
+        with self._lock:
+            self._pipeline.calibrate(sensor, document, damaged=damaged)
+
+    def remember(self, sensor: str, stored: Iterable[ReadingDocument]) -> None:
+        with self._lock:
+            self._pipeline.remember(sensor, stored)

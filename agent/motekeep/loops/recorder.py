@@ -82,6 +82,7 @@ class Recorder:
         self._health = ""
         self._vouched = False
         self._prune_due = Event()
+        self._posted_hours: dict[str, str] = {}  # by sensor, RFC 3339: these sort by time
 
     def turn(self, at: Instant) -> None:
         if self._journal is None and at.boot_s >= self._open_at:
@@ -141,9 +142,17 @@ class Recorder:
         if harvest:
             readings = [_row(r) for r in harvest.readings]
             self._journal.commit(Batch(readings, self._notices(harvest), self._kept(harvest)), at)
+            self._post_hours(harvest)
             self._outlet.wake()
         elif self._journal.pending_marks() > FLUSH_MARKS:
             self._journal.flush(at)
+
+    def _post_hours(self, harvest: Harvest) -> None:
+        """The last full hour of each sensor stays retained; an older one, changed by an amendment, must not replace it."""
+        for hour in harvest.hours:
+            if hour.start >= self._posted_hours.get(hour.sensor, ""):
+                self._posted_hours[hour.sensor] = hour.start
+                self._outlet.post(self._settings.topics.hourly(hour.sensor), hour.json_text())
 
     def _kept(self, harvest: Harvest) -> dict[str, str]:
         """What the next life needs, and the health document for `motekeep status`: free in a transaction due anyway."""
@@ -169,6 +178,7 @@ class Recorder:
             2 * settings.health_every_s + GRACE_S,
             life=self._life,
             findings=findings,
+            sensors=self._intake.accounts(),
             store=StoreHealth(
                 waiting=store.waiting,
                 oldest_waiting=oldest,

@@ -69,7 +69,7 @@ class Interval:
 
     `mass`, `mass_ambient` and `counts` follow the order of `layout`, which is None when no frame came. `asleep_s`
     counts the seconds that the sensor was asleep by duty, in which no frame is missed; `warming_frames` the frames
-    of warm-up, which are left out of the statistics.
+    of warm-up, which are left out of the statistics. `revision` is what the unit last said of itself.
     """
 
     sensor: str
@@ -83,6 +83,7 @@ class Interval:
     climate: Climate | None
     asleep_s: float = 0.0
     warming_frames: int = 0
+    revision: int | None = None
 
     @property
     def completeness(self) -> float:
@@ -160,6 +161,7 @@ class Accumulator:
             climate=climate,
             asleep_s=asleep_s,
             warming_frames=self.warming_frames,
+            revision=frames[-1].revision if frames else None,
         )
 
 

@@ -72,6 +72,12 @@ def uncorrected(interval: Interval) -> Corrected:
     return Corrected(values, NOT_EVALUATED, ("uncalibrated",))
 
 
+def refused(interval: Interval) -> Corrected:
+    """There is a document and it must not be used: raw passes through, and the reading says so."""
+    plain = uncorrected(interval)
+    return Corrected(plain.values, SUSPECT, (*plain.reasons, "calibration-refused"))
+
+
 def worst(flags: list[int]) -> int:
     """The roll-up rule above over any number of flags; NOT_EVALUATED of none."""
     return max(flags, key=SEVERITY.__getitem__, default=NOT_EVALUATED)

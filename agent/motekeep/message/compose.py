@@ -121,7 +121,10 @@ def amend_document(sensor: str, from_utc: float, to_utc: float, flags: Mapping[s
 
 
 def _value(value: Value) -> ValueDocument:
-    return ValueDocument(raw=_rounded(value.raw), value=_rounded(value.value), u=_rounded(value.u))
+    figure = {"raw": _rounded(value.raw), "value": _rounded(value.value), "u": _rounded(value.u)}
+    if value.u_random is not None:
+        figure["u_random"] = _rounded(value.u_random)
+    return ValueDocument.model_validate(figure)
 
 
 def _rounded(number: float | None) -> float | None:

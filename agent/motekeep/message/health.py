@@ -10,7 +10,7 @@ from motekeep.health.finding import Finding
 from motekeep.health.verdict import status_of
 from motekeep.instant import Instant, rfc3339
 from motekeep.message.compose import Place, open_findings
-from motekeep.message.documents import HealthDocument, LinkHealth, SensorHealth, StoreHealth
+from motekeep.message.documents import CalibrationState, HealthDocument, LinkHealth, SensorHealth, StoreHealth
 
 
 @dataclass(frozen=True, slots=True)
@@ -22,6 +22,29 @@ class Life:
     version: str
 
 
+@dataclass(frozen=True, slots=True)
+class SensorAccount:
+    """What a sensor has been through: laser hours, dust drawn through since it was cleaned (ug), and its calibration:
+    issue and end of validity (Unix seconds), None without one."""
+
+    laser_hours: float
+    dust_dose_ug: float
+    calibration: tuple[int, float] | None
+
+
+def _sensor_health(account: SensorAccount, findings: Sequence[Finding]) -> SensorHealth:
+    document: dict[str, object] = {
+        "status": status_of(findings),
+        "laser_hours": round(account.laser_hours, 1),
+        "dust_dose_ug": round(account.dust_dose_ug, 2),
+        "findings": open_findings(findings),
+    }
+    if account.calibration is not None:
+        issue, valid_until = account.calibration
+        document["calibration"] = CalibrationState(issue=issue, valid_until=rfc3339(valid_until))
+    return SensorHealth.model_validate(document)
+
+
 def health_document(  # noqa: PLR0913 (the parts of one document; a class for them would be the document again)
     place: Place,
     at: Instant,
@@ -29,16 +52,12 @@ def health_document(  # noqa: PLR0913 (the parts of one document; a class for th
     *,
     life: Life,
     findings: Mapping[str | None, Sequence[Finding]],
+    sensors: Mapping[str, SensorAccount],
     store: StoreHealth,
     link: LinkHealth,
 ) -> HealthDocument:
     """Everything open now, by sensor and for the gateway (key None). Overdue after `next_by_s` from now: a retained
     document past that moment is stale, whatever it says."""
-    sensors = {
-        name: SensorHealth(status=status_of(open_), findings=open_findings(open_))
-        for name, open_ in findings.items()
-        if name is not None
-    }
     return HealthDocument(
         schema="motekeep/health/1",
         site=place.site,
@@ -53,6 +72,6 @@ def health_document(  # noqa: PLR0913 (the parts of one document; a class for th
         clock="synced" if at.trusted else "unsynced",
         store=store,
         link=link,
-        sensors=sensors,
+        sensors={name: _sensor_health(account, findings.get(name, [])) for name, account in sensors.items()},
         findings=open_findings(findings.get(None, [])),
     )

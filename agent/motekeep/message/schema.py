@@ -12,6 +12,7 @@ from motekeep.message.documents import (
     Document,
     FindingDocument,
     HealthDocument,
+    HourlyDocument,
     LateDocument,
     ReadingDocument,
     ResendRequest,
@@ -33,6 +34,7 @@ class Channel:
 CHANNELS = (
     Channel("reading/{sensor}", ReadingDocument, False, False, "one reading, after it is durable on the device"),
     Channel("late/{sensor}", LateDocument, False, False, "readings of an outage, oldest first"),
+    Channel("hourly/{sensor}", HourlyDocument, True, False, "the last full hour, with NowCast and AQI"),
     Channel("amend/{sensor}", AmendDocument, False, False, "a flag or a time stamp of earlier readings changed"),
     Channel("health", HealthDocument, True, False, "the health status; also the will, with status offline"),
     Channel("finding", FindingDocument, False, False, "a finding opened or closed"),
