@@ -1,7 +1,7 @@
 """NowCast and index hold for any hours; the published values are checked in tests/outside."""
 
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from motekeep.measure.air_quality import (
@@ -20,6 +20,7 @@ from motekeep.measure.air_quality import (
 hours = st.lists(st.none() | st.floats(0.0, 1000.0), max_size=12)
 
 
+@settings(max_examples=40, deadline=None)
 @given(hours)
 def test_a_nowcast_lies_between_the_hours_it_is_made_of(given_hours: list[float | None]) -> None:
     got = nowcast(given_hours)
@@ -41,6 +42,7 @@ def test_hours_beyond_the_twelfth_do_not_count() -> None:
 
 
 @pytest.mark.parametrize("table", [PM2_5_2024, PM10_2024, PM2_5_2012, PM2_5_1999])
+@settings(max_examples=40, deadline=None)
 @given(st.floats(0.0, 700.0), st.floats(0.0, 700.0))
 def test_an_index_never_falls_with_more_dust(table: BreakpointTable, a: float, b: float) -> None:
     low, high = sorted((a, b))
@@ -64,6 +66,7 @@ def test_categories_change_where_the_index_passes_50_100_150_200_300() -> None:
     assert list(seen.items()) == list(zip(CATEGORIES, [0, 51, 101, 151, 201, 301], strict=True))
 
 
+@settings(max_examples=40, deadline=None)
 @given(st.integers(0, 10000))
 def test_cutting_to_a_tenth_leaves_tenths_alone(tenths: int) -> None:
     assert cut(tenths / 10, 0.1) == tenths / 10

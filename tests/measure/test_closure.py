@@ -3,7 +3,7 @@
 from math import sqrt
 
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from intervals import NO_COUNTS, SIZES, interval
@@ -59,6 +59,7 @@ def test_an_interval_closes_with_its_noise_scale_and_without() -> None:
     assert closure(interval(censored=1), 60.0) == {}
 
 
+@settings(max_examples=40, deadline=None)
 @given(st.floats(0.1, 10.0), st.floats(1.01, 5.0))
 def test_the_diameter_of_a_bin_lies_in_it_and_that_of_mean_volume_above_the_geometric_one(
     low: float, ratio: float

@@ -228,7 +228,7 @@ EVERYTHING = correction(
 )
 
 
-@settings(max_examples=100, deadline=None)
+@settings(max_examples=60, deadline=None)
 @given(st.tuples(channels, channels, channels), st.tuples(*[channels] * 6), climates)
 def test_no_interval_upsets_it_and_no_figure_without_a_number_leaves_it(
     mass: tuple[Channel, ...], counts: tuple[Channel, ...], climate: Climate | None

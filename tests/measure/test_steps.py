@@ -6,7 +6,7 @@ from itertools import pairwise
 from math import e, exp
 
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from motekeep.measure.reading import FAIL, PASS, SUSPECT
@@ -92,6 +92,7 @@ def test_the_table_names_each_step_by_its_kind_and_builds_it() -> None:
 # -- coincidence --------------------------------------------------------------------
 
 
+@settings(max_examples=40, deadline=None)
 @given(st.floats(-1.0 / e, 0.0))
 def test_lambert_w_is_the_inverse_on_its_whole_interval(z: float) -> None:
     w = lambert_w0(z)
@@ -105,6 +106,7 @@ def test_lambert_w_is_not_given_where_it_is_not_wanted(z: float) -> None:
         lambert_w0(z)
 
 
+@settings(max_examples=40, deadline=None)
 @given(st.floats(0.0, 0.999))
 def test_what_coincidence_took_the_inverse_gives_back(true: float) -> None:
     got = occupancy(true * exp(-true))
@@ -112,6 +114,7 @@ def test_what_coincidence_took_the_inverse_gives_back(true: float) -> None:
     assert got == pytest.approx(true, rel=1e-6, abs=1e-9)
 
 
+@settings(max_examples=40, deadline=None)
 @given(st.floats(1.0001, 50.0))
 def test_beyond_the_maximum_the_first_root_is_taken_never_the_second(true: float) -> None:
     """Air that dense is counted as if it were thinner. The count alone cannot tell: the answer stays below 1."""
@@ -165,6 +168,7 @@ def test_a_held_figure_stays_sensitive_to_humidity() -> None:
     assert step.apply(30.0, Air(rh_pct=92.0)).d_rh == step.apply(30.0, Air(rh_pct=85.0)).d_rh < 0.0
 
 
+@settings(max_examples=40, deadline=None)
 @given(st.floats(0.0, 1.5), st.floats(0.0, 100.0), st.floats(0.0, 1000.0))
 def test_drying_never_adds_mass(kappa: float, rh: float, mass: float) -> None:
     dry = HumidityGrowth(kappa).apply(mass, Air(rh_pct=rh)).value
@@ -191,6 +195,7 @@ def test_pieces_meet_at_their_points_and_go_on_beyond_as_suspect() -> None:
     assert (beyond.value, beyond.flag, beyond.reason) == (pytest.approx(77.0), SUSPECT, "piecewise-beyond")
 
 
+@settings(max_examples=40, deadline=None)
 @given(st.lists(st.floats(0.0, 1e3), min_size=2, max_size=12, unique=True), st.floats(-10.0, 1200.0))
 def test_pieces_keep_the_order_of_figures(at: list[float], x: float) -> None:
     points = tuple(sorted(at))

@@ -75,9 +75,9 @@ def test_a_whole_chain_agrees_with_automatic_differentiation(mass: float, smalle
 
 
 def test_a_whole_chain_agrees_with_a_monte_carlo() -> None:
-    """JCGM 101:2008 with 400,000 draws: their spread is known to 0.1 %, first order is good to a few percent."""
+    """JCGM 101:2008 with 200,000 draws: their spread is known to 0.2 %, first order is good to a few percent."""
     made = interval(climate=HUMID)
-    n, rng = 400_000, np.random.default_rng(20261120)
+    n, rng = 200_000, np.random.default_rng(20261120)
     raw = rng.normal(12.0, raw_uncertainties(made, LAYOUT, SCALE)[1], n)
     count = rng.normal(1800.0, count_uncertainty(made.counts[0], SCALE), n)
     volume = rng.normal(2.0, 0.4, n)
@@ -85,7 +85,7 @@ def test_a_whole_chain_agrees_with_a_monte_carlo() -> None:
     kappa, slope, offset, rh_term, t_term = rng.multivariate_normal(MEANS, COVARIANCE, n).T
     z = count * volume * 1e-5
     w = z.copy()
-    for _ in range(60):
+    for _ in range(25):
         w = z * np.exp(w)
     dry = raw * np.exp(w) / (1.0 + kappa / 1.65 * rh / (100.0 - rh))
     drawn = slope * dry + offset + rh_term * rh + t_term * t
@@ -106,7 +106,7 @@ to = [{ value = 0.5, u = 0.2 }, { value = 9.0, u = 0.6 }, { value = 50.0, u = 3.
 """
     made = interval()
     got = correction(steps, residual="pm2_5 = { u = 1e-9 }", scale=SCALE)(made).values[1]
-    n, rng = 400_000, np.random.default_rng(7)
+    n, rng = 200_000, np.random.default_rng(7)
     x = rng.normal(12.0, raw_uncertainties(made, LAYOUT, SCALE)[1], n) * rng.normal(1.2, 0.05, n)
     middle, end = rng.normal(9.0, 0.6, n), rng.normal(50.0, 3.0, n)
     drawn = middle + (x - 10.0) / 30.0 * (end - middle)
@@ -122,9 +122,9 @@ def test_near_the_maximum_of_coincidence_first_order_fails_and_the_figure_is_fla
     got = correction(step, residual="pm2_5 = { u = 1e-9 }", scale=SCALE)(made)
     assert "coincidence-high" in got.reasons
     z = np.random.default_rng(3).normal(volume, 1.2, 20000) * count * 1e-5
-    z = z[z < 0.999 / np.e]
+    z = z[z < 0.99 / np.e]
     w = z.copy()
-    for _ in range(2000):
+    for _ in range(600):
         w = z * np.exp(w)
     value = got.values[1]
     assert value.u is not None
@@ -140,7 +140,7 @@ def test_two_u_of_an_hour_cover_the_truth_in_nineteen_of_twenty(mass: float) -> 
     steps, ties = GROWTH + LINEAR, TIES.partition("[climate]")[0] + "[climate]\nu_rh = 2.5\nu_t = 0.5\n"
     document_bytes = document(steps, residual=f"pm2_5 = {{ u = 0.2, relative = {residual} }}", more=ties)
     correct = compile_document(parse(document_bytes), SCALE)
-    rng, hours, inside = np.random.default_rng(11), 400, 0
+    rng, hours, inside = np.random.default_rng(11), 250, 0
     u_minute = raw_uncertainties(_minute(mass, RH), LAYOUT, SCALE)[1]
     for hour in range(hours):
         kappa, slope, offset = rng.multivariate_normal(MEANS[:3], COVARIANCE[:3, :3])
@@ -149,15 +149,15 @@ def test_two_u_of_an_hour_cover_the_truth_in_nineteen_of_twenty(mass: float) -> 
         # What the sensor shows when its true parameters, and what the fit left over, make the truth of this hour.
         shown = ((truth - left_over) - offset) / slope * (1.0 + kappa / 1.65 * RH / (100.0 - RH))
         hourly = Hourly()
-        for m in range(0, 60, 4):  # every fourth minute is enough and four times as fast; it stands for four
+        for m in range(0, 60, 10):  # every tenth minute is enough and ten times as fast; it stands for ten
             at = MARCH + hour * HOUR_S + 60.0 * m
-            value = correct(_minute(max(shown + rng.normal(0.0, u_minute / sqrt(4.0)), 0.0), rh_seen)).values[1]
+            value = correct(_minute(max(shown + rng.normal(0.0, u_minute / sqrt(10.0)), 0.0), rh_seen)).values[1]
             assert value.u is not None
             assert value.u_random is not None
-            random = value.u_random / sqrt(4.0)
+            random = value.u_random / sqrt(10.0)
             common = sqrt(value.u**2 - value.u_random**2)
             figure = replace(value, u=hypot(common, random), u_random=random)
-            hourly.add(Sample(at, 240.0, 240.0, 0.0, 1, (), {"pm2_5": figure}))
+            hourly.add(Sample(at, 600.0, 600.0, 0.0, 1, (), {"pm2_5": figure}))
         figure_of_hour = hourly.due(MARCH + (hour + 1) * HOUR_S)[0].figures["pm2_5"]
         assert figure_of_hour.mean is not None
         assert figure_of_hour.u is not None
