@@ -7,7 +7,7 @@ import logging
 import os
 import signal
 import sys
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from pathlib import Path
 from threading import Event
 from typing import Any
@@ -25,7 +25,7 @@ from motekeep.edges.login import BrokerSettings, Tls
 from motekeep.edges.ports import Clock, JournalWriter, Line
 from motekeep.edges.serial_line import open_line
 from motekeep.edges.shelf import Shelf
-from motekeep.edges.systemd import ServiceManager
+from motekeep.edges.systemd import ServiceManager, secret_file
 from motekeep.errors import ConfigError
 from motekeep.instant import Instant
 from motekeep.loops.backoff import Backoff
@@ -40,9 +40,10 @@ from motekeep.loops.reader import Reader, ReaderSettings
 from motekeep.loops.recorder import Recorder, RecorderSettings
 from motekeep.loops.rows import RowSettings
 from motekeep.loops.supervisor import Hand, Supervisor
+from motekeep.measure.hourly import HOUR_S, WINDOW_HOURS
 from motekeep.measure.interval import Climate
 from motekeep.message.compose import Place
-from motekeep.message.documents import health_offline
+from motekeep.message.documents import ReadingDocument, health_offline
 from motekeep.message.health import Life
 from motekeep.message.topics import Topics
 from motekeep.pipeline import Pipeline, SensorSetup
@@ -51,6 +52,8 @@ from motekeep.wire.dialects import DIALECTS
 log = structlog.get_logger()
 
 PRUNE_EVERY_S = 3600.0
+ROWS_A_PAGE = 200  # some 100 kB at a time
+BUSY_S = 60.0  # checking a journal goes on in steps of less than a second; a minute more is asked for with each
 CONFIG_LOOK_S = 10.0
 WILL_DELAY_S = 10  # forgives a link that is back at once; from afar ten seconds more are nothing
 
@@ -80,23 +83,35 @@ def _climate_max_age_s(sensor: Sensor) -> float:
 
 
 class Daemon:
-    """Everything of one configuration, wired. `run` returns the exit code once `stop` is set."""
+    """Everything of one configuration, wired. `run` returns the exit code once `stop` is set.
 
-    def __init__(self, config: Config, clock: Clock, stop: Event, alive: Callable[[], None]) -> None:
+    `alive` is called every second while every loop makes progress, `busy` now and then while a large journal is checked.
+    """
+
+    def __init__(
+        self,
+        config: Config,
+        clock: Clock,
+        stop: Event,
+        alive: Callable[[], None] = lambda: None,
+        busy: Callable[[], None] = lambda: None,
+    ) -> None:
         now = clock.now()
         place = Place(config.site, config.gateway)
         topics = Topics(config.broker.root, config.site, config.gateway)
         names = [sensor.name for sensor in config.sensor]
         self._clock = clock
-        self._alive = alive
+        self._busy = busy
         self._intake = intake = Intake(Pipeline(place, config.interval, sensor_setups(config), now))
         self._journal = LateJournal(str(config.store.path))
+        client_id = f"motekeep-{config.site}-{config.gateway}"
+        offline = health_offline(config.site, config.gateway, now.boot_id).json_text()
         self._publisher = Publisher(
             _publisher_settings(config),
             topics,
             names,
             journal=self._journal,
-            broker=MqttBroker(_broker_settings(config, topics, now), clock),
+            broker=MqttBroker(broker_settings(config, client_id, (topics.health, offline)), clock),
             clock=clock,
             stop=stop,
             farewell=lambda at: health_offline(config.site, config.gateway, at.boot_id).json_text(),
@@ -136,9 +151,23 @@ class Daemon:
     def _open_journal(self, config: Config, topics: Topics) -> JournalWriter:
         store = config.store
         settings = JournalSettings(store.path, topics, store.keep_days, store.max_bytes, store.clock_wait)
-        journal = Journal(settings, self._clock, self._alive)
+        journal = Journal(settings, self._clock, self._busy)
+        for sensor in config.sensor:
+            self._intake.remember(sensor.name, _last_readings(journal, sensor.name, config.interval))
         self._journal.attach(journal.reader())
         return journal
+
+
+def _last_readings(journal: Journal, sensor: str, interval_s: int) -> Iterator[ReadingDocument]:
+    """The readings that hourly values may still be made of, from the journal."""
+    reader = journal.reader()
+    end = journal.next_seq(sensor)
+    first = max(end - int(WINDOW_HOURS * HOUR_S / interval_s), 1)
+    while rows := reader.stored(sensor, first, end, ROWS_A_PAGE):
+        for row in rows:
+            yield ReadingDocument.model_validate_json(row.body)
+        first = rows[-1].seq + 1
+    reader.close()
 
 
 def run(config_path: Path, log_style: str) -> int:
@@ -156,9 +185,8 @@ def run(config_path: Path, log_style: str) -> int:
         return 0
     log.info("daemon.starting", version=__version__, site=config.site, gateway=config.gateway)
     clock = SystemClock(trust_rtc=config.store.trust_rtc)
-    daemon = Daemon(config, clock, stop, lambda: _alive(manager))
-    manager.ready(f"{len(config.sensor)} sensors, broker {config.broker.host}:{config.broker.port}")
-    code = daemon.run()
+    watched = _Watched(manager, f"{len(config.sensor)} sensors, broker {config.broker.host}:{config.broker.port}")
+    code = Daemon(config, clock, stop, watched.alive, watched.busy).run()
     manager.stopping()
     log.info("daemon.stopped", code=code)
     sys.stdout.flush()
@@ -166,8 +194,25 @@ def run(config_path: Path, log_style: str) -> int:
     os._exit(code)
 
 
-def _alive(manager: ServiceManager) -> None:
-    manager.feed_watchdog()
+class _Watched:
+    """What the service manager is told: ready after the first turn that went well, then that we live."""
+
+    def __init__(self, manager: ServiceManager, status: str) -> None:
+        self._manager = manager
+        self._status = status
+        self._ready = False
+
+    def alive(self) -> None:
+        if not self._ready:
+            self._ready = True
+            self._manager.ready(self._status)
+        self._manager.feed_watchdog()
+
+    def busy(self) -> None:
+        if self._ready:
+            self._manager.feed_watchdog()
+        else:
+            self._manager.extend_timeout(BUSY_S)
 
 
 def _wait_for_config(path: Path, stop: Event, manager: ServiceManager) -> Config | None:
@@ -193,17 +238,20 @@ def _publisher_settings(config: Config) -> PublisherSettings:
     return PublisherSettings(RowSettings(config.interval, broker.receipt, broker.late_rate), broker.window)
 
 
-def _broker_settings(config: Config, topics: Topics, now: Instant) -> BrokerSettings:
-    broker = config.broker
+def broker_settings(config: Config, client_id: str, will: tuple[str, str]) -> BrokerSettings:
+    """The broker of a configuration, as a client of that name meets it. Secrets that only the unit's credential folder
+    would hold are read from where the unit loads them."""
+    broker, tls = config.broker, config.broker.tls
+    topics = Topics(broker.root, config.site, config.gateway)
     return BrokerSettings(
         host=broker.host,
         port=broker.port,
-        client_id=f"motekeep-{config.site}-{config.gateway}",
-        will=(topics.health, health_offline(config.site, config.gateway, now.boot_id).json_text()),
+        client_id=client_id,
+        will=will,
         filters=(topics.resend, topics.taken("+")),
         username=broker.username,
-        password_file=broker.password_file,
-        tls=None if broker.tls is None else Tls(broker.tls.ca, broker.tls.cert, broker.tls.key),
+        password_file=None if broker.password_file is None else secret_file(broker.password_file),
+        tls=None if tls is None else Tls(tls.ca, tls.cert, None if tls.key is None else secret_file(tls.key)),
         will_delay_s=WILL_DELAY_S,
     )
 

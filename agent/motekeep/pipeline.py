@@ -139,7 +139,7 @@ class Pipeline:
         self.advance(at)
         sensor = self._sensors[name]
         health = sensor.health
-        health.heard(len(data), at)
+        health.heard(data, at)
         events = sensor.decoder.feed(data)
         if not events:
             return

@@ -12,12 +12,12 @@ from pathlib import Path
 
 import click
 
+from motekeep.app import broker_settings
 from motekeep.config import Config, FileClimate, Sensor
 from motekeep.edges.broker import MqttBroker
 from motekeep.edges.climate import SysfsClimate
 from motekeep.edges.clock import SystemClock
 from motekeep.edges.host import Host
-from motekeep.edges.login import BrokerSettings, Tls
 from motekeep.edges.ports import Connected, Disconnected, SubscriptionRefused
 from motekeep.edges.serial_line import open_line
 from motekeep.errors import BrokerError, ClimateError, PortError
@@ -168,16 +168,9 @@ def _broker(config: Config) -> Iterator[Line]:
     broker = config.broker
     what = f"broker {broker.host}:{broker.port}"
     topics = Topics(broker.root, config.site, config.gateway)
-    settings = BrokerSettings(
-        host=broker.host,
-        port=broker.port,
-        # not the daemon's own name: a second client of one name throws the first one out
-        client_id=f"motekeep-check-{config.site}-{config.gateway}-{os.getpid()}",
-        will=(f"{topics.health}/check", ""),
-        filters=(topics.resend, topics.taken("+")),
-        username=broker.username,
-        password_file=broker.password_file,
-        tls=None if broker.tls is None else Tls(broker.tls.ca, broker.tls.cert, broker.tls.key),
+    # not the daemon's own name: a second client of one name throws the first one out
+    settings = broker_settings(
+        config, f"motekeep-check-{config.site}-{config.gateway}-{os.getpid()}", (f"{topics.health}/check", "")
     )
     link = MqttBroker(settings, SystemClock())
     try:

@@ -148,7 +148,7 @@ class Recorder:
             self._journal.flush(at)
 
     def _post_hours(self, harvest: Harvest) -> None:
-        """The last full hour of each sensor stays retained; an older one, changed by an amendment, must not replace it."""
+        """The last full hour of each sensor stays retained: an older one that was amended must not replace it."""
         for hour in harvest.hours:
             if hour.start >= self._posted_hours.get(hour.sensor, ""):
                 self._posted_hours[hour.sensor] = hour.start
