@@ -2,6 +2,7 @@
 
 from dataclasses import replace
 from math import hypot, sqrt
+from random import Random
 
 import pytest
 from hypothesis import given, settings
@@ -10,6 +11,7 @@ from hypothesis import strategies as st
 from intervals import GROWTH, LAYOUT, LINEAR, channel, correction, interval
 from motekeep.measure.counting import count_variance, garwood, physical_scale
 from motekeep.measure.interval import EMPTY, Climate, Interval
+from motekeep.measure.interval import channel as channel_of
 from motekeep.measure.uncertainty import Sensitivities, Sources, count_uncertainty, propagate, raw_uncertainties
 
 HUMID = Climate(70.0, 12.0, "frame")
@@ -113,9 +115,27 @@ def test_the_exact_interval_holds_its_count_and_grows_with_the_level(n: int, lev
     assert high <= wider[1]
 
 
-def test_a_larger_noise_scale_makes_a_less_certain_figure() -> None:
-    small, large = [raw_uncertainties(_steady(), LAYOUT, scale)[1] for scale in (60.0, 6000.0)]
-    assert large > 3.0 * small
+def test_air_that_changes_within_the_minute_is_not_taken_for_noise_where_the_scale_is_known() -> None:
+    """A slow rise has a wide spread and hardly any step from frame to frame; counting says how much of it is noise."""
+    made = interval()
+    rising = replace(made, mass=tuple([replace(channel(m.mean, 8.0, lag1=0.98), step=0.5) for m in made.mass]))
+    blind, small, large = [raw_uncertainties(rising, LAYOUT, scale)[1] for scale in (None, 10.0, 100.0)]
+    assert small < large < 0.5 * blind
+    assert small >= sqrt(0.5 / 60.0)
+
+
+def test_a_spread_smaller_than_counting_allows_is_believed() -> None:
+    """Firmware that gives coarse particles little weight prints a PM10 that is quieter than its coarse counts."""
+    u = raw_uncertainties(_steady(), LAYOUT, 60.0)
+    assert u == pytest.approx(raw_uncertainties(_steady(), LAYOUT, None))
+
+
+def test_a_few_frames_are_as_sure_as_counting_allows_and_no_surer() -> None:
+    """One coarse pulse of 5 to 10 um is 3.05 ug/m3: five frames that agree by chance must not hide that."""
+    made = interval()
+    short = replace(made, mass=tuple([channel(m.mean, 0.0, 5) for m in made.mass]))
+    short = replace(short, counts=tuple([replace(c, n=5) for c in made.counts]))
+    assert raw_uncertainties(short, LAYOUT, 60.0)[2] > 3.0
 
 
 def _steady() -> Interval:
@@ -136,9 +156,8 @@ def test_without_a_scale_the_mean_respects_autocorrelation() -> None:
     free = replace(made, mass=tuple([channel(12.0, 2.0) for _ in made.mass]))
     tied = replace(made, mass=tuple([channel(12.0, 2.0, lag1=0.8) for _ in made.mass]))
     u_free, u_tied = [raw_uncertainties(i, LAYOUT, None)[1] for i in (free, tied)]
-    print_step = 1.0 / sqrt(12.0 * 60.0)
-    assert u_free == pytest.approx(hypot(2.0 / sqrt(60.0), print_step))
-    assert u_tied == pytest.approx(hypot(2.0 * 3.0 / sqrt(60.0), print_step))
+    assert u_free == pytest.approx(2.0 / sqrt(60.0))
+    assert u_tied == pytest.approx(2.0 * 3.0 / sqrt(60.0))
 
 
 def test_a_print_that_does_not_move_is_known_to_its_step_only() -> None:
@@ -147,13 +166,25 @@ def test_a_print_that_does_not_move_is_known_to_its_step_only() -> None:
     assert raw_uncertainties(still, LAYOUT, None)[1] == pytest.approx(1.0 / sqrt(12.0))
 
 
+def test_noise_takes_the_rounding_of_the_print_out_of_the_mean() -> None:
+    """Numbers drawn, rounded and averaged: what rounding leaves is no more than stated, and stated is not far above."""
+    random = Random(5)
+    for sigma, most in ((0.05, 0.30), (0.4, 0.05), (1.0, 0.005)):
+        squares, stated = 0.0, 0.0
+        for _ in range(300):
+            centre = 10.0 + random.random()
+            drawn = [random.gauss(centre, sigma) for _ in range(60)]
+            printed = channel_of([float(round(x)) for x in drawn])
+            squares += (printed.mean - sum(drawn) / 60.0) ** 2
+            mass = replace(printed, lag1=0.0)
+            made = replace(interval(), mass=(mass, mass, mass))
+            stated += raw_uncertainties(made, LAYOUT, None)[0] ** 2 - mass.standard_error**2
+        assert sqrt(stated / 300) <= most + 0.1 * sigma
+        if sigma < 0.1:
+            assert sqrt(squares / 300) == pytest.approx(sqrt(stated / 300), rel=0.15)
+
+
 def test_a_censored_count_is_no_model_of_counting() -> None:
     made = interval(censored=2)
     assert raw_uncertainties(made, LAYOUT, 60.0) == raw_uncertainties(made, LAYOUT, None)
     assert count_uncertainty(EMPTY, 60.0) == 0.0
-
-
-def test_coarse_mass_rests_on_few_pulses_and_is_told_so() -> None:
-    """One pulse of 5 to 10 um in a minute is 3.05 ug/m3 of PM10: at 60 a pulse its mean cannot be surer than that."""
-    u = raw_uncertainties(_steady(), LAYOUT, 60.0)
-    assert u[2] > 3.0 > u[1]

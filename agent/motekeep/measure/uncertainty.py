@@ -16,7 +16,7 @@ intervals of an hour. The residual is: what the fit left over is aerosol that di
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from math import hypot, sqrt
+from math import exp, hypot, pi, sqrt
 
 from motekeep.measure.closure import Assumptions, bin_variances, mass_from_counts
 from motekeep.measure.counting import count_variance
@@ -28,6 +28,9 @@ K = 1
 
 # Where the mass of a sensor and that of its counts are further apart than this, counts do not explain its mass.
 FARTHEST = 4.0
+
+# With fewer frames their own spread tells too little.
+FEW = 10
 
 # Only the counting part of a mass from counts is wanted here.
 COUNTING_ONLY = Assumptions(u_density=0.0, u_flow=0.0, u_diameter=0.0)
@@ -95,9 +98,10 @@ def propagate(c: Sensitivities, u: Sources, residual: float) -> Budget:
 def raw_uncertainties(interval: Interval, layout: Layout, scale: float | None) -> tuple[float, ...]:
     """Standard uncertainty of the mean of each mass channel, from counting and from the step of its print.
 
-    With a noise scale: that of the mass which the counts make, taken over relative to the sensor's own mass, and no
-    less than the noise which neighbouring frames show. Without one, or where counts are absent or censored: the
-    standard error of the mean that respects autocorrelation, which also takes real changes of the air for noise.
+    The standard error of the mean that respects autocorrelation is what the frames themselves tell. It takes real
+    changes of the air for noise, so with a noise scale it is held to what counting allows at most: the noise of the
+    mass that the counts make, taken over relative to the sensor's own mass. That is an upper bound, since firmware may
+    trust large particles less than the spheres they are. It is never less than the noise of neighbouring frames.
     """
     modelled: dict[str, tuple[float, float]] = {}
     counts = interval.counts
@@ -126,16 +130,20 @@ def _noise(channel: Channel, modelled: tuple[float, float] | None) -> float:
         return channel.standard_error
     mass, u = modelled
     ratio = channel.mean / mass if mass > 0.0 else 1.0
-    scaled = u * min(max(ratio, 1.0 / FARTHEST), FARTHEST)
-    return max(scaled, sqrt(channel.step / channel.n))
+    most = u * min(max(ratio, 1.0 / FARTHEST), FARTHEST)
+    if channel.n < FEW:
+        return most
+    return max(min(channel.standard_error, most), sqrt(channel.step / channel.n))
 
 
 def _print_step(channel: Channel, resolution: float) -> float:
-    """Rounding to the printed step, rectangular (JCGM 100:2008, F.2.2.1, from memory).
+    """What rounding to the printed step leaves in the mean.
 
-    It averages out where noise moves the print by half a step or more, and stays whole where the print hardly moves.
+    Rectangular, step / sqrt(12) (JCGM 100:2008, F.2.2.1, from memory), while the print does not move. Noise under the
+    print takes it out of the mean with exp(-2 pi^2 sigma^2 / step^2), the first term of the mean of a rounded Gaussian
+    (Widrow and Kollar 2008, Quantization Noise, from memory); sigma^2 is the printed variance less that of rounding.
     """
-    if not channel.n:
+    if not channel.n or not resolution:
         return 0.0
-    one = resolution / sqrt(12.0)
-    return one / sqrt(channel.n) if channel.sd >= resolution / 2.0 else one
+    beneath = max((channel.sd / resolution) ** 2 - 1.0 / 12.0, 0.0)
+    return resolution / sqrt(12.0) * exp(-2.0 * pi**2 * beneath)
