@@ -202,14 +202,11 @@ class Subscriber:
 class DaemonProcess:
     """`motekeep run`, or the same daemon on a faster clock, with its log."""
 
-    def __init__(
-        self, config: Path, log: Path, *, speed: float | None = None, environment: Mapping[str, str] | None = None
-    ) -> None:
+    def __init__(self, program: Sequence[str], config: Path, log: Path, environment: Mapping[str, str]) -> None:
         self.log = log
-        program = [str(MOTEKEEP), "run"] if speed is None else [sys.executable, str(FAST_DAEMON), "--speed", str(speed)]
         with log.open("ab") as out:
             self.process = subprocess.Popen(
-                [*program, "--config", str(config)], stdout=out, stderr=out, env={**os.environ, **(environment or {})}
+                [*program, "--config", str(config)], stdout=out, stderr=out, env={**os.environ, **environment}
             )
 
     def events(self, name: str) -> list[dict[str, object]]:
@@ -276,9 +273,12 @@ class Gateway:
             )
         )
 
-    def start_daemon(self, environment: Mapping[str, str] | None = None) -> DaemonProcess:
+    def start_daemon(self, *, command: Path = MOTEKEEP, environment: Mapping[str, str] | None = None) -> DaemonProcess:
         log = self.folder / f"motekeep-{next(self._logs)}.log"
-        daemon = DaemonProcess(self.config, log, speed=self.speed, environment=environment)
+        program = [str(command), "run"]
+        if self.speed is not None:
+            program = [sys.executable, str(FAST_DAEMON), "--speed", str(self.speed)]
+        daemon = DaemonProcess(program, self.config, log, environment or {})
         self._stack.callback(daemon.kill)
         return daemon
 
