@@ -1,4 +1,4 @@
-"""The publisher against a simulated broker and a journal in memory: what arrives, in which order, and what is believed."""
+"""The publisher against a simulated broker and a journal in memory: what arrives, in what order, what is believed."""
 
 import json
 

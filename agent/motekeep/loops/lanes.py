@@ -3,8 +3,8 @@
 Owns the choice of the next late batch, the order, and the rules below. Pure but for its own state: time, rows and
 answers come in with the calls.
 
-A refused topic is held: one probe at a time, after 1 s, then twice as long each time, up to 300 s. A pass ends it, and so
-does a new connection, unless the last one ended by a refusal: some brokers hang up after each.
+A refused topic is held: one probe at a time, after 1 s, then twice as long each time, up to 300 s. A pass ends it, and
+so does a new connection, unless the last one ended by a refusal: some brokers hang up after each.
 A refused or fatal batch is taken apart: its rows go alone until each has passed or was struck.
 A row is struck when the broker refuses it alone, or when it was the oldest unanswered message of a connection that had
 worked and that the broker's side ended. It is set aside at three strikes, if others of its topic have passed since the
@@ -80,10 +80,12 @@ def size(text: str) -> int:
 
 @dataclass(slots=True)
 class Lane:
-    """One sensor. Rows up to `live_after` and `late_after` have been looked at by the live and the late way."""
+    """One sensor. Rows up to `live_after` and `late_after` have been looked at by the live and the late way; those up to
+    `live_from` are the late way's, however young."""
 
     sensor: str
     newest: int = 0
+    live_from: int = 0
     live_after: int = 0
     late_after: int = 0
     live: Hold = field(default_factory=Hold)

@@ -4,7 +4,7 @@ Owns which row goes by which way and when, and what an answer means for it in th
 what happens to a row that does not get through stands in `lanes`.
 """
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 
 import structlog
@@ -44,8 +44,9 @@ class Rows:
         sensors: Sequence[str],
         outbox: Outbox,
         journal: JournalReader,
+        others: Mapping[str, Callable[[bytes], None]] | None = None,
     ) -> None:
-        self.inbox = Inbox(topics, sensors, self._taken)
+        self.inbox = Inbox(topics, sensors, self._taken, others)
         self._settings = settings
         self._topics = topics
         self._outbox = outbox
@@ -63,7 +64,7 @@ class Rows:
         for lane in self._lanes.values():
             lane.restart()
             lane.newest = self._newest(lane)
-            lane.live_after = max(lane.newest - look_back, 0)
+            lane.live_from = lane.live_after = max(lane.newest - look_back, 0)
 
     def forgive(self) -> None:
         """The broker may have changed its mind: no topic is held."""
@@ -114,12 +115,13 @@ class Rows:
     def _send_backlog(self, now: Instant) -> bool:
         """One late message of the next sensor that has one."""
 
-        def ready(row: Row) -> bool:
-            return not self._is_live(row, now)
-
         for sensor in self._turns:
             lane, topic = self._lanes[sensor], self._topics.late(sensor)
-            most = self._outbox.pace.rows
+            most, live_from = self._outbox.pace.rows, lane.live_from
+
+            def ready(row: Row, live_from: int = live_from) -> bool:
+                return row.seq <= live_from or not self._is_live(row, now)
+
             while not lane.idle and not self._late_held(lane, topic, now.boot_s):
                 after_seq = lane.late_after
                 page = self._journal.waiting(sensor, after_seq, most)
