@@ -40,6 +40,7 @@ from motekeep.loops.reader import Reader, ReaderSettings
 from motekeep.loops.recorder import Recorder, RecorderSettings
 from motekeep.loops.rows import RowSettings
 from motekeep.loops.supervisor import Hand, Supervisor
+from motekeep.measure.climate import from_message
 from motekeep.measure.hourly import HOUR_S, WINDOW_HOURS
 from motekeep.measure.interval import Climate
 from motekeep.message.compose import Place
@@ -85,7 +86,7 @@ def _climate_max_age_s(sensor: Sensor) -> float:
 class Daemon:
     """Everything of one configuration, wired. `run` returns the exit code once `stop` is set.
 
-    `alive` is called every second while every loop makes progress, `busy` now and then while a large journal is checked.
+    `alive` is called every second while every loop makes progress, `busy` while a large journal is being checked.
     """
 
     def __init__(
@@ -115,6 +116,7 @@ class Daemon:
             clock=clock,
             stop=stop,
             farewell=lambda at: health_offline(config.site, config.gateway, at.boot_id).json_text(),
+            others=_climate_topics(config, intake, clock),
         )
         self._recorder = Recorder(
             RecorderSettings(place, topics, config.health.every, Life(0, now.boot_s, __version__)),
@@ -248,7 +250,7 @@ def broker_settings(config: Config, client_id: str, will: tuple[str, str]) -> Br
         port=broker.port,
         client_id=client_id,
         will=will,
-        filters=(topics.resend, topics.taken("+")),
+        filters=(topics.resend, topics.taken("+"), *_climate_sensors(config)),
         username=broker.username,
         password_file=None if broker.password_file is None else secret_file(broker.password_file),
         tls=None if tls is None else Tls(tls.ca, tls.cert, None if tls.key is None else secret_file(tls.key)),
@@ -265,6 +267,27 @@ def _reader(sensor: Sensor, intake: Intake, clock: Clock, stop: Event) -> Reader
         return open_line(port, baud, dialect.longest)
 
     return Reader(settings, intake, opener, clock, stop)
+
+
+def _climate_sensors(config: Config) -> dict[str, list[str]]:
+    """The topics that bring climate, each with the sensors that it is for."""
+    sensors: dict[str, list[str]] = {}
+    for sensor in config.sensor:
+        if isinstance(sensor.climate, TopicClimate):
+            sensors.setdefault(sensor.climate.topic, []).append(sensor.name)
+    return sensors
+
+
+def _climate_topics(config: Config, intake: Intake, clock: Clock) -> dict[str, Callable[[bytes], None]]:
+    def taker(names: list[str]) -> Callable[[bytes], None]:
+        def take(payload: bytes) -> None:
+            climate = from_message(payload, "mqtt")
+            for name in names:
+                intake.climate(name, climate, clock.now())
+
+        return take
+
+    return {topic: taker(names) for topic, names in _climate_sensors(config).items()}
 
 
 def _climate_feed(config: Config, intake: Intake, now: Instant) -> ClimateFeed:

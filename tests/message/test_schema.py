@@ -4,7 +4,8 @@ import json
 
 import jsonschema
 import pytest
-from motekeep.message.documents import HealthDocument, ReadingDocument, health_will
+
+from motekeep.message.documents import HealthDocument, ReadingDocument, health_offline
 from motekeep.message.schema import CHANNELS, asyncapi, json_schemas
 from motekeep.message.topics import Topics
 
@@ -30,7 +31,7 @@ def test_a_reading_of_another_shape_does_not_meet_the_schema() -> None:
 
 
 def test_the_will_is_a_health_document_of_the_same_schema() -> None:
-    will = json.loads(health_will("quarry", "east-gate", "5f0c", 41).json_text())
+    will = json.loads(health_offline("quarry", "east-gate", "5f0c").json_text())
     assert will["status"] == "offline"
     jsonschema.validate(will, json_schemas()["health"])
     HealthDocument.model_validate(will)

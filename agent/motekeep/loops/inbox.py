@@ -32,9 +32,18 @@ class Resend:
 
 
 class Inbox:
-    """`taken` is called with sensor and sequence number for every receipt; it says what is wrong with it, if so."""
+    """`taken` is called with sensor and sequence number for every receipt; it says what is wrong with it, if so.
 
-    def __init__(self, topics: Topics, sensors: Sequence[str], taken: Callable[[str, int], str | None]) -> None:
+    `others` are topics outside of our own tree with what reads them; such a reader raises ValueError for a bad payload.
+    """
+
+    def __init__(
+        self,
+        topics: Topics,
+        sensors: Sequence[str],
+        taken: Callable[[str, int], str | None],
+        others: Mapping[str, Callable[[bytes], None]] | None = None,
+    ) -> None:
         self.resends: deque[Resend] = deque()
         self.bad = 0
         self._sensors = frozenset(sensors)
@@ -42,6 +51,7 @@ class Inbox:
         self._readers: Mapping[str, Callable[[Received], str | None]] = {
             topics.resend: self._read_resend,
             **{topics.taken(sensor): self._reader_of_taken(sensor) for sensor in sensors},
+            **{topic: self._reader_of_present(read) for topic, read in (others or {}).items()},
         }
 
     def receive(self, message: Received) -> bool:
@@ -57,11 +67,24 @@ class Inbox:
             fault = error.errors(include_url=False, include_input=False)[0]
             where = ".".join(str(part) for part in fault["loc"])
             why = f"{where}: {fault['msg']}" if where else fault["msg"]
+        except ValueError as error:
+            why = str(error)
         return self._refuse(message, why) if why else True
 
     def forget(self) -> None:
         """The connection is gone, and with it whoever asked; they ask again if they still want it."""
         self.resends.clear()
+
+    @staticmethod
+    def _reader_of_present(read: Callable[[bytes], None]) -> Callable[[Received], str | None]:
+        """For what only counts while it is news: a retained message may be of any age, and is passed over."""
+
+        def reader(message: Received) -> str | None:
+            if not message.retained:
+                read(message.payload)
+            return None
+
+        return reader
 
     def _read_resend(self, message: Received) -> str | None:
         request = ResendRequest.model_validate_json(message.payload)

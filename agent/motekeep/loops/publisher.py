@@ -5,7 +5,7 @@ goodbye. Knows the journal and the broker by their ports. A row counts as delive
 code, or by an archive's receipt, never by what the client library believes of its connection.
 """
 
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from threading import Event
@@ -55,7 +55,7 @@ class Publisher:
     """`run` returns within 2 s of `stop` being set and `wake` called.
 
     Whoever commits to the journal calls `wake`; whoever has a new retained document calls `post`. `farewell` makes the
-    last health document.
+    last health document. `others` are topics outside of our own tree, with what takes their payloads.
     """
 
     def __init__(  # noqa: PLR0913 (the ports that it joins, each injected)
@@ -69,6 +69,7 @@ class Publisher:
         clock: Clock,
         stop: Event,
         farewell: Callable[[Instant], str],
+        others: Mapping[str, Callable[[bytes], None]] | None = None,
     ) -> None:
         now = clock.now()
         self._settings = settings
@@ -80,7 +81,7 @@ class Publisher:
         self._ledger = LinkLedger(now)
         self._outbox = Outbox(broker, self._ledger, settings.window)
         self._papers = Papers(self._outbox, journal)
-        self._rows = Rows(settings.rows, topics, sensors, self._outbox, journal)
+        self._rows = Rows(settings.rows, topics, sensors, self._outbox, journal, others)
         self._dropped_by_us = False
         self._ended_by_refusal = False
         self._fresh = True

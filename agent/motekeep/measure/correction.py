@@ -106,6 +106,8 @@ class DocumentCorrection:
             count_censored=smallest.censored > 0,
         )
         run = Run(air, fault, count_uncertainty(smallest, self._scale), [PASS], [])
+        if not self._document.fits(interval.revision):
+            run.note(SUSPECT, "calibration-of-other-revision")
         start = interval.start
         if start.trusted and not self._document.valid_at(start.utc):
             early = start.utc < self._document.valid_from

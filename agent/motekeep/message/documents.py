@@ -9,9 +9,7 @@ from typing import Annotated, Literal
 from pydantic import BaseModel, ConfigDict, Field
 
 Clock = Literal["synced", "corrected", "bounded", "unsynced"]
-Status = Literal[
-    "normal", "maintenance_required", "out_of_specification", "function_check", "failure", "offline"
-]
+Status = Literal["normal", "maintenance_required", "out_of_specification", "function_check", "failure", "offline"]
 Flag = Annotated[int, Field(description="QARTOD: 1 pass, 2 not evaluated, 3 suspect, 4 fail, 9 missing")]
 Time = Annotated[str, Field(json_schema_extra={"format": "date-time"}, description="RFC 3339 UTC")]
 
@@ -86,9 +84,7 @@ class ReadingDocument(Document):
     reasons: list[str]
 
 
-Category = Literal[
-    "good", "moderate", "unhealthy for sensitive groups", "unhealthy", "very unhealthy", "hazardous"
-]
+Category = Literal["good", "moderate", "unhealthy for sensitive groups", "unhealthy", "very unhealthy", "hazardous"]
 
 
 class HourlyValueDocument(Document):
@@ -242,8 +238,7 @@ class LateDocument(Document):
     readings: list[ReadingDocument] = Field(max_length=100)
 
 
-def health_will(site: str, gateway: str, boot: str, life: int) -> HealthDocument:
-    """What the broker says for us when we are gone; boot and life tell a late will from a current one."""
-    return HealthDocument(
-        schema="motekeep/health/1", site=site, gateway=gateway, status="offline", boot=boot, life=life
-    )
+def health_offline(site: str, gateway: str, boot: str) -> HealthDocument:
+    """What the broker says for us when we are gone, and what we say when we leave. `boot` tells a late will of an
+    earlier boot from a current one."""
+    return HealthDocument(schema="motekeep/health/1", site=site, gateway=gateway, status="offline", boot=boot)
