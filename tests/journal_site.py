@@ -1,15 +1,17 @@
 """A gateway for the journal's tests: makes readings, keeps a journal, and can lose its power.
 
-Numbers are our own invention. `power_cut` leaves the open connection where it is and carries on with a copy of the files
-as they are on the disk at that moment, which is what a killed process leaves behind.
+Numbers are our own invention. `power_cut` carries on with a copy of the files as they are on the disk at that moment, the
+log not checkpointed: what a killed process leaves behind.
 """
 
 import shutil
+import tempfile
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass, field
 from pathlib import Path
 
 from clocks import FakeClock
-
 from motekeep.edges.journal import Journal, JournalSettings
 from motekeep.edges.journal_reader import Reader
 from motekeep.edges.ports import Batch, NewReading, Notice, Row
@@ -19,6 +21,15 @@ from motekeep.message.topics import Topics
 
 TOPICS = Topics("motekeep", "quarry", "east-gate")
 MIB = 1 << 20
+
+
+@contextmanager
+def ram_folder() -> Iterator[Path]:
+    """A folder in memory where there is one: hundreds of durable commits then take no time. What a power cut or a full
+    disk does is tested on real file systems, in `test_journal_disk.py` and `tools/bench/powercut.py`."""
+    shared = Path("/dev/shm")
+    with tempfile.TemporaryDirectory(prefix="motekeep-", dir=shared if shared.is_dir() else None) as folder:
+        yield Path(folder)
 
 
 def document(sensor: str, seq: int, start: float, **changes: object) -> ReadingDocument:
@@ -62,6 +73,8 @@ class Site:
     max_bytes: int = 16 * MIB
     keep_days: int = 400
     clock_wait_s: float = 900.0
+    step_s: int = 60
+    pad: str = ""
     clock: FakeClock = field(default_factory=FakeClock)
     cuts: int = 0
 
@@ -80,23 +93,30 @@ class Site:
         return journal
 
     def reading(self, sensor: str, **changes: object) -> NewReading:
-        """The reading of the minute that has just passed."""
+        """The reading of the minute (or what `step_s` says) that has just passed."""
         at = self.clock.now()
         clock = "synced" if at.trusted else "unsynced"
-        start = at.utc - 60
-        base = {"clock": clock, "boot": at.boot_id, "boot_s": round(at.boot_s - 60, 1)}
+        start = at.utc - self.step_s
+        base: dict[str, object] = {
+            "clock": clock,
+            "boot": at.boot_id,
+            "boot_s": round(at.boot_s - self.step_s, 1),
+            "seconds": self.step_s,
+        }
+        if self.pad:
+            base["reasons"] = [self.pad]
         made = document(sensor, self.journal.next_seq(sensor), start, **(base | changes))
         return new_reading(made, start)
 
     def minute(self, *notices: Notice, keep: dict[str, str] | None = None, **changes: object) -> list[NewReading]:
-        self.clock.advance(60)
+        self.clock.advance(self.step_s)
         readings = [self.reading(sensor, **changes) for sensor in self.sensors]
         self.journal.commit(Batch(readings, notices, keep or {}), self.clock.now())
         return readings
 
-    def minutes(self, count: int) -> None:
+    def minutes(self, count: int, **changes: object) -> None:
         for _ in range(count):
-            self.minute()
+            self.minute(**changes)
 
     def waiting(self, sensor: str = "north", limit: int = 100_000) -> list[Row]:
         return self.reader.waiting(sensor, 0, limit)

@@ -1,21 +1,28 @@
 """The journal over a real SQLite file: what is committed is there, in order, once, and for ever under its number."""
 
 import sqlite3
+from collections.abc import Iterator
 from dataclasses import replace
 from pathlib import Path
 
 import pytest
-from journal_site import TOPICS, Site
 
+from journal_site import TOPICS, Site, ram_folder
 from motekeep.edges.journal import Journal, JournalSettings
-from motekeep.edges.journal_schema import Sizes, open_writer
+from motekeep.edges.journal_schema import LADDER, Sizes, open_writer
 from motekeep.edges.ports import Batch, Notice
 from motekeep.errors import StoreError
 
 
 @pytest.fixture
-def site(tmp_path: Path) -> Site:
-    return Site(tmp_path / "a")
+def folder() -> Iterator[Path]:
+    with ram_folder() as path:
+        yield path
+
+
+@pytest.fixture
+def site(folder: Path) -> Site:
+    return Site(folder / "a")
 
 
 def test_a_committed_reading_waits_with_the_text_that_was_committed(site: Site) -> None:
@@ -194,8 +201,8 @@ def test_a_reading_whose_text_rotted_is_never_given_and_is_counted(site: Site) -
     assert [r.seq for r in site.reader.stored("north", 1, 3, 10)] == [1, 3]
 
 
-def test_delivered_readings_are_kept_their_days_and_deleted_after(tmp_path: Path) -> None:
-    site = Site(tmp_path / "a", keep_days=2)
+def test_delivered_readings_are_kept_their_days_and_deleted_after(folder: Path) -> None:
+    site = Site(folder / "a", keep_days=2)
     site.minutes(250)
     site.deliver_all()
     site.minutes(250)
@@ -207,8 +214,8 @@ def test_delivered_readings_are_kept_their_days_and_deleted_after(tmp_path: Path
     assert site.numbers() == list(range(251, 501))
 
 
-def test_waiting_and_sent_readings_are_never_pruned_however_old(tmp_path: Path) -> None:
-    site = Site(tmp_path / "a", keep_days=1)
+def test_waiting_and_sent_readings_are_never_pruned_however_old(folder: Path) -> None:
+    site = Site(folder / "a", keep_days=1)
     site.minutes(5)
     site.reader.mark_sent(site.waiting()[:2])
     site.reader.mark_delivered(site.waiting()[:1])
@@ -217,8 +224,8 @@ def test_waiting_and_sent_readings_are_never_pruned_however_old(tmp_path: Path) 
     assert [r.seq for r in site.reader.stored("north", 1, 9, 9)] == [1, 2, 4, 5]
 
 
-def test_nothing_is_pruned_while_the_clock_is_not_trusted(tmp_path: Path) -> None:
-    site = Site(tmp_path / "a", keep_days=1)
+def test_nothing_is_pruned_while_the_clock_is_not_trusted(folder: Path) -> None:
+    site = Site(folder / "a", keep_days=1)
     site.minutes(5)
     site.deliver_all()
     site.clock.advance(30 * 86400)
@@ -232,14 +239,14 @@ def test_a_second_process_is_refused_the_journal(site: Site) -> None:
         Journal(JournalSettings(site.path, TOPICS), site.clock)
 
 
-def test_a_missing_folder_is_told_with_what_to_do(tmp_path: Path, site: Site) -> None:
+def test_a_missing_folder_is_told_with_what_to_do(folder: Path, site: Site) -> None:
     with pytest.raises(StoreError, match="make that folder") as raised:
-        Journal(JournalSettings(tmp_path / "nowhere" / "journal.db", TOPICS), site.clock)
+        Journal(JournalSettings(folder / "nowhere" / "journal.db", TOPICS), site.clock)
     assert raised.value.retry
 
 
-def test_a_database_of_another_program_is_refused_and_left_as_it_was(tmp_path: Path, site: Site) -> None:
-    other = tmp_path / "other.db"
+def test_a_database_of_another_program_is_refused_and_left_as_it_was(folder: Path, site: Site) -> None:
+    other = folder / "other.db"
     connection = sqlite3.connect(other)
     connection.execute("CREATE TABLE theirs (x)")
     connection.close()
@@ -262,7 +269,9 @@ def test_a_journal_of_a_newer_version_is_refused(site: Site) -> None:
 
 def test_the_file_is_opened_with_the_settings_that_durability_rests_on(site: Site) -> None:
     connection = site.journal._file.connection
-    values = {n: connection.execute(f"PRAGMA {n}").fetchone()[0] for n in ("journal_mode", "synchronous", "auto_vacuum")}
+    values = {
+        n: connection.execute(f"PRAGMA {n}").fetchone()[0] for n in ("journal_mode", "synchronous", "auto_vacuum")
+    }
     assert values == {"journal_mode": "wal", "synchronous": 2, "auto_vacuum": 0}
 
 
@@ -292,13 +301,28 @@ def test_database_log_and_ballast_together_stay_within_the_limit(max_bytes: int)
     assert sizes.max_pages * 1024 > max_bytes // 2
 
 
-def test_a_ladder_step_that_fails_leaves_the_version_before(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    path = tmp_path / "journal.db"
+def add_a_step(monkeypatch: pytest.MonkeyPatch, *statements: str) -> None:
+    monkeypatch.setattr("motekeep.edges.journal_schema.LADDER", (*LADDER, statements))
+    monkeypatch.setattr("motekeep.edges.journal_schema.VERSION", len(LADDER) + 1)
+
+
+def test_a_journal_of_an_older_version_is_brought_up_with_all_it_holds(
+    site: Site, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    site.minutes(3)
+    site.die()
+    add_a_step(monkeypatch, "CREATE TABLE later (x TEXT)")
+    site.start()
+    assert site.numbers() == [1, 2, 3]
+    assert site.journal._file.connection.execute("PRAGMA user_version").fetchone()[0] == len(LADDER) + 1
+    site.restart()
+    assert site.journal.state().degraded is None
+
+
+def test_a_ladder_step_that_fails_leaves_the_version_before(folder: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    path = folder / "journal.db"
     open_writer(path, Sizes(1 << 20)).close()
-    schema = "motekeep.edges.journal_schema"
-    ladder = (("SELECT 1",), ("ALTER TABLE kept ADD COLUMN extra TEXT", "nonsense"))
-    monkeypatch.setattr(f"{schema}.LADDER", ladder)
-    monkeypatch.setattr(f"{schema}.VERSION", 2)
+    add_a_step(monkeypatch, "ALTER TABLE kept ADD COLUMN extra TEXT", "nonsense")
     with pytest.raises(sqlite3.OperationalError):
         open_writer(path, Sizes(1 << 20))
     connection = sqlite3.connect(path)

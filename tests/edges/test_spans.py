@@ -70,6 +70,12 @@ def test_coarsening_only_adds_numbers_and_keeps_to_its_limit(
     assert numbers(spans) >= plain
 
 
+def test_an_empty_range_holds_nothing_and_takes_nothing_out() -> None:
+    spans = Spans([(1, 5)])
+    assert len(spans.within(4, 2)) == len(spans.gaps(4, 2)) == spans.remove(4, 2) == 0
+    assert str(spans) == "1-5"
+
+
 def test_a_copy_does_not_follow_the_original() -> None:
     spans = Spans([(1, 5)])
     twin = spans.copy()

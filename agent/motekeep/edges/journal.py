@@ -11,7 +11,6 @@ commands' side.
 """
 
 import sqlite3
-import zlib
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -24,7 +23,16 @@ from motekeep.edges.journal_ledger import Changes, Held, Ledger
 from motekeep.edges.journal_reader import Reader
 from motekeep.edges.journal_restamp import Restamper
 from motekeep.edges.journal_room import Room, count_lost
-from motekeep.edges.journal_schema import FULL, ForeignError, Sizes, code_of, is_damage, is_store_fault, transaction
+from motekeep.edges.journal_schema import (
+    FULL,
+    ForeignError,
+    Sizes,
+    code_of,
+    digest,
+    is_damage,
+    is_store_fault,
+    transaction,
+)
 from motekeep.edges.ports import Batch, Clock, NewReading, Notice, StoreState
 from motekeep.errors import StoreError, StoreFullError
 from motekeep.instant import Instant
@@ -42,6 +50,7 @@ TIGHT_BYTES = 1 << 20
 DAY_S = 86400.0
 # What a row takes beside its body: its other columns, its entry in the index.
 ROW_BYTES = 160
+NOTHING = Held((), ())
 
 
 @dataclass(frozen=True, slots=True)
@@ -105,16 +114,14 @@ class Journal:
         held = Held(tuple(batch.readings), self._ledger.number_notices((n.topic, n.body) for n in batch.notices))
         self._boots.trust(at)
         self._restamper.due |= any(r.clock == "unsynced" for r in held.readings)
-        if not self._save(held, at):
-            self._ledger.hold(held)
-            self._file.note_numbers(exact=True)
+        self._save(held, at)
         if self._restamper.due:
             self.restamp(at)
 
     def flush(self, at: Instant) -> None:
         """Write what only memory knows. A flush that the store cannot take loses nothing: the next commit writes it."""
         if self._ledger.held(1) or self._ledger.changes(()) or self._boots.unsaved:
-            self._save(Held((), ()), at)
+            self._save(NOTHING, at)
 
     def pending_marks(self) -> int:
         return self._ledger.pending_marks()
@@ -182,7 +189,7 @@ class Journal:
     # -- saving -------------------------------------------------------------------------------------------------
 
     def _start(self, at: Instant) -> None:
-        if self._save(Held((), ()), at):
+        if self._save(NOTHING, at):
             # from now on numbers are given out that the side file hears of later
             self._file.note_numbers(exact=False)
         elif not self._file.loaded:
@@ -190,7 +197,7 @@ class Journal:
         log.info("journal.opened", path=str(self._settings.path), life=self.life, sqlite=sqlite3.sqlite_version)
 
     def _save(self, held: Held, at: Instant) -> bool:
-        """Store what memory holds back, then `held`; whether all of it is durable."""
+        """Store what memory holds back, then `held`; whether all of it is durable. What is not stays in memory."""
         for _ in range(2):
             try:
                 db = self._file.ready(at)
@@ -198,12 +205,21 @@ class Journal:
                     self._write(db, waiting)
                 self._write(db, [held])
             except (sqlite3.Error, StoreError, OSError) as error:
-                if not self._failed(error):
+                again = self._failed(error)
+                self._hold(held)
+                held = NOTHING
+                if not again:
                     return False
             else:
                 self._recovered()
                 return True
         return False
+
+    def _hold(self, held: Held) -> None:
+        if held.readings or held.notices:
+            self._ledger.hold(held)
+        if held.readings:
+            self._file.note_numbers(exact=True)
 
     def _write(self, db: sqlite3.Connection, adding: Sequence[Held]) -> None:
         """One transaction: readings, notices, kept values, marks, losses, boots."""
@@ -238,7 +254,7 @@ class Journal:
         self._file.stored({r.sensor for r in readings})
 
     def _values(self, r: NewReading) -> tuple[object, ...]:
-        crc = zlib.crc32(r.body.encode())
+        crc = digest(r.sensor, r.seq, r.seq, r.clock, r.body)
         boot = self._boots.number_of(r.boot_id)
         return (r.sensor, r.seq, r.seq, boot, r.boot_s, r.start, r.seconds, r.clock, r.flag, crc, r.body)
 

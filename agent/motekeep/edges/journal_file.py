@@ -88,8 +88,7 @@ class JournalFile:
             self._reload(self.connection)
         else:
             self._load(self.connection, used)
-            self.life += 1
-            self._ledger.keep({LIFE: str(self.life)})
+            self._live()
         self._boots.begin(self.connection, at)
         self.ballast.restore(free_bytes(self.path.parent))
         return self.connection
@@ -104,9 +103,10 @@ class JournalFile:
             connection = open_reader(self.path)
             try:
                 self._load(connection, used)
+                self._live()
             finally:
                 connection.close()
-        except sqlite3.Error:
+        except (sqlite3.Error, StoreError):
             if not used.last:
                 raise StoreError(self._attempted, why or "it cannot be read", "mend that; it is tried again") from None
             for sensor in used.last:
@@ -120,7 +120,7 @@ class JournalFile:
             if known and self.path.exists() and not self.path.stat().st_size:
                 # SQLite would take it for a new database
                 raise DamagedError(self._attempted, "the file is empty", "")
-            return open_writer(self.path, self.sizes, self._progress)
+            return open_writer(self.path, self.sizes, self._progress, ours=known)
         except (DamagedError, sqlite3.Error) as error:
             if isinstance(error, sqlite3.Error) and not is_damage(error):
                 raise
@@ -146,7 +146,7 @@ class JournalFile:
         self._ledger.load(sensors, lost, (newest or 0) + 1)
         self._boots.load(db)
         self.life = int((db.execute("SELECT value FROM kept WHERE name = ?", (LIFE,)).fetchone() or ("0",))[0])
-        if set_aside(self.path):
+        if any(damaged.exists() for damaged in set_aside(self.path)):
             note = db.execute("SELECT value FROM kept WHERE name = ?", (NOTE,)).fetchone()
             self.note = str(note[0]) if note else "a damaged journal file lies beside this one"
         for sensor, last in () if started else used.last.items():
@@ -157,6 +157,10 @@ class JournalFile:
                 self._ledger.count_lost("unstored", last - stored)
                 log.warning("journal.numbers_skipped", sensor=sensor, stored=stored, used=used.beyond(sensor))
         self.loaded = True
+
+    def _live(self) -> None:
+        self.life += 1
+        self._ledger.keep({LIFE: str(self.life)})
 
     def _reload(self, db: sqlite3.Connection) -> None:
         """Memory knows better, but for a commit that became durable though it seemed to fail."""

@@ -5,7 +5,6 @@ commit into the file. Must not know topics of readings or the broker.
 """
 
 import sqlite3
-import zlib
 from collections.abc import Sequence
 from pathlib import Path
 
@@ -13,7 +12,7 @@ import structlog
 
 from motekeep.edges.journal_boots import Boots
 from motekeep.edges.journal_ledger import Ledger, as_row
-from motekeep.edges.journal_schema import is_damage, is_store_fault, open_reader
+from motekeep.edges.journal_schema import DamagedError, digest, is_damage, is_store_fault, open_reader
 from motekeep.edges.ports import Clock, NoticeRow, Row
 
 log = structlog.get_logger()
@@ -48,7 +47,10 @@ class Reader:
             for low, high in glance.ranges:
                 if len(rows) >= limit:
                     break
-                rows += self._rows(sensor, low, high, limit - len(rows))
+                # a merged reading with a part delivered lies in two ranges
+                start = max(low, rows[-1].seq + 1) if rows else low
+                if start <= high:
+                    rows += self._rows(sensor, start, high, limit - len(rows))
             rows += [as_row(r) for r in glance.held[: max(limit - len(rows), 0)]]
             released = self._released(rows)
             self._ledger.offered(released)
@@ -112,7 +114,7 @@ class Reader:
         rows = []
         for *values, crc in found:
             row = Row(*values)
-            if row.boot_id is not None and zlib.crc32(row.body.encode()) == crc:
+            if row.boot_id is not None and digest(row.sensor, row.seq, row.from_seq, row.clock, row.body) == crc:
                 rows.append(row)
                 continue
             log.error("journal.reading_damaged", sensor=row.sensor, seq=row.seq)
@@ -123,8 +125,8 @@ class Reader:
         """All rows at once: a statement left open would keep the writer from starting its log anew."""
         try:
             rows = self._open().execute(sql, values).fetchall()
-        except sqlite3.Error as error:
-            if not is_store_fault(error):
+        except (sqlite3.Error, DamagedError) as error:
+            if isinstance(error, sqlite3.Error) and not is_store_fault(error):
                 raise
             self._failed(error)
             return []
@@ -140,10 +142,10 @@ class Reader:
             self._generation = generation
         return self._connection
 
-    def _failed(self, error: sqlite3.Error) -> None:
+    def _failed(self, error: sqlite3.Error | DamagedError) -> None:
         """What memory holds is still given: live readings go out with the card gone."""
         self.close()
-        if is_damage(error):
+        if isinstance(error, DamagedError) or is_damage(error):
             self._ledger.damage_seen = True
         if self._ledger.reading_fails is None:
             log.warning("journal.reading_failed", error=str(error))

@@ -12,7 +12,6 @@ each is as large as the journal.
 import json
 import os
 import sqlite3
-import zlib
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -27,6 +26,7 @@ from motekeep.edges.journal_schema import (
     Sizes,
     beside,
     code_of,
+    digest,
     open_writer,
     sync_folder,
     transaction,
@@ -40,7 +40,7 @@ log = structlog.get_logger()
 KEEP_DAMAGED = 2
 ROWS_A_TRANSACTION = 1000
 NOTE = "journal.rescued"  # under which name the new journal keeps the sentence about its rescue
-SIDES = ("", "-wal", "-shm")
+SIDES = ("", "-wal")
 
 NUMBER, MAYBE_NUMBER = (int, float), (int, float, type(None))
 # The kinds of columns of each table (journal_schema); an INTEGER PRIMARY KEY is stored as null, its value is the rowid.
@@ -116,7 +116,7 @@ def finish(path: Path, at: Instant) -> None:
 def set_aside(path: Path) -> list[Path]:
     """The damaged journals that are kept beside this one, oldest first."""
     names = {p.name for p in path.parent.glob(f"{path.name}.damaged-*")}
-    return [path.with_name(name) for name in sorted({n.removesuffix("-wal").removesuffix("-shm") for n in names})]
+    return [path.with_name(name) for name in sorted({n.removesuffix("-wal") for n in names})]
 
 
 def _carry(
@@ -150,10 +150,13 @@ def _table_of(values: list[Value]) -> str | None:
     """Whose row this is; None for one that is of no table, or a reading whose text is not what was stored."""
     for table, shape in SHAPES.items():
         if len(values) == len(shape) and all(isinstance(v, kind) for v, kind in zip(values, shape, strict=True)):
-            if table == "readings" and zlib.crc32(str(values[11]).encode()) != values[10]:
-                return None
-            return table
+            return None if table == "readings" and not _sound(values) else table
     return None
+
+
+def _sound(values: list[Value]) -> bool:
+    _, sensor, seq, from_seq, _, _, _, _, clock, _, crc, body = values
+    return digest(str(sensor), int(str(seq)), int(str(from_seq)), str(clock), str(body)) == crc
 
 
 def _note_sensor(found: dict[str, _Found], values: list[Value]) -> None:
@@ -250,6 +253,7 @@ def _put_in_place(path: Path, aside_name: str) -> None:
     for side in SIDES:
         if beside(path, side).exists():
             beside(path, side).rename(path.with_name(aside_name + side))
+    beside(path, "-shm").unlink(missing_ok=True)  # says nothing: the index of the log, made anew by whoever opens it
     beside(path, ".rescued").rename(path)
     sync_folder(path)
     for old in set_aside(path)[:-KEEP_DAMAGED]:
@@ -264,7 +268,7 @@ def _aside_name(path: Path, at: Instant) -> str:
 
 
 def _remove(path: Path) -> None:
-    for side in SIDES:
+    for side in (*SIDES, "-shm"):
         beside(path, side).unlink(missing_ok=True)
 
 

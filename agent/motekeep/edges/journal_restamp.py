@@ -5,7 +5,6 @@ The arithmetic of time is `message/restamp.py`.
 """
 
 import sqlite3
-import zlib
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 
@@ -14,7 +13,7 @@ import structlog
 from motekeep.edges.journal_boots import Boots
 from motekeep.edges.journal_ledger import Held, Ledger
 from motekeep.edges.journal_room import count_lost, readable
-from motekeep.edges.journal_schema import transaction
+from motekeep.edges.journal_schema import digest, transaction
 from motekeep.edges.ports import NewReading, Notice
 from motekeep.instant import Instant, from_rfc3339
 from motekeep.message.documents import Clock, ReadingDocument
@@ -118,14 +117,15 @@ class Restamper:
     def _some(self, connection: sqlite3.Connection, number: int, stamp: Stamp, at: Instant) -> tuple[int, list[Notice]]:
         """One transaction: how many readings it saw, and the amendments it stored."""
         rows = connection.execute(
-            "SELECT r.id, r.body, r.crc, r.start, b.boot_id FROM readings AS r JOIN boots AS b ON b.number = r.boot"
+            "SELECT r.id, r.sensor, r.seq, r.from_seq, r.body, r.crc, r.start, b.boot_id"
+            " FROM readings AS r JOIN boots AS b ON b.number = r.boot"
             " WHERE r.clock = 'unsynced' AND r.boot = ? ORDER BY r.id LIMIT ?",
             (number, ROWS_A_TRANSACTION),
         ).fetchall()
         shifts: list[_Shift] = []
         with transaction(connection):
-            for id_, body, crc, start, boot_id in rows:
-                document = readable(body, crc)
+            for id_, sensor, seq, from_seq, body, crc, start, boot_id in rows:
+                document = readable(digest(sensor, seq, from_seq, "unsynced", body), crc, body)
                 if document is None:
                     connection.execute("DELETE FROM readings WHERE id = ?", (id_,))
                     count_lost(connection, "damaged", 1)
@@ -135,7 +135,7 @@ class Restamper:
                 text, moved = document.json_text(), from_rfc3339(document.start)
                 connection.execute(
                     "UPDATE readings SET clock = ?, start = ?, crc = ?, body = ? WHERE id = ?",
-                    (stamp.clock, moved, zlib.crc32(text.encode()), text, id_),
+                    (stamp.clock, moved, digest(sensor, seq, from_seq, stamp.clock, text), text, id_),
                 )
                 self._note(shifts, document, moved - start, boot_id, at)
             notices = self._amendments(shifts)

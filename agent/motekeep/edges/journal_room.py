@@ -13,7 +13,6 @@ calibration.
 """
 
 import sqlite3
-import zlib
 from collections.abc import Callable, Iterator, Sequence
 from itertools import groupby
 
@@ -21,7 +20,7 @@ import structlog
 from pydantic import ValidationError
 
 from motekeep.edges.journal_ledger import Ledger
-from motekeep.edges.journal_schema import PAGE_BYTES, transaction
+from motekeep.edges.journal_schema import PAGE_BYTES, digest, transaction
 from motekeep.instant import from_rfc3339
 from motekeep.message.documents import ReadingDocument
 from motekeep.message.merge import mergeable, merged
@@ -43,6 +42,7 @@ class Room:
         self._ledger = ledger
         # where each sensor's next merge of a level starts: what lies before has nothing left to merge
         self._merged_through: dict[tuple[str, float], int] = {}
+        # whether what waits was merged lately, and there has been no delivered reading to give up since
         self.merging = False
 
     def make(self, connection: sqlite3.Connection, bytes_: int, save_marks: Callable[[], None]) -> bool:
@@ -52,7 +52,7 @@ class Room:
         waiting must have its reading."""
         needed = bytes_ * 3 // (2 * PAGE_BYTES) + SPARE_PAGES
         if _free_pages(connection) >= needed:
-            if self.merging and _free_pages(connection) >= 16 * needed:
+            if self.merging and any(self._delivered(connection, s, 1) for s in self._ledger.sensors()):
                 self.merging = False
             return True
         save_marks()
@@ -134,17 +134,23 @@ class Room:
     def _group(self, connection: sqlite3.Connection, sensor: str, level_s: float) -> list[tuple[int, ReadingDocument]]:
         """The oldest two or more readings of a sensor that belong in one of that level: id and document."""
         after = self._merged_through.get((sensor, level_s), 0)
-        undelivered = self._ledger.undelivered(sensor)
-        for low, high in undelivered:
+        state = self._ledger.state_of(sensor)
+        # each by itself: a reading merged of both would have to go out again
+        for low, high in sorted([*state.waiting, *state.sent]):
             if high <= after:
                 continue
             rows = connection.execute(
-                "SELECT id, body, crc FROM readings WHERE seq BETWEEN ? AND ? AND sensor = ? ORDER BY seq LIMIT ?",
+                "SELECT id, sensor, seq, from_seq, clock, body, crc FROM readings"
+                " WHERE seq BETWEEN ? AND ? AND sensor = ? ORDER BY seq LIMIT ?",
                 (max(low, after + 1), high, sensor, LOOK_ROWS),
             ).fetchall()
-            if high == self._ledger.state_of(sensor).stored:
+            if high == state.stored:
                 rows = rows[:-1]
-            documents = [(id_, d) for id_, body, crc in rows if (d := readable(body, crc)) is not None]
+            documents = [
+                (id_, document)
+                for id_, *columns, crc in rows
+                if (document := readable(digest(*columns), crc, columns[-1])) is not None
+            ]
             for group in _groups(documents, level_s):
                 if len(group) > 1:
                     return group
@@ -158,13 +164,14 @@ class Room:
         ids = [id_ for id_, _ in group]
         one = merged([document for _, document in group])
         body = one.json_text()
+        crc = digest(sensor, one.seq, one.from_seq or one.seq, one.clock, body)
         with transaction(connection):
             first = connection.execute("SELECT boot_s, start FROM readings WHERE id = ?", (ids[0],)).fetchone()
             _delete(connection, ids[:-1])
             connection.execute(
                 "UPDATE readings SET from_seq = ?, boot_s = ?, start = ?, seconds = ?, flag = ?, crc = ?, body = ?"
                 " WHERE id = ?",
-                (one.from_seq, *first, one.seconds, one.flag, zlib.crc32(body.encode()), body, ids[-1]),
+                (one.from_seq, *first, one.seconds, one.flag, crc, body, ids[-1]),
             )
             count_lost(connection, "merged", len(ids))
         self._ledger.counted_lost("merged", len(ids))
@@ -185,9 +192,9 @@ def _groups(
         yield group
 
 
-def readable(body: str, crc: int) -> ReadingDocument | None:
-    """The document of a stored reading; None when its text is not what was stored."""
-    if zlib.crc32(body.encode()) != crc:
+def readable(computed: int, stored: int, body: str) -> ReadingDocument | None:
+    """The document of a stored reading; None when its row is not what was stored."""
+    if computed != stored:
         return None
     try:
         return ReadingDocument.model_validate_json(body)

@@ -10,9 +10,11 @@ its own number and kinds of columns: `journal_rescue` tells by them whose row it
 
 import os
 import sqlite3
+import zlib
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
+from itertools import chain
 from pathlib import Path
 from urllib.parse import quote
 
@@ -24,7 +26,7 @@ PAGE_BYTES = 1024
 # One entry a version; a file of version n is brought up by the entries from n on, in one transaction.
 LADDER: tuple[tuple[str, ...], ...] = (
     (
-        # `id` gives the order of commits. `crc` is zlib.crc32 of `body`: SQLite itself checks no content.
+        # `id` gives the order of commits; `crc` is the `digest` of a row: SQLite itself checks no content
         """CREATE TABLE readings (
              id INTEGER PRIMARY KEY, sensor TEXT NOT NULL, seq INTEGER NOT NULL, from_seq INTEGER NOT NULL,
              boot INTEGER NOT NULL, boot_s REAL NOT NULL, start REAL NOT NULL, seconds REAL NOT NULL,
@@ -45,6 +47,8 @@ LADDER: tuple[tuple[str, ...], ...] = (
     ),
 )
 VERSION = len(LADDER)
+# A user_version further ahead than this was not written by a newer version: the header is damaged.
+FUTURE_VERSIONS = 1000
 
 FULL, CORRUPT, NOT_A_DATABASE = 13, 11, 26
 # What a failing card, a full or read-only file system, or a missing folder give: the store's fault, not the program's.
@@ -66,7 +70,7 @@ class Sizes:
     """How `max_bytes` is shared out. Everything that the journal puts on the disk stays within it.
 
     The write-ahead log may grow to three times its checkpoint mark (one large transaction on top of a full log); the
-    pages of the database get what log and ballast leave.
+    pages of the database get what log and ballast leave. From 1 MiB up that holds.
     """
 
     max_bytes: int
@@ -77,7 +81,8 @@ class Sizes:
 
     @property
     def checkpoint_pages(self) -> int:
-        return max(16, min(1000, self.max_bytes // PAGE_BYTES // 16))
+        # the lower end: merging an hour of long readings is one transaction of some 200 pages
+        return max(100, min(1000, self.max_bytes // PAGE_BYTES // 16))
 
     @property
     def max_pages(self) -> int:
@@ -99,18 +104,21 @@ def is_damage(error: sqlite3.Error) -> bool:
     return code_of(error) in (CORRUPT, NOT_A_DATABASE)
 
 
-def open_writer(path: Path, sizes: Sizes, progress: Callable[[], None] | None = None) -> sqlite3.Connection:
+def open_writer(
+    path: Path, sizes: Sizes, progress: Callable[[], None] | None = None, *, ours: bool = False
+) -> sqlite3.Connection:
     """Open or create the journal for writing, checked whole and brought up to this version.
 
-    `progress` is called now and then while the file is checked (some 2 s for 100 MB from a slow card). Raises
-    DamagedError, ForeignError, or sqlite3.Error with the store's own complaint.
+    `ours`: it is known to be a journal, so that one without its identity is a damaged one. `progress` is called now
+    and then while the file is checked. Raises DamagedError, ForeignError, or sqlite3.Error with the store's own
+    complaint.
     """
     new = not path.exists()
+    if not new:
+        check(path, progress, ours=ours)
     connection = sqlite3.connect(path, isolation_level=None, cached_statements=64)
     try:
         _set_up(connection, sizes)
-        _check_identity(connection, path)
-        check(connection, path, progress)
         migrate(connection)
         if new:
             sync_folder(path)
@@ -121,6 +129,7 @@ def open_writer(path: Path, sizes: Sizes, progress: Callable[[], None] | None = 
 
 
 def _set_up(connection: sqlite3.Connection, sizes: Sizes) -> None:
+    connection.text_factory = _text
     connection.execute("PRAGMA busy_timeout = 5000")
     connection.execute(f"PRAGMA page_size = {PAGE_BYTES}")
     connection.execute("PRAGMA auto_vacuum = NONE")
@@ -140,34 +149,79 @@ def _set_up(connection: sqlite3.Connection, sizes: Sizes) -> None:
     connection.execute(f"PRAGMA max_page_count = {sizes.max_pages}")
 
 
-def _check_identity(connection: sqlite3.Connection, path: Path) -> None:
+def check(path: Path, progress: Callable[[], None] | None = None, *, ours: bool = False) -> None:
+    """Whether an existing file is a sound journal of a version known here: identity, then SQLite's check.
+
+    The whole check: the quick one, as dear on a cold file, misses an index entry that is gone, and with it a reading.
+
+    On a connection that cannot write, so that nothing of a damaged file is changed. Raises DamagedError, ForeignError,
+    or sqlite3.Error with the store's own complaint.
+    """
+    attempted, mend = f"checking the journal {path}", "nothing to do: what can be read is carried over"
+    connection: sqlite3.Connection | None = None
+    try:
+        connection = open_reader(path)
+        if progress is not None:
+            connection.set_progress_handler(progress, 100_000)
+        fault = _foreign_or_damaged(connection, path, ours)
+        answer = fault or connection.execute("PRAGMA integrity_check(1)").fetchone()[0]
+    except sqlite3.Error as error:
+        # a damaged header gives SQLITE_ERROR too ("unsupported file format"): these statements cannot fail otherwise
+        if is_damage(error) or not is_store_fault(error):
+            raise DamagedError(attempted, str(error), mend) from error
+        raise
+    finally:
+        if connection is not None:
+            connection.close()
+    if answer != "ok":
+        raise DamagedError(attempted, str(answer).replace("\n", " ")[:200], mend)
+
+
+def _foreign_or_damaged(connection: sqlite3.Connection, path: Path, known: bool) -> str | None:
+    """What contradicts itself in the header of a journal, None when nothing does. Raises ForeignError."""
     application = connection.execute("PRAGMA application_id").fetchone()[0]
     version = connection.execute("PRAGMA user_version").fetchone()[0]
-    tables = connection.execute("SELECT count(*) FROM sqlite_master").fetchone()[0]
+    tables = {name for (name,) in connection.execute("SELECT name FROM sqlite_master WHERE type = 'table'")}
+    ours = {"readings", "sensors"} <= tables
     attempted = f"opening the journal {path}"
-    if application != APPLICATION_ID and (application != 0 or tables):
-        raise ForeignError(attempted, "it is a database of another program", "give [store] path another file name")
+    if application != APPLICATION_ID:
+        if ours or known:
+            return "its application id is lost"
+        if tables or application:
+            raise ForeignError(attempted, "it is a database of another program", "give [store] path another file name")
+    if ours != (version > 0):
+        return f"its version says {version}"
+    if version > VERSION + FUTURE_VERSIONS:
+        return f"its version says {version}"
     if version > VERSION:
         raise ForeignError(
             attempted, f"a newer version wrote it (format {version}, this one knows {VERSION})", "install that version"
         )
+    return "the text of its tables has changed" if _tables(connection) != _tables_of(version) else None
 
 
-def check(connection: sqlite3.Connection, path: Path, progress: Callable[[], None] | None = None) -> None:
-    """SQLite's quick check. Raises DamagedError; a broken page comes as an error or as a row, by its place."""
-    attempted, mend = f"checking the journal {path}", "nothing to do: what can be read is carried over"
-    if progress is not None:
-        connection.set_progress_handler(progress, 100_000)
-    try:
-        answer = connection.execute("PRAGMA quick_check(1)").fetchone()[0]
-    except sqlite3.Error as error:
-        if is_damage(error):
-            raise DamagedError(attempted, str(error), mend) from error
-        raise
-    finally:
-        connection.set_progress_handler(None, 0)
-    if answer != "ok":
-        raise DamagedError(attempted, str(answer).replace("\n", " ")[:200], mend)
+def _tables(connection: sqlite3.Connection) -> set[tuple[str, str | None]]:
+    return set(connection.execute("SELECT name, sql FROM sqlite_master"))
+
+
+def _tables_of(version: int) -> set[tuple[str, str | None]]:
+    """What a file of that version has: SQLite parses the text of its tables anew at each opening, rotten or not."""
+    connection = sqlite3.connect(":memory:", isolation_level=None)
+    for statement in chain.from_iterable(LADDER[:version]):
+        connection.execute(statement)
+    tables = _tables(connection)
+    connection.close()
+    return tables
+
+
+def _text(raw: bytes) -> str:
+    """Text that rotted is still text; its digest tells."""
+    return raw.decode("utf-8", "replace")
+
+
+def digest(sensor: str, seq: int, from_seq: int, clock: str, body: str) -> int:
+    """What tells a row that is still what was stored from one that rotted. The other columns only repeat `body`."""
+    return zlib.crc32(f"{sensor}|{seq}|{from_seq}|{clock}|{body}".encode())
 
 
 def migrate(connection: sqlite3.Connection) -> None:
@@ -176,9 +230,8 @@ def migrate(connection: sqlite3.Connection) -> None:
     if version == VERSION:
         return
     with transaction(connection):
-        for statements in LADDER[version:]:
-            for statement in statements:
-                connection.execute(statement)
+        for statement in chain.from_iterable(LADDER[version:]):
+            connection.execute(statement)
         connection.execute(f"PRAGMA application_id = {APPLICATION_ID}")
         connection.execute(f"PRAGMA user_version = {VERSION}")
 
@@ -199,13 +252,18 @@ def transaction(connection: sqlite3.Connection) -> Iterator[None]:
 def open_reader(path: Path) -> sqlite3.Connection:
     """A connection that cannot write and so never checkpoints: two that do can damage a WAL file before SQLite 3.51.3.
 
-    Raises sqlite3.Error.
+    Raises sqlite3.Error or DamagedError.
     """
     connection = sqlite3.connect(f"file:{quote(str(path))}?mode=ro", uri=True, isolation_level=None)
     try:
+        connection.text_factory = _text
         connection.execute("PRAGMA busy_timeout = 2000")
         connection.execute("PRAGMA cache_size = -256")
         connection.execute("SELECT count(*) FROM sqlite_master").fetchone()
+    except UnicodeDecodeError as error:
+        # SQLite quotes the damaged schema in its message, and Python cannot read that
+        connection.close()
+        raise DamagedError(f"opening {path}", "its tables are damaged", "") from error
     except BaseException:
         connection.close()
         raise

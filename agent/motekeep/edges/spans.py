@@ -70,6 +70,8 @@ class Spans:
 
     def remove(self, low: int, high: int) -> int:
         """Take low..high out; how many numbers of it were in."""
+        if low > high:
+            return 0
         left, right = bisect_left(self._high, low), bisect_right(self._low, high)
         if left >= right:
             return 0
@@ -91,6 +93,8 @@ class Spans:
     def within(self, low: int, high: int) -> "Spans":
         """The numbers of low..high that are in the set."""
         part = Spans()
+        if low > high:
+            return part
         for at in range(bisect_left(self._high, low), bisect_right(self._low, high)):
             part._low.append(max(self._low[at], low))
             part._high.append(min(self._high[at], high))
