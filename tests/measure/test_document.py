@@ -13,6 +13,8 @@ from motekeep.measure.covariance import positive_semi_definite
 from motekeep.measure.document import CalibrationDocument
 from motekeep.measure.document_text import parse
 from motekeep.measure.steps.humidity_growth import HumidityGrowth
+from motekeep.wire.aa import AA, AaDecoder, encode
+from motekeep.wire.frame import Frame
 
 
 def refusal(text: str | bytes) -> DocumentError:
@@ -57,7 +59,8 @@ EDITS = [
     ("made_at = 2026-11-20T10:00:00Z", "made_at = 1970-01-01T00:00:00Z", "made_at", "2020"),
     ("valid_until = 2027-11-20T00:00:00Z", "valid_until = 2026-11-20T12:00:00Z", "valid_until", "not after valid_from"),
     ("valid_until = 2027-11-20T00:00:00Z", "valid_until = 9999-12-31T23:59:59-14:00", "valid_until", "2199"),
-    ("fits_revision = 151", "fits_revision = 256", "fits_revision", "256"),
+    ("fits_revision = 151", "fits_revision = 65536", "fits_revision", "65536"),
+    ("fits_revision = 151", "fits_revision = -1", "fits_revision", "-1"),
     ('kind = "humidity-growth"', 'kind = "humidty-growth"', "step[0].kind", "not known"),
     ("kappa = { value = 0.35, u = 0.05 }", "", "step[0].kappa", "missing"),
     ("kappa = { value = 0.35, u = 0.05 }", "kappa = 0.35", "step[0].kappa", "no uncertainty"),
@@ -235,6 +238,15 @@ def test_it_says_whom_it_is_for() -> None:
     assert made.not_for("quarry", "east-gate", "south") == "it is for sensor 'north', not 'south'"
     assert made.not_for("harbour", "east-gate", "north") == "it is for site 'quarry', not 'harbour'"
     assert not made.covers("quarry", "west-gate", "north")
+
+
+def test_the_identity_of_two_bytes_that_a_dialect_has_in_place_of_a_revision_fits() -> None:
+    [frame] = AaDecoder().feed(encode(Frame(AA, (8.0, 12.0), (), b"", revision=0xA1FE)))
+    assert isinstance(frame, Frame)
+    made = parse(EXAMPLE.replace("fits_revision = 151", "fits_revision = 41470").encode())
+    assert made.fits(frame.revision)
+    assert not made.fits(0xFEA1)
+    assert parse(EXAMPLE.replace("fits_revision = 151", "fits_revision = 65535").encode()).fits(65535)
 
 
 def test_it_says_when_and_for_which_revision_it_is() -> None:

@@ -85,6 +85,9 @@ MOST_PARAMETERS = 48
 MOST_PAIRS = MOST_PARAMETERS * (MOST_PARAMETERS - 1) // 2
 MOST_METRICS = 32
 
+# One byte in most dialects; `aa` has two bytes of identity in its place.
+MOST_REVISION = 65535
+
 EARLIEST = datetime(2020, 1, 1, tzinfo=UTC).timestamp()
 LATEST = datetime(2200, 1, 1, tzinfo=UTC).timestamp()
 
@@ -97,7 +100,7 @@ def parse(text: bytes) -> CalibrationDocument:
     issue = top.whole("issue", 1, 2**53)
     site, gateway, sensor = top.text("site"), top.text("gateway"), top.text("sensor")
     made_at, valid_from, valid_until = _dates(top)
-    fits_revision = top.whole("fits_revision", 0, 255) if top.has("fits_revision") else None
+    fits_revision = top.whole("fits_revision", 0, MOST_REVISION) if top.has("fits_revision") else None
     residual = _residual(top.table("residual"))
     steps = _steps(top, tuple(residual))
     ranges = _ranges(top.table("range"), steps, residual)
