@@ -123,15 +123,15 @@ def replay(config_path: Path, captures: tuple[Path, ...], out: Path, documents: 
 @with_config
 @click.option("--from", "from_", required=True, help="Start, RFC 3339, like 2026-12-01T00:00:00Z.")
 @click.option("--to", required=True, help="End, exclusive.")
-@click.option("--format", "form", type=click.Choice(["csv", "ndjson", "senml"]), default="csv", show_default=True)
+@click.option("--format", "form", type=click.Choice(["csv", "cf", "ndjson", "senml"]), default="csv", show_default=True)
 @click.option("--sensor", "sensors", multiple=True, help="Only this sensor; may repeat.")
 @click.option("--out", type=click.Path(path_type=Path, dir_okay=False), help="A file instead of standard output.")
 def export(config_path: Path, from_: str, to: str, form: str, sensors: tuple[str, ...], out: Path | None) -> None:
-    """Readings of the journal, whatever became of their delivery."""
+    """Readings of the journal, whatever became of their delivery. `cf` is CSV with CF names and units."""
     from motekeep.commands.export import export as run_export  # noqa: PLC0415
     from motekeep.config import load  # noqa: PLC0415
 
-    run_export(load(config_path), from_, to, form, sensors, out)
+    run_export(load(config_path), (from_, to), form, sensors, out)
 
 
 @main.command()
