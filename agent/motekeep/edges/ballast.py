@@ -1,7 +1,8 @@
 """A file that only takes up room, to be given back when the disk is full.
 
 On a full disk SQLite can neither insert nor delete; a few megabytes given back at that moment keep the journal going
-for days. Owns the file; does not decide when.
+for days. It goes in slices, since whoever filled the disk takes from each of them too. Owns the file; does not decide
+when.
 """
 
 import os
@@ -9,6 +10,7 @@ from pathlib import Path
 
 # Restored only when the disk has this many times its size: else it would take the room it has just given.
 PLENTY = 4
+SLICES = 8
 
 
 class Ballast:
@@ -19,20 +21,33 @@ class Ballast:
         self._bytes = bytes_
 
     @property
-    def present(self) -> bool:
-        return self._path.exists()
+    def left(self) -> int:
+        """Bytes of it that are still there."""
+        try:
+            return self._path.stat().st_size
+        except OSError:
+            return 0
+
+    @property
+    def low(self) -> bool:
+        """Whether half of it is gone."""
+        return self.left <= self._bytes // 2
 
     def give_back(self) -> bool:
-        """Whether there was something to give. Raises nothing: without it the disk is as full as before."""
+        """Give a slice; whether there was one. Raises nothing: without it the disk is as full as before."""
         try:
-            self._path.unlink()
+            left = self.left - max(self._bytes // SLICES, 1)
+            if left > 0:
+                os.truncate(self._path, left)
+            else:
+                self._path.unlink()
         except OSError:
             return False
         return True
 
     def restore(self, free: int | None) -> bool:
-        """Lay it down again when the disk has plenty (`free` bytes); whether it is there now."""
-        if self.present:
+        """Lay it down again, whole, when the disk has plenty (`free` bytes); whether it is there now."""
+        if self.left == self._bytes:
             return True
         if not self._bytes or free is None or free < PLENTY * self._bytes:
             return False
@@ -44,7 +59,7 @@ class Ballast:
             finally:
                 os.close(descriptor)
         except OSError:
-            self.give_back()
+            self._path.unlink(missing_ok=True)
             return False
         return True
 

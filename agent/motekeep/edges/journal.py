@@ -44,8 +44,9 @@ log = structlog.get_logger()
 MAX_NOTICES = 5000
 HELD_A_TRANSACTION = 50
 PRUNE_BATCHES = 10
-# With less than this left on the disk, and the ballast given, the file stops growing and lives within its pages: so it
-# goes on beside others that filled the disk, since its log has its room already.
+# With less than this left on the disk and half of the ballast given, the file stops growing and its log is emptied at
+# every commit: within the room that they have, both go on beside others that keep the disk full. The other half of the
+# ballast is for bringing over what the log has already.
 TIGHT_BYTES = 1 << 20
 DAY_S = 86400.0
 # What a row takes beside its body: its other columns, its entry in the index.
@@ -269,9 +270,10 @@ class Journal:
 
     def _make_room(self, db: sqlite3.Connection, bytes_: int) -> bool:
         free = self._file.free()
-        tight = free is not None and free < TIGHT_BYTES and not self._file.ballast.present
+        tight = free is not None and free < TIGHT_BYTES and self._file.ballast.low
         pages = db.execute("PRAGMA page_count").fetchone()[0] if tight else self._file.sizes.max_pages
         db.execute(f"PRAGMA max_page_count = {pages}")
+        db.execute(f"PRAGMA wal_autocheckpoint = {1 if tight else self._file.sizes.checkpoint_pages}")
         return self._room.make(db, bytes_, lambda: self._save_marks(db))
 
     # -- failing ------------------------------------------------------------------------------------------------
@@ -296,7 +298,7 @@ class Journal:
             self._file.close()  # an I/O error leaves SQLite's own view in doubt
         # a full disk shows as SQLITE_FULL, but also as an I/O error of the log or its index
         if self._file.ballast.give_back():
-            log.warning("journal.ballast_given_back", bytes=self._file.sizes.ballast_bytes)
+            log.warning("journal.ballast_given_back", left_bytes=self._file.ballast.left)
             return True
         return False
 
