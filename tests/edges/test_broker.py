@@ -145,6 +145,7 @@ def test_a_broker_that_speaks_only_mqtt_3_gets_one_plain_sentence_and_is_tried_a
         for _ in range(2):
             event = next_event(broker, Disconnected)
             assert isinstance(event, Disconnected)
+            assert event.refused
             assert (
                 event.why
                 == "this broker speaks only MQTT 3.1.1, which hides refusals; motekeep needs one that speaks MQTT 5"

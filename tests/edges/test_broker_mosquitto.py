@@ -225,12 +225,14 @@ def test_password_and_client_certificate_let_us_in_and_are_read_anew_for_each_co
         up.backlog(120)
         up.thread.start()
         wait_for(lambda: "refuses our certificate" in why(), "the refusal of the certificate")
+        assert up.publisher.facts(up.clock.now()).connection_refused == why()
         shutil.copy(f"{certificates.client}.crt", cert)
         shutil.copy(f"{certificates.client}.key", key)
         wait_for(lambda: "refuses our login" in why(), "the refusal of the password")
         assert not up.up()
         password.write_text("right\n")
         up.all_delivered()
+        assert up.publisher.facts(up.clock.now()).connection_refused is None
         assert up.close() < 2.0
 
 
@@ -413,17 +415,20 @@ def test_the_will_says_offline_when_the_process_is_killed(tmp_path: Path) -> Non
 
 def test_a_line_that_is_back_within_the_will_delay_causes_no_offline(tmp_path: Path) -> None:
     mosquitto = Mosquitto(tmp_path)
-    settings = settings_for(0, will_delay_s=5)
-    with running(mosquitto), proxied(mosquitto.port) as proxy, mosquitto.subscriber(HEALTH) as heard:
-        with uplink(replace(settings, port=proxy.port)) as up:
-            up.publisher.post(HEALTH, '{"status":"normal"}')
-            up.thread.start()
-            for n in range(3):
-                wait_for(lambda n=n: len(heard.messages(HEALTH)) > n, "a birth at each connection")
-                proxy.cut()
-            wait_for(lambda: len(heard.messages(HEALTH)) >= 4, "the last birth")
-            time.sleep(6.0)  # longer than the delay
-            assert WILL not in heard.messages(HEALTH)
+    with (
+        running(mosquitto),
+        proxied(mosquitto.port) as proxy,
+        mosquitto.subscriber(HEALTH) as heard,
+        uplink(settings_for(proxy.port, will_delay_s=5)) as up,
+    ):
+        up.publisher.post(HEALTH, '{"status":"normal"}')
+        up.thread.start()
+        for n in range(3):
+            wait_for(lambda n=n: len(heard.messages(HEALTH)) > n, "a birth at each connection")
+            proxy.cut()
+        wait_for(lambda: len(heard.messages(HEALTH)) >= 4, "the last birth")
+        time.sleep(6.0)  # longer than the delay
+        assert WILL not in heard.messages(HEALTH)
 
 
 def test_a_second_client_with_our_name_leaves_our_birth_as_the_last_word(tmp_path: Path) -> None:

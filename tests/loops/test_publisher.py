@@ -127,7 +127,7 @@ def test_a_refusal_never_counts_as_delivery_and_the_broker_is_asked_ever_more_ra
     assert len(gateway.broker.arrived) < 30
     facts = gateway.publisher.facts(gateway.clock.now())
     assert 10 < facts.refused <= len(gateway.broker.arrived)
-    assert facts.refusing == ((f"{LATE}: code 135",) if not hangs_up else facts.refusing)
+    assert facts.refusing == (f"{LATE}: code 135",)
     assert facts.set_aside == 0
 
 

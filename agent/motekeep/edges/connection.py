@@ -170,13 +170,13 @@ class Connection:
         self.tell(why)
         _shut(self._client.socket())
 
-    def tell(self, why: str) -> None:
+    def tell(self, why: str, *, refused: bool = False) -> None:
         """Report the end of this link, once: paho reports some ends twice and others never."""
         with self._telling:
             if self.over.is_set():
                 return
             self.over.set()
-        self._inlet.put(Disconnected(why))
+        self._inlet.put(Disconnected(why, refused))
 
     # -- the client ---------------------------------------------------------------------------------------------
 
@@ -233,7 +233,7 @@ class Connection:
         properties: Properties | None,
     ) -> None:
         if reason.is_failure:
-            self.tell(_refused_connection(reason))
+            self.tell(_refused_connection(reason), refused=True)
             return
         if self._settings.filters:
             options = SubscribeOptions(qos=1)
@@ -262,7 +262,8 @@ class Connection:
         elif flags.is_disconnect_packet_from_server:
             self.tell(f"the broker ended it: {_words(reason)}")
         elif self.up_since is None and "alert" in self._trouble:  # TLS 1.3 refuses a client after the handshake
-            self.tell(f"the broker refuses our certificate{self._said()}; look at [broker] tls.cert and tls.key")
+            why = f"the broker refuses our certificate{self._said()}"
+            self.tell(f"{why}; look at [broker] tls.cert and tls.key", refused=True)
         elif self.up_since is None:
             said = self._said()
             self.tell(

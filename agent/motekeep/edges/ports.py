@@ -135,7 +135,7 @@ class JournalWriter(Protocol):
         """With a trusted clock: stamp this boot's unsynced readings `corrected` and earlier boots' `bounded`.
 
         At most a bounded number of them a call; every `commit` goes on with the rest. The amendments of those that had
-        gone out already are stored in the same transaction: they are returned for the log, not to be committed again."""
+        gone out already are stored in the same transaction: returned for the log, not to be committed again."""
         ...
 
     def prune(self, at: Instant) -> None: ...
@@ -184,14 +184,15 @@ class Connected:
 
 @dataclass(frozen=True, slots=True)
 class Disconnected:
-    """The link is gone, or a connection was refused; `why` in words."""
+    """The link is gone, or was never made; `why` in words. `refused`: the broker answered and does not let us in."""
 
     why: str
+    refused: bool = False
 
 
 @dataclass(frozen=True, slots=True)
 class Acknowledged:
-    """The broker answered message `mid`. `refusal` is None for success, else the reason code in words; `code` as sent."""
+    """The broker answered message `mid`. `refusal` is None for success, else the reason in words; `code` as sent."""
 
     mid: int
     refusal: str | None

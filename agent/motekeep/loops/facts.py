@@ -63,6 +63,7 @@ class Facts:
             link_why=link.why or "",
             refused=link.refused + link.set_aside,
             refused_why="; ".join(link.refusing),
+            connection_refused=link.connection_refused,
         )
         since = None if link.since is None else rfc3339(link.since)
         return facts, LinkHealth(since=since, reconnects=link.reconnects, refused=link.refused)

@@ -80,8 +80,8 @@ def size(text: str) -> int:
 
 @dataclass(slots=True)
 class Lane:
-    """One sensor. Rows up to `live_after` and `late_after` have been looked at by the live and the late way; those up to
-    `live_from` are the late way's, however young."""
+    """One sensor. Rows up to `live_after` and `late_after` have been looked at by the live and the late way; those up
+    to `live_from` are the late way's, however young."""
 
     sensor: str
     newest: int = 0

@@ -20,7 +20,8 @@ class LinkFacts:
     and `why` why the last one ended. `last_answer_s` is how long ago the broker last answered, None if it never did;
     `stalled` that the last link was given up because it owed answers, and none has come since. `refused` counts answers
     with a refusal code, `set_aside` rows and notices given up on, `unheard` messages that the broker took though nobody
-    subscribes to them. `refusing` names the topics refused at the moment, with the broker's reason.
+    subscribes to them. `connection_refused` says with what words the broker, when it last answered, did not let this
+    gateway in; `refusing` names the topics refused at the moment, with the broker's reason.
     """
 
     since: float | None
@@ -34,6 +35,7 @@ class LinkFacts:
     set_aside: int
     unheard: int
     bad_requests: int
+    connection_refused: str | None
     refusing: tuple[str, ...]
 
 
@@ -50,16 +52,18 @@ class LinkLedger:
         self._stalled = False
         self._in_flight = 0
         self._counts: Counter[str] = Counter()
+        self._connection_refused: str | None = None
         self._refusing: dict[str, str] = {}
 
     def connected(self, at: Instant) -> None:
         with self._lock:
             self._up_since = at.utc
             self._connections += 1
-            self._refusing.clear()
+            self._connection_refused = None
 
-    def disconnected(self, at: Instant, why: str) -> None:
+    def disconnected(self, at: Instant, why: str, *, refused: bool) -> None:
         with self._lock:
+            self._connection_refused = why if refused else None
             if self._up_since is not None:
                 self._down_since_s = at.boot_s
             self._up_since = None
@@ -82,6 +86,11 @@ class LinkLedger:
         with self._lock:
             if topic in self._refusing or len(self._refusing) < REFUSING_MOST:
                 self._refusing[topic] = why
+
+    def forgive(self) -> None:
+        """The broker may have changed its mind: nothing is known to be refused."""
+        with self._lock:
+            self._refusing.clear()
 
     def stalled(self) -> None:
         with self._lock:
@@ -109,5 +118,6 @@ class LinkLedger:
                 set_aside=self._counts["set_aside"],
                 unheard=self._counts["unheard"],
                 bad_requests=self._counts["bad_requests"],
+                connection_refused=self._connection_refused,
                 refusing=tuple(f"{topic}: {why}" for topic, why in self._refusing.items()),
             )

@@ -206,15 +206,17 @@ class Publisher:
         self._papers.opened()
         self._rows.opened()
         if not self._ended_by_refusal:
+            self._ledger.forgive()
             self._papers.forgive()
             self._rows.forgive()
 
     def _disconnected(self, event: Disconnected, now: Instant) -> None:
         window = self._outbox.closed()
         self._rows.closed()
-        self._ledger.disconnected(now, event.why)
+        self._ledger.disconnected(now, event.why, refused=event.refused)
         self._link_trouble.failed(BrokerError("the link to the broker", event.why, ""), now.boot_s)
         if window is None:
+            self._ended_by_refusal = False  # it has been away since
             return  # a connection that was never made says nothing about messages
         # mosquitto 2.0.11, Debian's, answers a publish that its access rules refuse, and then hangs up
         self._ended_by_refusal = window.last_was_refusal
