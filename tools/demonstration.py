@@ -30,6 +30,7 @@ interval = 10
 name = "north"
 port = "{ports}/north"
 dialect = "bm"
+twin = "south"
 climate = {{ from = "frame" }}
 
 [[sensor]]

@@ -66,6 +66,7 @@ def sensor_setups(config: Config) -> list[SensorSetup]:
             name=sensor.name,
             dialect=DIALECTS[sensor.dialect],
             period_s=sensor.period,
+            twin=sensor.twin or next((s.name for s in config.sensor if s.twin == sensor.name), None),
             flow_l_min=sensor.flow,
             frame_climate=isinstance(sensor.climate, FrameClimate),
             climate_max_age_s=_climate_max_age_s(sensor),

@@ -33,11 +33,13 @@ SKIP_SPANS = 10  # a longer hole (suspend, a gap in a capture) leaves intervals 
 
 @dataclass(frozen=True, slots=True)
 class SensorSetup:
-    """What the pipeline must know of a sensor. `climate_max_age_s`: older climate counts as absent."""
+    """What the pipeline must know of a sensor. `twin` names the sensor beside it, in the same enclosure and air.
+    `climate_max_age_s`: older climate counts as absent."""
 
     name: str
     dialect: Dialect
     period_s: float = 1.0
+    twin: str | None = None
     flow_l_min: float = 0.1
     frame_climate: bool = False
     climate_max_age_s: float = 900.0
@@ -78,6 +80,7 @@ class _Sensor:
     health: SensorHealth
     cadence: Cadence
     decoder: Decoder
+    twin_health: SensorHealth | None = None
     seq: int | None = None
     accumulator: Accumulator = field(default_factory=Accumulator)
     climate: tuple[Climate, float] | None = None
@@ -100,6 +103,9 @@ class Pipeline:
         self._place = place
         self._interval = interval_s
         self._sensors = {s.name: self._sensor(s, at) for s in sensors}
+        for setup in sensors:
+            if setup.twin is not None:
+                self._sensors[setup.twin].twin_health = self._sensors[setup.name].health
         self._gateway = GatewayHealth()
         self._begin(at)
         self._next_judge = at.boot_s + JUDGE_EVERY_S
@@ -150,11 +156,14 @@ class Pipeline:
                 sensor.accumulator.bad += 1
                 health.damaged(event, at)
                 continue
-            health.observe(Observation(event, at))
+            observation = Observation(event, at)
+            health.observe(observation)
             if health.warming(at):
                 sensor.accumulator.warming_frames += 1
             else:
                 sensor.accumulator.add(event)
+                if sensor.twin_health is not None:
+                    sensor.twin_health.twin(observation)
 
     def line(self, name: str, state: LineState, at: Instant, why: str = "") -> None:
         """The line was opened or lost, the sensor put to sleep or woken."""

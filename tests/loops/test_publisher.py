@@ -93,8 +93,8 @@ def test_readings_of_an_outage_come_late_and_those_of_the_present_live() -> None
     gateway.minute_by_minute(60)
     gateway.clock.after(90.0, lambda: gateway.broker.cut(for_s=1800.0))
     gateway.run(3600.0)
-    assert gateway.arrived_seqs(LATE) == list(range(3, 31))
-    assert gateway.arrived_seqs(READING) == [1, 2, *range(31, 61)]
+    assert gateway.arrived_seqs(LATE) == list(range(3, 32))
+    assert gateway.arrived_seqs(READING) == [1, 2, *range(32, 61)]
 
 
 def test_a_link_that_owes_answers_is_given_up_and_nothing_counts_as_delivered_before() -> None:

@@ -30,9 +30,9 @@ class LineState(StrEnum):
 class Check(ABC):
     """One condition of one sensor. A check overrides the hooks it needs; the others cost nothing, see `listens`.
 
-    `code` names its finding. `clear_s`: how long the condition must be absent before the finding closes. `again_s`:
-    how long the check may need, after a restart of the daemon, to raise a condition that still holds. A check with
-    `settled` set sees no frame that came during warm-up.
+    `code` names its finding; where two checks of a sensor name the same, the surer one is heard. `clear_s`: how long
+    the condition must be absent before the finding closes. `again_s`: how long the check may need, after a restart of
+    the daemon, to raise a condition that still holds. A check with `settled` set sees no frame that came in warm-up.
 
     All times are boot seconds of one boot and do not run backwards.
     """
@@ -46,11 +46,14 @@ class Check(ABC):
     def observe(self, observation: Observation) -> None:  # noqa: B027
         """A good frame came."""
 
+    def twin(self, observation: Observation) -> None:  # noqa: B027
+        """A good, settled frame of the twin came: a second sensor in the same enclosure."""
+
     def damaged(self, damage: Damage, at: Instant) -> None:  # noqa: B027
         """Bytes came that were not a frame."""
 
-    def heard(self, size: int, at: Instant) -> None:  # noqa: B027
-        """`size` bytes came, whatever they turn out to be."""
+    def heard(self, data: bytes, at: Instant) -> None:  # noqa: B027
+        """Bytes came, whatever they turn out to be; told before what they turn out to be."""
 
     def line(self, state: LineState, at: Instant, why: str) -> None:  # noqa: B027
         """The line changed its state; `why` says the reason in words when it is GONE."""

@@ -8,7 +8,8 @@ from typing import Any
 
 from motekeep.health.check import Check, LineState, listens
 from motekeep.health.fan import FanStopped
-from motekeep.health.finding import Finding, FindingEvent
+from motekeep.health.fan_twin import FanStoppedBesideTwin
+from motekeep.health.finding import Finding, FindingEvent, Suspicion
 from motekeep.health.frozen import OutputFrozen
 from motekeep.health.ledger import Ledger, Terms
 from motekeep.health.line import FramesCorrupt, FramesMissing
@@ -32,7 +33,7 @@ class SensorHealth:
         self._warm_up = WarmingUp(dialect.warm_up_s, period_s, at)
         self._checks: tuple[Check, ...] = (
             self._warm_up,
-            FramesMissing(period_s, at),
+            FramesMissing(dialect, period_s, at),
             FramesCorrupt(period_s, at),
             OutputFrozen(flow_l_min, at),
             CountsSaturated(),
@@ -40,6 +41,7 @@ class SensorHealth:
             ChannelsInconsistent(),
             SensorError(),
             FanStopped(flow_l_min, period_s),
+            FanStoppedBesideTwin(flow_l_min, period_s),
         )
         terms = {check.code: Terms(check.clear_s, check.again_s) for check in self._checks}
         self._ledger = Ledger(sensor, terms)
@@ -51,6 +53,7 @@ class SensorHealth:
         self._observe_settled: tuple[Observe, ...] = tuple(
             [c.observe for c in checks if listens(c, "observe") and c.settled]
         )
+        self._twin = tuple([c.twin for c in checks if listens(c, "twin")])
         self._damaged = tuple([c.damaged for c in checks if listens(c, "damaged")])
         self._heard = tuple([c.heard for c in checks if listens(c, "heard")])
         self._line = tuple([c.line for c in checks if listens(c, "line")])
@@ -66,15 +69,20 @@ class SensorHealth:
             for hook in self._observe_settled:
                 hook(observation)
 
+    def twin(self, observation: Observation) -> None:
+        """A good, settled frame of the twin came."""
+        for hook in self._twin:
+            hook(observation)
+
     def damaged(self, damage: Damage, at: Instant) -> None:
         """Bytes came that were not a frame."""
         for hook in self._damaged:
             hook(damage, at)
 
-    def heard(self, size: int, at: Instant) -> None:
-        """`size` bytes came, whatever they turn out to be."""
+    def heard(self, data: bytes, at: Instant) -> None:
+        """Bytes came, whatever they turn out to be; to be told before the frames or the damage they make."""
         for hook in self._heard:
-            hook(size, at)
+            hook(data, at)
 
     def line(self, state: LineState, at: Instant, why: str = "") -> None:
         """The line was opened or lost (`why` in words), the sensor put to sleep or woken."""
@@ -103,10 +111,13 @@ class SensorHealth:
         return events
 
     def _update(self, at: Instant) -> list[FindingEvent]:
-        raised = {}
+        raised: dict[str, Suspicion] = {}
         for check in self._checks:
             suspicion = check.judge(at)
-            if suspicion is not None:
+            if suspicion is None:
+                continue
+            known = raised.get(check.code)
+            if known is None or suspicion.confidence > known.confidence:
                 raised[check.code] = suspicion
         return self._ledger.update(raised, at)
 
@@ -122,7 +133,7 @@ class SensorHealth:
 
     def dump(self) -> dict[str, Any]:
         """What `restore` needs in the daemon's next life, as plain values fit for JSON. Any: JSON."""
-        memories = {check.code: check.memory() for check in self._checks}
+        memories = {type(check).__name__: check.memory() for check in self._checks}
         return {"findings": self._ledger.dump(), "checks": {k: dict(m) for k, m in memories.items() if m is not None}}
 
     def restore(self, kept: Mapping[str, Any], at: Instant) -> None:
@@ -136,6 +147,6 @@ class SensorHealth:
             self._ledger.restore([f for f in findings if isinstance(f, dict)], at)
         memories = kept.get("checks")
         for check in self._checks:
-            memory = memories.get(check.code) if isinstance(memories, dict) else None
+            memory = memories.get(type(check).__name__) if isinstance(memories, dict) else None
             if isinstance(memory, dict):
                 check.recall(memory, at)

@@ -19,8 +19,9 @@ from motekeep.message.topics import Topics
 
 log = structlog.get_logger()
 
-LIVE_GRACE_S = 30.0  # a reading is live for its own interval and this
+LIVE_S = 30.0  # a reading that ended longer ago than this is no news but backlog; half an interval when that is less
 LIVE_PAGE = 10
+LOOK_BACK = 2  # rows of the present there can be at most, and one
 ALL = 2**62
 
 
@@ -59,12 +60,10 @@ class Rows:
 
     def opened(self) -> None:
         """A new connection: nothing is on its way."""
-        interval_s = self._settings.interval_s
-        look_back = int((interval_s + LIVE_GRACE_S) / interval_s) + 2
         for lane in self._lanes.values():
             lane.restart()
             lane.newest = self._newest(lane)
-            lane.live_from = lane.live_after = max(lane.newest - look_back, 0)
+            lane.live_from = lane.live_after = max(lane.newest - LOOK_BACK, 0)
 
     def forgive(self) -> None:
         """The broker may have changed its mind: no topic is held."""
@@ -228,4 +227,4 @@ class Rows:
     def _is_live(self, row: Row, now: Instant) -> bool:
         """Made in this boot, and ended so lately that it is the present. By the boot clock: the wall clock steps."""
         age_s = now.boot_s - row.boot_s - row.seconds
-        return row.boot_id == now.boot_id and age_s <= self._settings.interval_s + LIVE_GRACE_S
+        return row.boot_id == now.boot_id and age_s <= min(LIVE_S, self._settings.interval_s / 2.0)
