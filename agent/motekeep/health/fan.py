@@ -51,8 +51,9 @@ class FanStopped(Check):
        lowest two minutes of the half hour that ended 48 s earlier. Air that falls exponentially does that only with
        a time constant under about two minutes; an air cleaner in a room takes 8 or more, rain and a clean night far
        longer. The lowest two minutes, not the last: a plume that passes falls back to what was there before it.
-    2. Order. No channel with pulses enough has clearly kept more than the smallest one: smoke that ends and haze that
-       lifts take the small particles and leave the large ones.
+    2. Order. No larger channel with pulses enough has clearly kept more than a tenth: the false counts that may hold up
+       the smallest are not in it. Smoke that ends takes the small particles and leaves the large ones; gusty smoke
+       that thins takes all, but not so deep.
     3. Number. The pulses missing are too many for chance, also if the air had fallen to 0.6 of that lowest level.
        How much of a printed number one pulse is comes from the scatter of the unit's own two-minute means before, and
        while there are few of them from the worst that firmware does (one second of air of which half is looked at).
@@ -75,6 +76,7 @@ class FanStopped(Check):
     HISTORY = 150  # blocks before the fall: half an hour
     DEPTH = 0.25
     DEPTH_MASS = 0.15
+    LARGER = 0.1
     CHANCE = 1e-3
     AIR_FALLS_TO = 0.6
     LEAST_PULSES = 12.0
@@ -171,8 +173,8 @@ class FanStopped(Check):
         kept = left[0] / before[0]
         told = [i for i, pulses in enumerate(expected) if i and pulses >= self.ORDER_PULSES]
         for i in told:
-            if poisson_at_least(round(seen[i]), max(1.5 * kept, 0.1) * expected[i]) < 0.01:
-                return None  # this channel has kept clearly more
+            if poisson_at_least(round(seen[i]), self.LARGER * expected[i]) < 0.01:
+                return None
         by_size = any(poisson_at_most(int(seen[i]), 0.5 * kept * expected[i]) < 0.05 for i in told)
         return self._collapsed(blocks, before, left, per_pulse * length, by_size=by_size)
 
@@ -187,8 +189,8 @@ class FanStopped(Check):
 
     def _per_pulse(self, smallest: Sequence[float]) -> float:
         """How much of a two-minute mean one pulse is: half the mean square of differences between such means, over
-        their mean. They are taken 3 minutes apart, so that firmware averaging does not hide in it; slow changes of the
-        air make it larger, which is the safe side. The worst case counts like two such means."""
+        their mean, 3 minutes apart so that firmware averaging does not hide in it. Gusts make it larger, up to the
+        worst case, which cannot be passed; that also counts like two such means."""
         worst = self._per_pulse_counts if self._has_counts else self._per_pulse_mass
         worst /= self._frames_a_block * self.CHUNK
         sums = [0.0]
@@ -202,7 +204,7 @@ class FanStopped(Check):
             return worst
         own = sum(squares) / len(squares) / average
         independent = len(squares) / self.CHUNK
-        return (2.0 * worst + independent * own) / (2.0 + independent)
+        return min((2.0 * worst + independent * own) / (2.0 + independent), worst)
 
     @property
     def _has_counts(self) -> bool:

@@ -11,7 +11,8 @@ from motekeep.health.chance import binomial_at_least, rate_lower_bound
 from motekeep.health.check import Check, LineState
 from motekeep.health.finding import Suspicion
 from motekeep.instant import Instant
-from motekeep.wire.frame import Damage, Observation
+from motekeep.wire.frame import Damage, Dialect, Observation
+from motekeep.wire.garbage import explain
 
 
 class FramesMissing(Check):
@@ -32,8 +33,11 @@ class FramesMissing(Check):
     WINDOW_PERIODS = 20
     SHARE = 0.75
     MARKS = 32
+    TAIL = 4096  # bytes kept of a line without frames: some 4 s of 9600 baud, all that the explanation looks at
+    EXPLAIN_S = 300.0  # what they look like is looked at again after this; it costs some milliseconds
 
-    def __init__(self, period_s: float, at: Instant) -> None:
+    def __init__(self, dialect: Dialect, period_s: float, at: Instant) -> None:
+        self._dialect = dialect
         self._period = period_s
         self._patience = max(self.SILENT_S, self.SILENT_PERIODS * period_s)
         self._window = max(self.WINDOW_S, self.WINDOW_PERIODS * period_s)
@@ -42,8 +46,9 @@ class FramesMissing(Check):
         self._last = at.boot_s  # last good frame, or when they became due
         self._last_hit = at.boot_s
         self._arrived = 0  # good frames and hits since the watch began
-        self._bytes = 0  # since the last good frame
-        self._reasons: Counter[str] = Counter()  # of the damage since the last good frame
+        self._bytes = 0  # since frames stopped
+        self._tail = b""
+        self._likely = ("", 0.0)  # what the bytes look like, and until when that is good enough
         # (boot seconds, frames arrived by then), thinned to what the window needs
         self._marks: deque[tuple[float, int]] = deque(maxlen=2 * self.MARKS)
 
@@ -51,12 +56,17 @@ class FramesMissing(Check):
         self._arrived += 1
         self._last = observation.at.boot_s
         if self._bytes:
-            self._bytes = 0
-            self._reasons.clear()
+            self._quiet()
+
+    def _quiet(self) -> None:
+        self._bytes, self._tail, self._likely = 0, b"", ("", 0.0)
+
+    def heard(self, data: bytes, at: Instant) -> None:
+        if at.boot_s - self._last > self._patience / 2.0:
+            self._bytes += len(data)
+            self._tail = (self._tail + data)[-self.TAIL :]
 
     def damaged(self, damage: Damage, at: Instant) -> None:
-        self._reasons[damage.reason] += 1
-        self._bytes += damage.size
         if at.boot_s - self._last_hit >= self._period / 2.0:  # one hit a slot, however many pieces it broke into
             self._last_hit = at.boot_s
             self._arrived += 1
@@ -77,8 +87,7 @@ class FramesMissing(Check):
     def _begin(self, boot_s: float) -> None:
         self._listening = boot_s
         self._marks.clear()
-        self._bytes = 0
-        self._reasons.clear()
+        self._quiet()
 
     def judge(self, at: Instant) -> Suspicion | None:
         now = at.boot_s
@@ -102,19 +111,11 @@ class FramesMissing(Check):
         due = f"a frame is due every {self._period:g} s"
         if not self._bytes:
             return Suspicion(self._last, 0.99, f"no byte for {gap:.0f} s; {due}")
-        heard = f"{self._bytes} bytes but no whole frame for {gap:.0f} s"
-        return Suspicion(self._last, 0.97, f"{heard}; {self._likely(gap)}; {due}")
-
-    def _likely(self, gap: float) -> str:
-        """What the damage looks like. A wrong baud rate or dialect leaves bytes in which hardly a header is found;
-        a noisy line leaves headers whose frames fail; a floating one a few stray bytes."""
-        total = self._reasons.total()
-        if self._bytes * self._period < 5.0 * gap:  # the shortest frame has ten bytes
-            return "stray bytes, as from a floating line: likely no sensor on it"
-        if self._reasons["rubbish"] * 2 >= total:
-            return "hardly a frame start among them: likely a wrong baud rate or another dialect"
-        worst, count = self._reasons.most_common(1)[0]
-        return f"frames begin but fail ({worst} in {count} of {total}): likely another dialect or heavy noise"
+        if now >= self._likely[1]:
+            found = explain(self._tail, self._dialect.name, self._dialect.baud)
+            self._likely = (found.reason, now + self.EXPLAIN_S)
+        told = f"bytes but no whole frame for {gap:.0f} s: {self._likely[0]}"
+        return Suspicion(self._last, 0.97, f"{told}; {due}")
 
     def _judge_cadence(self, now: float) -> Suspicion | None:
         while now - self._marks[0][0] > self._window:
