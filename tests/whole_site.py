@@ -1,10 +1,9 @@
 """A whole gateway on loopback: broker, subscriber, sensors on pseudo-terminals, and the daemon as a process.
 
 Used by `tests/whole` and `tools/bench`. The air and the sensors are emulated, everything else is real. What is started
-here is stopped here, by its process id, however the test ends.
+here is stopped here, by its process id, however the test ends. Any: documents are looked at as the JSON that they are.
 """
 
-import heapq
 import itertools
 import json
 import os
@@ -17,9 +16,9 @@ from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 from mosquitto import HELLO, Mosquitto
-
 from motesim.capture import capture_lines
 from motesim.plan import SensorPlan, SitePlan
 from motesim.port import Port
@@ -136,8 +135,8 @@ class Heard:
     text: str
 
     @property
-    def document(self) -> dict[str, object]:
-        found: dict[str, object] = json.loads(self.text)
+    def document(self) -> dict[str, Any]:
+        found: dict[str, Any] = json.loads(self.text)
         return found
 
 
@@ -156,7 +155,7 @@ class Subscriber:
             # a subscription is in force once something is heard
             for _ in range(200):
                 mosquitto.publish(HELLO, "")
-                if self.wait(lambda heard: bool(heard), 0.1):
+                if self.wait(bool, 0.1):
                     return
             raise AssertionError("mosquitto_sub hears nothing")
         except BaseException:
@@ -173,11 +172,11 @@ class Subscriber:
         return [heard for heard in list(self.heard) if heard.topic == f"{ROOT}/{level}"]
 
     def wait_on(
-        self, level: str, what: Callable[[dict[str, object]], object], seconds: float = PATIENCE_S
-    ) -> dict[str, object]:
+        self, level: str, what: Callable[[dict[str, Any]], object], seconds: float = PATIENCE_S
+    ) -> dict[str, Any]:
         """The first document on this topic of which `what` is true."""
 
-        def found() -> dict[str, object] | None:
+        def found() -> dict[str, Any] | None:
             return next((h.document for h in self.on(level) if what(h.document)), None)
 
         assert self.wait(lambda _: found() is not None, seconds), f"waited {seconds:.0f} s in vain on {level}"
@@ -314,14 +313,12 @@ def gateway(
         yield site
 
 
-def readings(heard: Sequence[Heard]) -> Iterator[tuple[Heard, dict[str, object]]]:
+def readings(heard: Sequence[Heard]) -> Iterator[tuple[Heard, dict[str, Any]]]:
     """Every reading among them, live and late, in the order in which they came."""
     for one in heard:
         kind = one.topic.removeprefix(f"{ROOT}/").partition("/")[0]
         if kind == "reading":
             yield one, one.document
         elif kind == "late":
-            listed = one.document["readings"]
-            assert isinstance(listed, list)
-            for document in listed:
+            for document in one.document["readings"]:
                 yield one, document

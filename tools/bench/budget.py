@@ -2,10 +2,10 @@
 
     python tools/bench/budget.py [--minutes N] [--command PATH]
 
-Runs `motekeep run` for a minute, then measures for whole minutes: processor time of all threads, peak memory, wake-ups,
-bytes written, transactions of the journal (the commit frames of its write-ahead log, so none is missed). Beside it and at
-the same time runs the peer, which no reader in this language can undercut by much: one loop that polls four ports of its
-own with the same frames, reads and decodes them, and does nothing else.
+Runs `motekeep run` for a minute, then measures for whole minutes: processor time of all threads, peak memory,
+wake-ups, bytes written, transactions of the journal (the commit frames of its write-ahead log, so none is missed).
+Beside it and at the same time runs the peer, which no reader in this language can undercut by much: one loop that polls
+four ports of its own with the same frames, reads and decodes them, and does nothing else.
 
 Without `--command` the daemon runs from an environment of its own with the base install only, as on a device; the one
 that runs the tests holds libraries that cost memory. Exit 1 when a bar is missed.

@@ -4,14 +4,14 @@
 
 The real daemon (`app.Daemon`: pipeline, journal, publisher, broker edge) in processes of its own, on a clock that runs
 `speed` times faster (`tests/fast_daemon.py`), with four emulated sensors on pseudo-terminals, a real mosquitto and a
-mosquitto_sub whose session outlives its connections. Half of the kills come at any moment, half in the first hundredth
-of a second after the end of an interval, where a commit, a message or an answer is under way. Some come before the broker
-goes, most while it is gone, some while the backlog drains. Late messages are held to one in 50 s, so that the
-drain lasts and live readings have something to be delayed by.
+mosquitto_sub whose session outlives its connections. Half of the kills come at any moment, half in the first 50 ms
+after the end of an interval, where a commit, a message or an answer is under way. Some come before the broker goes,
+most while it is gone, some while the backlog drains. Late messages are held to one in 50 s, so that the drain lasts and
+live readings have something to be delayed by.
 
 Exit 1 when a committed reading did not arrive, when something arrived that is not in the journal, when two readings
-carry one number or a number is left out, when `late` is not oldest first, when a live reading had to wait, or when a daemon
-died by itself. Doubles are allowed, since a kill loses what the broker has answered last, and counted.
+carry one number or a number is left out, when `late` is not oldest first, when live readings had to wait, or when a
+daemon died by itself. Doubles are allowed, since a kill loses what the broker has answered last, and counted.
 """
 
 import argparse
@@ -32,8 +32,6 @@ sys.path.insert(0, str(Path(__file__).resolve().parents[2] / "tests"))
 
 from fast_daemon import EPOCH
 from whole_site import FAST_DAEMON, Gateway, Subscriber, boot_s, gateway, readings
-
-from motekeep.instant import from_rfc3339
 
 NAMES = ("north", "east", "south", "west")
 INTERVAL_S = 10
@@ -102,7 +100,9 @@ def kill_times(rng: random.Random, count: int, begin_s: float, end_s: float, spe
 
 
 class Outage:
-    def __init__(self, site: Gateway, subscriber: Subscriber, nursery: Nursery, speed: float, rng: random.Random) -> None:
+    def __init__(
+        self, site: Gateway, subscriber: Subscriber, nursery: Nursery, speed: float, rng: random.Random
+    ) -> None:
         self._site = site
         self._subscriber = subscriber
         self._nursery = nursery
@@ -175,8 +175,7 @@ def committed(store: Path) -> dict[Key, float]:
 def arrivals(subscriber: Subscriber) -> Iterator[tuple[Key, bool, float, str]]:
     """(sensor, seq), whether it came late, boot seconds of its coming, start of its interval; in order."""
     for heard, document in readings(list(subscriber.heard)):
-        key = str(document["sensor"]), int(str(document["seq"]))
-        yield key, "/late/" in heard.topic, heard.boot_s, str(document["start"])
+        yield (document["sensor"], document["seq"]), "/late/" in heard.topic, heard.boot_s, document["start"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -202,7 +201,7 @@ def judge(story: Story, arrived: Sequence[tuple[Key, bool, float, str]], speed: 
     highest = Counter({sensor: max(n for s, n in story.journal if s == sensor) for sensor, _ in story.journal})
     left_out = highest.total() - len(story.journal)
     disordered = [sensor for sensor, numbers in order.items() if numbers != sorted(numbers)]
-    rows = [
+    return [
         Row(bool(story.committed), "committed", str(len(story.committed))),
         Row(True, "arrived", str(len(set(story.committed) & set(first)))),
         Row(not missing, "committed and missing", f"{len(missing)} {sorted(missing)[:5] if missing else ''}"),
@@ -213,10 +212,13 @@ def judge(story: Story, arrived: Sequence[tuple[Key, bool, float, str]], speed: 
         Row(bool(order) and not disordered, "came late, oldest first", f"{sum(map(len, order.values()))}"),
         *_live(story, first, speed),
         Row(len(story.ends) == kills, "kills", str(len(story.ends))),
-        Row(all(end == -9 for end in story.ends), "daemons that died by themselves", str(sum(e != -9 for e in story.ends))),
+        Row(
+            all(end == -9 for end in story.ends),
+            "daemons that died by themselves",
+            str(sum(e != -9 for e in story.ends)),
+        ),
         Row(story.last_end == 0, "exit code at the end, by SIGTERM", str(story.last_end)),
     ]
-    return rows
 
 
 def _live(story: Story, first: dict[Key, tuple[bool, float, str]], speed: float) -> list[Row]:
@@ -226,7 +228,9 @@ def _live(story: Story, first: dict[Key, tuple[bool, float, str]], speed: float)
         return EPOCH + speed * first[key][1]
 
     # from the first live reading after the last kill on: the link is up
-    begin = min((came_s(key) for key, (late, *_) in first.items() if not late and came_s(key) > story.last_kill_s), default=0.0)
+    begin = min(
+        (came_s(key) for key, (late, *_) in first.items() if not late and came_s(key) > story.last_kill_s), default=0.0
+    )
     backlog = [key for key, end in story.committed.items() if end < story.back_s and key in first]
     end = max((came_s(key) for key in backlog), default=0.0)
     during = [key for key, ended in story.committed.items() if begin <= ended <= end and key in first]
@@ -272,7 +276,10 @@ def main() -> int:
     parser.add_argument("--keep", type=Path, metavar="FOLDER", help="leave journal and logs there")
     arguments = parser.parse_args()
     seed = random.SystemRandom().randrange(1 << 31) if arguments.seed is None else arguments.seed
-    print(f"broker gone for {arguments.gone:g} min, {arguments.kills} kills, seed {seed}, {arguments.speed:g} times as fast")
+    print(
+        f"broker gone for {arguments.gone:g} min, {arguments.kills} kills, seed {seed}, "
+        f"{arguments.speed:g} times as fast"
+    )
     with working_folder(arguments.keep) as folder:
         rows = outage(arguments.gone, arguments.kills, seed, arguments.speed, folder)
     print()

@@ -32,7 +32,7 @@ class SerialLine:
     def read(self, timeout_s: float) -> bytes:
         """All that came with the next burst, at most 4096 bytes; empty when none came in `timeout_s`."""
         try:
-            if self._serial.timeout != timeout_s:  # setting it makes pyserial set the whole line up anew: a tenth of a read
+            if self._serial.timeout != timeout_s:  # setting it sets the whole line up anew: a tenth of a read
                 self._serial.timeout = timeout_s
             first = self._serial.read(1)
             if not first:
