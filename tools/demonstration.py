@@ -209,7 +209,7 @@ class Checks:
 def story(site: Site, checks: Checks) -> None:
     """One trouble after the other. Each waits for what it should cause, so a slow machine only takes longer."""
     say, wait = site.say, site.wait
-    say("-- a broker, a subscriber, two emulated sensors on pseudo-terminals, and the daemon")
+    say("-- a broker, a subscriber, two emulated sensors on pseudo-terminals, and the daemon; a reading every 10 s")
     site.start_broker()
     site.subscribe()
     site.start_sensors()
@@ -252,6 +252,8 @@ def story(site: Site, checks: Checks) -> None:
     checks.note(well, "the health status says failure")
     well = wait(lambda s: any(a["sensor"] == "north" for a in s.amendments), 5)
     checks.note(well, "readings made before it was proven are amended")
+    failed = lambda s: any(n == "north" and b["flag"] == 4 for (n, _), b in s.bodies.items())  # noqa: E731
+    checks.note(wait(failed, 15), "readings from then on carry flag 4, fail")
 
     say("-- the daemon is killed (SIGKILL); the broker notices")
     assert site.daemon is not None
