@@ -23,7 +23,7 @@ SENSORS = ("north", "south")
 
 class JournalMachine(RuleBasedStateMachine):
     """`durable` and `held` are the numbers in the file and in memory; `open` those not marked; `unwritten` those whose
-    mark a crash would forget."""
+    mark a crash would forget, `perhaps` those of them whose mark may have been written."""
 
     @initialize(pad=st.sampled_from(["", "filler " * 1800]))
     def begin(self, pad: str) -> None:
@@ -37,6 +37,7 @@ class JournalMachine(RuleBasedStateMachine):
         self.held: dict[str, set[int]] = {s: set() for s in SENSORS}
         self.open: dict[str, set[int]] = {s: set() for s in SENSORS}
         self.unwritten: dict[str, set[int]] = {s: set() for s in SENSORS}
+        self.perhaps: dict[str, set[int]] = {s: set() for s in SENSORS}
         self.used = dict.fromkeys(SENSORS, 0)
         self.in_flight: list[Row] = []
 
@@ -61,7 +62,7 @@ class JournalMachine(RuleBasedStateMachine):
         for sensor in SENSORS:
             self.durable[sensor] |= self.held[sensor]
             self.held[sensor] = set()
-            self.unwritten[sensor] = set()
+            self.unwritten[sensor] = self.perhaps[sensor] = set()
 
     @rule(count=st.integers(1, 12))
     def commit(self, count: int) -> None:
@@ -112,9 +113,9 @@ class JournalMachine(RuleBasedStateMachine):
     def prune(self, days: float) -> None:
         self.site.clock.advance(days * 86400)
         self.site.journal.prune(self.site.clock.now())
-        if not self.failing:
-            for sensor in SENSORS:
-                self.unwritten[sensor] = set()
+        for sensor in SENSORS:
+            # it writes the marks first, if the file is open
+            self.perhaps[sensor] = set(self.unwritten[sensor])
 
     @rule()
     def fail(self) -> None:
@@ -138,8 +139,10 @@ class JournalMachine(RuleBasedStateMachine):
         self.in_flight = []
         for sensor in SENSORS:
             # marks that were not written are forgotten, and so are readings that only memory had
-            self.open[sensor] = (self.open[sensor] | self.unwritten[sensor]) & self.durable[sensor]
-            self.unwritten[sensor] = self.held[sensor] = set()
+            waiting = {n for row in self.site.waiting(sensor) for n in range(row.from_seq, row.seq + 1)}
+            forgotten = self.unwritten[sensor] - (self.perhaps[sensor] - waiting)
+            self.open[sensor] = (self.open[sensor] | forgotten) & self.durable[sensor]
+            self.unwritten[sensor] = self.held[sensor] = self.perhaps[sensor] = set()
             assert self.site.journal.next_seq(sensor) == self.used[sensor] + 1
 
     @invariant()

@@ -236,7 +236,7 @@ def test_readings_that_only_memory_has_are_stamped_as_well(site: Site, monkeypat
     site.minutes(2)
     fail = monkeypatch.context()
     with fail as patch:
-        patch.setattr(site.journal, "_save", lambda held, at: False)
+        patch.setattr(site.journal, "_save", lambda held, at: site.journal._hold(held))
         site.minutes(2)
         site.clock.advance(900)
         site.deliver()

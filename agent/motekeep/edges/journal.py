@@ -25,6 +25,7 @@ from motekeep.edges.journal_restamp import Restamper
 from motekeep.edges.journal_room import Room, count_lost
 from motekeep.edges.journal_schema import (
     FULL,
+    PAGE_BYTES,
     ForeignError,
     Sizes,
     code_of,
@@ -42,15 +43,14 @@ log = structlog.get_logger()
 
 # Findings that wait for a broker: some years of ordinary ones; the oldest go first and are counted as `notices`.
 MAX_NOTICES = 5000
-HELD_A_TRANSACTION = 50
+# What was held back is stored in transactions of this size, or an eighth of a small journal: each has to find room.
+HELD_BYTES = 1 << 18
 PRUNE_BATCHES = 10
 # With less than this left on the disk and half of the ballast given, the file stops growing and its log is emptied at
 # every commit: within the room that they have, both go on beside others that keep the disk full. The other half of the
 # ballast is for bringing over what the log has already.
 TIGHT_BYTES = 1 << 20
 DAY_S = 86400.0
-# What a row takes beside its body: its other columns, its entry in the index.
-ROW_BYTES = 160
 NOTHING = Held((), ())
 
 
@@ -77,6 +77,7 @@ class Journal:
         self._settings = settings
         self._clock = clock
         self._ledger = Ledger()
+        self._held_bytes = min(HELD_BYTES, Sizes(settings.max_bytes).max_pages * PAGE_BYTES // 8)
         self._boots = Boots()
         self._file = JournalFile(settings.path, Sizes(settings.max_bytes), self._ledger, self._boots, progress)
         self._room = Room(self._ledger)
@@ -121,7 +122,7 @@ class Journal:
 
     def flush(self, at: Instant) -> None:
         """Write what only memory knows. A flush that the store cannot take loses nothing: the next commit writes it."""
-        if self._ledger.held(1) or self._ledger.changes(()) or self._boots.unsaved:
+        if self._ledger.all_held() or self._ledger.changes(()) or self._boots.unsaved:
             self._save(NOTHING, at)
 
     def pending_marks(self) -> int:
@@ -132,7 +133,7 @@ class Journal:
         if not at.trusted:
             return []
         self._boots.trust(at)
-        notices = self._restamper.held(at) if self._ledger.held(1) else []
+        notices = self._restamper.held(at) if self._ledger.all_held() else []
         db = self._file.connection
         if db is None:
             return notices
@@ -202,7 +203,7 @@ class Journal:
         for _ in range(2):
             try:
                 db = self._file.ready(at)
-                while waiting := self._ledger.held(HELD_A_TRANSACTION):
+                while waiting := self._ledger.oldest_held(self._held_bytes):
                     self._write(db, waiting)
                 self._write(db, [held])
             except (sqlite3.Error, StoreError, OSError) as error:
@@ -226,10 +227,8 @@ class Journal:
         """One transaction: readings, notices, kept values, marks, losses, boots."""
         readings = [r for held in adding for r in held.readings]
         notices = [n for held in adding for n in held.notices]
-        if readings or notices:
-            size = sum(len(r.body) + ROW_BYTES for r in readings) + sum(len(n.body) for n in notices)
-            if not self._make_room(db, size):
-                raise StoreFullError("storing readings", "the journal is at its limit", "bring the uplink back")
+        if (readings or notices) and not self._make_room(db, sum(held.bytes for held in adding)):
+            raise StoreFullError("storing readings", "the journal is at its limit", "bring the uplink back")
         changes = self._ledger.changes(adding)
         if not (readings or notices or changes or self._boots.unsaved):
             return

@@ -20,6 +20,8 @@ MAX_HELD_NOTICES = 500
 # The state of a sensor is written with every commit. Ranges come from outages and refusals; past this many the smallest
 # holes are closed, which sends some readings twice.
 MAX_RANGES = 64
+# What a row takes beside its body: its other columns, its entry in the index.
+ROW_BYTES = 160
 
 
 @dataclass(slots=True)
@@ -68,6 +70,11 @@ class Held:
 
     readings: tuple[NewReading, ...]
     notices: tuple[NoticeRow, ...]
+
+    @property
+    def bytes(self) -> int:
+        """About what it takes in the file."""
+        return sum(len(r.body) + ROW_BYTES for r in self.readings) + sum(len(n.body) + ROW_BYTES for n in self.notices)
 
 
 @dataclass(frozen=True, slots=True)
@@ -174,10 +181,21 @@ class Ledger:
         with self._lock:
             return sum(len(h.readings) for h in self._held)
 
-    def held(self, batches: int) -> list[Held]:
-        """The oldest ones held back."""
+    def all_held(self) -> list[Held]:
         with self._lock:
-            return [self._held[i] for i in range(min(batches, len(self._held)))]
+            return list(self._held)
+
+    def oldest_held(self, bytes_: int) -> list[Held]:
+        """The oldest ones held back, about that much of them; at least one unless there is none."""
+        chosen: list[Held] = []
+        size = 0
+        with self._lock:
+            for held in self._held:
+                size += held.bytes
+                if chosen and size > bytes_:
+                    break
+                chosen.append(held)
+        return chosen
 
     def replace_held(self, held: Sequence[Held]) -> None:
         """The same ones with other bodies, after a restamp."""

@@ -84,7 +84,7 @@ class Restamper:
             shifts: list[_Shift] = []
             everything = [
                 replace(held, readings=tuple(self._held_reading(r, shifts, at) for r in held.readings))
-                for held in self._ledger.held(batches=1_000_000)
+                for held in self._ledger.all_held()
             ]
             self._ledger.replace_held(everything)
             notices = self._amendments(shifts)
