@@ -87,7 +87,7 @@ def poisson_at_least(k: int, mean: float) -> float:
         return 1.0 - poisson_at_most(k - 1, mean)
     term = total = exp(k * log(mean) - mean - lgamma(k + 1))
     i = k
-    while term >= total * _NEGLIGIBLE:
+    while term > total * _NEGLIGIBLE:
         i += 1
         term *= mean / i
         total += term

@@ -5,17 +5,14 @@ open and close: that is the ledger's.
 """
 
 from abc import ABC, abstractmethod
-from collections.abc import Mapping, Sequence
 from enum import StrEnum
 from typing import ClassVar
 
 from motekeep.health.finding import Suspicion
+from motekeep.health.memory import Memory
 from motekeep.instant import Instant
 from motekeep.measure.interval import Interval
 from motekeep.wire.frame import Damage, Observation
-
-# What a check remembers across a restart of the daemon: plain numbers, fit for JSON.
-Memory = Mapping[str, float | Sequence[float]]
 
 
 class LineState(StrEnum):

@@ -11,8 +11,9 @@ from math import sqrt
 from typing import ClassVar
 
 from motekeep.health.chance import poisson_at_least, poisson_at_most
-from motekeep.health.check import Check, LineState, Memory
+from motekeep.health.check import Check, LineState
 from motekeep.health.finding import Suspicion
+from motekeep.health.memory import Memory, is_number
 from motekeep.instant import Instant
 from motekeep.wire.frame import Frame, Layout, Observation
 
@@ -263,11 +264,14 @@ class FanStopped(Check):
         return {"before": collapse.before, "left": collapse.left, "sorted": float(collapse.sorted)}
 
     def recall(self, memory: Memory, at: Instant) -> None:
-        match memory:
-            case {"before": [*before], "left": [*left], "sorted": float() | int() as by_size}:
-                if 0 < len(before) == len(left) and before[0] > 0.0:
-                    evidence = f"stopped before the restart: smallest channel {before[0]:.4g} to {left[0]:.3g}"
-                    self._collapse = _Collapse(at.boot_s, tuple(before), tuple(left), bool(by_size), evidence)
+        before, left, by_size = memory.get("before"), memory.get("left"), memory.get("sorted")
+        if not isinstance(before, list) or not isinstance(left, list) or not is_number(by_size):
+            return
+        if not all(is_number(level) for level in (*before, *left)) or len(before) != len(left):
+            return
+        if before and before[0] > 0.0:
+            evidence = f"stopped before the restart: smallest channel {before[0]:.4g} to {left[0]:.3g}"
+            self._collapse = _Collapse(at.boot_s, tuple(before), tuple(left), bool(by_size), evidence)
 
 
 def _mean(blocks: Sequence[_Block]) -> Levels:

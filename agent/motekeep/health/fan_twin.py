@@ -8,8 +8,9 @@ from dataclasses import dataclass
 from statistics import median
 from typing import ClassVar
 
-from motekeep.health.check import Check, LineState, Memory
+from motekeep.health.check import Check, LineState
 from motekeep.health.finding import Suspicion
+from motekeep.health.memory import Memory
 from motekeep.instant import Instant
 from motekeep.wire.frame import Frame, Observation
 

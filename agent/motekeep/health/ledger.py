@@ -18,6 +18,7 @@ from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 
 from motekeep.health.finding import KINDS, Finding, FindingEvent, Suspicion
+from motekeep.health.memory import is_number
 from motekeep.instant import Instant
 
 # Findings that closed a while ago and may still reach into an interval that is being closed. Intervals are at most
@@ -140,12 +141,12 @@ class Ledger:
         self._offset, self._boot = at.offset, at.boot_id
         for kept in findings:
             code, since, confidence = kept.get("code"), kept.get("since"), kept.get("confidence")
-            if code not in self._terms or not isinstance(code, str):
+            if not isinstance(code, str) or code not in self._terms:
                 continue
-            if not isinstance(since, float | int) or not isinstance(confidence, float | int):
+            if not is_number(since) or not is_number(confidence):
                 continue
             boot_s = kept.get("boot_s")
-            if kept.get("boot") != at.boot_id or not isinstance(boot_s, float | int):
+            if kept.get("boot") != at.boot_id or not is_number(boot_s):
                 boot_s = None
             began = since - at.offset if boot_s is None else boot_s
             self._open[code] = _Entry(
