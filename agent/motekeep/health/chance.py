@@ -51,7 +51,7 @@ def rate_lower_bound(k: int, n: int, alpha: float) -> float:
     if k <= 0:
         return 0.0
     low, high = 0.0, k / n
-    for _ in range(50):
+    for _ in range(30):
         middle = (low + high) / 2.0
         if binomial_at_least(k, n, middle) < alpha:
             low = middle

@@ -3,6 +3,7 @@
 Owns what is known of the traffic on one sensor's line. Must not know what the frames say.
 """
 
+from bisect import bisect_left
 from collections import Counter, deque
 from dataclasses import dataclass
 from typing import ClassVar
@@ -20,8 +21,10 @@ class FramesMissing(Check):
 
     Silence counts after 30 s or 8 periods, whichever is longer: a sensor that re-enumerates, restarts or skips a few
     frames is back by then, and at 1 s and 6 s cadence it leaves more than two minutes of the three in which a failure
-    must be known. Too few means under 75 % of the frames due (good and damaged together: damage has its own finding)
-    within 2 minutes or 20 periods: the completeness below which a mean no longer stands for its span.
+    must be known. Too few means under 75 % of the frames due (good and damaged together: damage has its own finding),
+    the completeness below which a mean no longer stands for its span, and so few that a line which loses every tenth
+    frame would do it with a chance below 1e-5. Looked at over 2 minutes or 20 periods, and over five times as long, so
+    that a slow cadence has frames enough for light losses too.
     """
 
     code: ClassVar[str] = "frames-missing"
@@ -31,8 +34,11 @@ class FramesMissing(Check):
     SILENT_PERIODS = 8
     WINDOW_S = 120.0
     WINDOW_PERIODS = 20
+    LONG = 5
     SHARE = 0.75
-    MARKS = 32
+    USUAL_LOSS = 0.1
+    CHANCE = 1e-5
+    MARKS = 100  # of the long window
     TAIL = 4096  # bytes kept of a line without frames: some 4 s of 9600 baud, all that the explanation looks at
     EXPLAIN_S = 300.0  # what they look like is looked at again after this; it costs some milliseconds
 
@@ -51,6 +57,7 @@ class FramesMissing(Check):
         self._likely = ("", 0.0)  # what the bytes look like, and until when that is good enough
         # (boot seconds, frames arrived by then), thinned to what the window needs
         self._marks: deque[tuple[float, int]] = deque(maxlen=2 * self.MARKS)
+        self._spacing = self.LONG * self._window / self.MARKS
 
     def observe(self, observation: Observation) -> None:
         self._arrived += 1
@@ -95,7 +102,7 @@ class FramesMissing(Check):
             return self._judge_gone(now, *self._gone)
         if self._listening is None:
             return None
-        if not self._marks or now - self._marks[-1][0] >= self._window / self.MARKS:
+        if not self._marks or now - self._marks[-1][0] >= self._spacing:
             self._marks.append((now, self._arrived))
         if now - self._last >= self._patience:
             return self._judge_silent(now)
@@ -118,18 +125,23 @@ class FramesMissing(Check):
         return Suspicion(self._last, 0.97, f"{told}; {due}")
 
     def _judge_cadence(self, now: float) -> Suspicion | None:
-        while now - self._marks[0][0] > self._window:
-            self._marks.popleft()
-        if not self._marks or now - self._marks[0][0] < 0.9 * self._window:
+        marks = self._marks
+        while now - marks[0][0] > self.LONG * self._window:
+            marks.popleft()
+        longest = now - marks[0][0]
+        if longest < 0.9 * self._window:
             return None
-        first, arrived = self._marks[0]
-        span = now - first
+        short = marks[bisect_left(marks, (now - self._window, 0))]
+        return self._too_few(now, *short) or self._too_few(now, *marks[0])
+
+    def _too_few(self, now: float, since: float, arrived: int) -> Suspicion | None:
+        span = now - since
         came, due = self._arrived - arrived, span / self._period
-        if came >= self.SHARE * due:
+        if came >= self.SHARE * due or binomial_at_least(int(due) - came, int(due), self.USUAL_LOSS) > self.CHANCE:
             return None
         pace = f", one every {span / came:.2g} s on average" if came else ""
         evidence = f"{came} of {due:.0f} frames due in {span:.0f} s came{pace}; one is due every {self._period:g} s"
-        return Suspicion(first, 0.9, evidence)
+        return Suspicion(since, 0.9, evidence)
 
 
 @dataclass(frozen=True, slots=True)
@@ -163,6 +175,7 @@ class FramesCorrupt(Check):
     WINDOW_S = 900.0
     EPISODE_S = 30.0
     EPISODES = 3
+    EVIDENCE_S = 300.0  # how often the words are made anew while it holds: the bound costs half a millisecond
 
     def __init__(self, period_s: float, at: Instant) -> None:
         self._period = period_s
@@ -172,6 +185,7 @@ class FramesCorrupt(Check):
         self._hits: deque[_Hit] = deque(maxlen=1500)
         self._deaf_until = at.boot_s + max(2.0, period_s)  # the first frame of an open line is often cut in half
         self._since: float | None = None
+        self._told = ("", 0.0)  # the evidence, and until when it is good enough
 
     def observe(self, observation: Observation) -> None:
         self._good += 1
@@ -203,11 +217,13 @@ class FramesCorrupt(Check):
             episodes = len({hit.boot_s // self.EPISODE_S for hit in self._hits})
             if episodes < self.EPISODES or binomial_at_least(bad, total, self.LIMIT) >= self.ALPHA:
                 return None
-            self._since = self._hits[0].boot_s
+            self._since, self._told = self._hits[0].boot_s, ("", now)
         elif bad <= self.LIMIT / 2.0 * total:
             self._since = None
             return None
-        return Suspicion(self._since, 0.95, self._evidence(bad, total))
+        if now >= self._told[1]:
+            self._told = (self._evidence(bad, total), now + self.EVIDENCE_S)
+        return Suspicion(self._since, 0.95, self._told[0])
 
     def _evidence(self, bad: int, total: int) -> str:
         bound = rate_lower_bound(bad, total, self.ALPHA)
