@@ -32,11 +32,13 @@ class Boots:
         self._lock = Lock()
         self._boots: list[Boot] = []
         self._unsaved = False
+        self._names: dict[int, str] = {}
 
     def load(self, connection: sqlite3.Connection) -> None:
         rows = connection.execute("SELECT number, boot_id, seconds, clock_offset FROM boots ORDER BY number").fetchall()
         with self._lock:
             self._boots = [Boot(*row) for row in rows]
+            self._names = {b.number: b.boot_id for b in self._boots}
 
     def begin(self, connection: sqlite3.Connection | None, at: Instant) -> None:
         """Make this boot the newest one, unless it is; how long the one before lasted is read off its readings."""
@@ -46,6 +48,7 @@ class Boots:
             if not self._boots or self._boots[-1].boot_id != at.boot_id:
                 number = self._boots[-1].number + 1 if self._boots else 1
                 self._boots.append(Boot(number, at.boot_id, 0.0, None))
+                self._names = {**self._names, number: at.boot_id}
             self._unsaved = True
 
     def _measure(self, connection: sqlite3.Connection) -> None:
@@ -109,6 +112,10 @@ class Boots:
         with self._lock:
             boots = list(self._boots)
         return boots, [BootSpan(b.seconds, b.offset) for b in boots]
+
+    def name_of(self, number: int) -> str:
+        """The boot id of a number; empty for one never heard of."""
+        return self._names.get(number, "")
 
     def number_of(self, boot_id: str) -> int:
         """Raises KeyError for a boot never begun."""

@@ -6,7 +6,7 @@ given again, and an empty queue costs no query.
 """
 
 from collections import Counter, deque
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from threading import Lock
 
@@ -327,32 +327,29 @@ class Ledger:
 
     def delivered(self, rows: Iterable[Row]) -> None:
         with self._lock:
-            for row in rows:
-                self._mark(row)
+            for sensor, low, high in _stretches(rows):
+                self._mark(sensor, low, high)
 
     def sent(self, rows: Iterable[Row]) -> None:
         with self._lock:
-            for row in rows:
-                state = self._of(row.sensor)
-                waiting = state.waiting.within(row.from_seq, row.seq)
-                if self._mark(row):
-                    for low, high in waiting:
-                        state.sent.add(low, high)
+            for sensor, low, high in _stretches(rows):
+                waiting = self._of(sensor).waiting.within(low, high)
+                if self._mark(sensor, low, high):
+                    for span in waiting:
+                        self._of(sensor).sent.add(*span)
 
     def aside(self, rows: Iterable[Row], kind: str) -> None:
         with self._lock:
             for row in rows:
-                self._count(kind, 1 if self._mark(row) else 0)
+                self._count(kind, 1 if self._mark(row.sensor, row.from_seq, row.seq) else 0)
 
     def taken(self, sensor: str, through_seq: int) -> None:
         with self._lock:
             state = self._sensors.get(sensor)
-            if state is None or through_seq < 1:
+            if state is None:
                 return
             through = min(through_seq, state.used)
-            if state.waiting.remove(1, through) + state.sent.remove(1, through):
-                state.changes += 1
-                self._marks += 1
+            self._mark(sensor, 1, through)
 
     def notices_marked(self, ids: Iterable[int]) -> None:
         with self._lock:
@@ -364,14 +361,13 @@ class Ledger:
         with self._lock:
             return self._marks
 
-    def _mark(self, row: Row) -> int:
-        state = self._of(row.sensor)
-        low, high = row.from_seq, row.seq
+    def _mark(self, sensor: str, low: int, high: int) -> int:
+        state = self._of(sensor)
         # both, whichever it was: a reading sent twice may be in either
         gone = state.waiting.remove(low, high) + state.sent.remove(low, high)
         if gone:
             state.changes += 1
-            self._marks += 1
+            self._marks += gone
         return gone
 
     # -- counting -----------------------------------------------------------------------------------------------
@@ -424,6 +420,20 @@ class Ledger:
         if state is None:
             state = self._sensors[sensor] = SensorState()
         return state
+
+
+def _stretches(rows: Iterable[Row]) -> Iterator[tuple[str, int, int]]:
+    """Neighbours as one: sensor, first and last number. A batch of a hundred is one stretch nearly always."""
+    sensor, low, high = "", 0, 0
+    for row in rows:
+        if row.sensor == sensor and row.from_seq == high + 1:
+            high = row.seq
+            continue
+        if sensor:
+            yield sensor, low, high
+        sensor, low, high = row.sensor, row.from_seq, row.seq
+    if sensor:
+        yield sensor, low, high
 
 
 def as_row(reading: NewReading) -> Row:

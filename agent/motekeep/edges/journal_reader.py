@@ -12,16 +12,29 @@ import structlog
 
 from motekeep.edges.journal_boots import Boots
 from motekeep.edges.journal_ledger import Ledger, as_row
-from motekeep.edges.journal_schema import DamagedError, digest, is_damage, is_store_fault, open_reader
+from motekeep.edges.journal_schema import (
+    DamagedError,
+    code_of,
+    digest,
+    is_damage,
+    is_store_fault,
+    open_reader,
+    tolerant_text,
+)
 from motekeep.edges.ports import Clock, NoticeRow, Row
 
 log = structlog.get_logger()
 
-COLUMNS = "r.sensor, r.seq, r.from_seq, b.boot_id, r.boot_s, r.seconds, r.clock, r.body, r.crc"
-FROM = "FROM readings AS r LEFT JOIN boots AS b ON b.number = r.boot"
-SELECT = f"SELECT {COLUMNS} {FROM} WHERE r.seq BETWEEN ? AND ? AND r.sensor = ? ORDER BY r.seq LIMIT ?"
+# The sensor is known and a boot's name is in memory: a backlog leaves only as fast as its text columns are read.
+SELECT = (
+    "SELECT seq, from_seq, boot, boot_s, seconds, clock, body, crc FROM readings"
+    " WHERE seq BETWEEN ? AND ? AND sensor = ? ORDER BY seq LIMIT ?"
+)
 # the one reading that stands for number `seq` and later ones, if it was merged
-COVERING = f"SELECT {COLUMNS} {FROM} WHERE r.seq > ? AND r.sensor = ? ORDER BY r.seq LIMIT 1"
+COVERING = (
+    "SELECT seq, from_seq, boot, boot_s, seconds, clock, body, crc FROM readings"
+    " WHERE seq > ? AND sensor = ? ORDER BY seq LIMIT 1"
+)
 
 
 class Reader:
@@ -109,22 +122,29 @@ class Reader:
 
     def _rows(self, sensor: str, low: int, high: int, limit: int) -> list[Row]:
         found = self._query(SELECT, (low, high, sensor, limit))
-        if len(found) < limit and (not found or found[-1][1] != high):
-            found += [row for row in self._query(COVERING, (high, sensor)) if row[2] <= high]
+        if len(found) < limit and (not found or found[-1][0] != high):
+            found += [row for row in self._query(COVERING, (high, sensor)) if row[1] <= high]
         rows = []
-        for *values, crc in found:
-            row = Row(*values)
-            if row.boot_id is not None and digest(row.sensor, row.seq, row.from_seq, row.clock, row.body) == crc:
+        for seq, from_seq, boot, boot_s, seconds, clock, body, crc in found:
+            row = Row(sensor, seq, from_seq, self._boots.name_of(boot), boot_s, seconds, clock, body)
+            if digest(sensor, seq, from_seq, clock, body) == crc:
                 rows.append(row)
                 continue
-            log.error("journal.reading_damaged", sensor=row.sensor, seq=row.seq)
+            log.error("journal.reading_damaged", sensor=sensor, seq=seq)
             self._ledger.aside([row], "damaged")
         return rows
 
     def _query(self, sql: str, values: tuple[object, ...]) -> list[tuple]:  # type: ignore[type-arg]  # columns vary
         """All rows at once: a statement left open would keep the writer from starting its log anew."""
         try:
-            rows = self._open().execute(sql, values).fetchall()
+            try:
+                rows = self._open().execute(sql, values).fetchall()
+            except sqlite3.OperationalError as error:
+                if code_of(error) or self._connection is None:
+                    raise
+                # the binding could not decode a text: slower, but digests then tell which row it is
+                self._connection.text_factory = tolerant_text
+                rows = self._connection.execute(sql, values).fetchall()
         except (sqlite3.Error, DamagedError) as error:
             if isinstance(error, sqlite3.Error) and not is_store_fault(error):
                 raise

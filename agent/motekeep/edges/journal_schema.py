@@ -129,7 +129,7 @@ def open_writer(
 
 
 def _set_up(connection: sqlite3.Connection, sizes: Sizes) -> None:
-    connection.text_factory = _text
+    connection.text_factory = tolerant_text
     connection.execute("PRAGMA busy_timeout = 5000")
     connection.execute(f"PRAGMA page_size = {PAGE_BYTES}")
     connection.execute("PRAGMA auto_vacuum = NONE")
@@ -214,8 +214,8 @@ def _tables_of(version: int) -> set[tuple[str, str | None]]:
     return tables
 
 
-def _text(raw: bytes) -> str:
-    """Text that rotted is still text; its digest tells."""
+def tolerant_text(raw: bytes) -> str:
+    """A text factory for what may have rotted: it is still text, its digest tells."""
     return raw.decode("utf-8", "replace")
 
 
@@ -256,7 +256,6 @@ def open_reader(path: Path) -> sqlite3.Connection:
     """
     connection = sqlite3.connect(f"file:{quote(str(path))}?mode=ro", uri=True, isolation_level=None)
     try:
-        connection.text_factory = _text
         connection.execute("PRAGMA busy_timeout = 2000")
         connection.execute("PRAGMA cache_size = -256")
         connection.execute("SELECT count(*) FROM sqlite_master").fetchone()

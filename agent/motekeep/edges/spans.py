@@ -75,7 +75,7 @@ class Spans:
         left, right = bisect_left(self._high, low), bisect_right(self._low, high)
         if left >= right:
             return 0
-        before = len(self)
+        gone = sum(self._high[left:right]) - sum(self._low[left:right]) + right - left
         rest = []
         if self._low[left] < low:
             rest.append((self._low[left], low - 1))
@@ -83,7 +83,7 @@ class Spans:
             rest.append((high + 1, self._high[right - 1]))
         self._low[left:right] = [a for a, _ in rest]
         self._high[left:right] = [b for _, b in rest]
-        return before - len(self)
+        return gone - sum(b - a + 1 for a, b in rest)
 
     def copy(self) -> "Spans":
         twin = Spans()
