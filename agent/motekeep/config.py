@@ -6,6 +6,7 @@ what the values are for.
 
 import difflib
 import tomllib
+from ipaddress import ip_address
 from pathlib import Path
 from typing import Annotated, Any, Literal, get_args
 
@@ -118,6 +119,21 @@ class Broker(Section):
     tls: Tls | None = None
     window: int = Field(default=20, ge=1, le=1000)
     late_rate: float = Field(default=5.0, ge=0, le=1000)
+
+    @field_validator("host")
+    @classmethod
+    def _alone(cls, value: str) -> str:
+        """A name that no resolver can take would stop the daemon from measuring, not only from sending."""
+        sound = value.isprintable() and not set(" /") & set(value)
+        try:
+            value.encode("idna")
+            if ":" in value:
+                ip_address(value)
+        except ValueError:  # UnicodeError is one
+            sound = False
+        if not sound:
+            raise ValueError("not a host's name or address alone; the port has a key of its own")
+        return value
 
     @model_validator(mode="after")
     def _login(self) -> "Broker":

@@ -91,7 +91,7 @@ def _told(port: str, error: BaseException) -> tuple[str, str]:
     text = str(error)
     if "://" in port:
         return f"no connection ({text})", "check that the serial server is up and the address is right"
-    if number == 2 or not Path(port).exists():
+    if number == 2 or (number is None and not Path(port).exists()):
         return "no such device", "plug the adapter in, or name one of /dev/serial/by-id/"
     if number in (11, 16) or "exclusively lock" in text:
         return f"another program has it open: {Host().who_holds(port)}", "end that program, or use another port"
