@@ -4,6 +4,7 @@ import sqlite3
 from collections.abc import Iterator
 from dataclasses import replace
 from pathlib import Path
+from threading import Event, Thread
 
 import pytest
 
@@ -328,3 +329,35 @@ def test_a_ladder_step_that_fails_leaves_the_version_before(folder: Path, monkey
     connection = sqlite3.connect(path)
     assert connection.execute("PRAGMA user_version").fetchone()[0] == 1
     assert [c[1] for c in connection.execute("PRAGMA table_info(kept)")] == ["name", "value"]
+
+
+def test_a_publisher_thread_and_the_writer_share_the_journal(site: Site) -> None:
+    heard: list[int] = []
+    failed: list[BaseException] = []
+    done = Event()
+
+    def publish() -> None:
+        reader = site.journal.reader()
+        try:
+            while not (done.is_set() and not reader.waiting("north", 0, 1)):
+                rows = reader.waiting("north", 0, 7)
+                heard.extend(r.seq for r in rows)
+                reader.mark_delivered(rows)
+        except BaseException as error:  # noqa: BLE001 (told in the test's own thread)
+            failed.append(error)
+        finally:
+            reader.close()
+
+    publisher = Thread(target=publish)
+    publisher.start()
+    for _ in range(300):
+        site.minute()
+        site.journal.state()
+    done.set()
+    publisher.join(30)
+    assert failed == []
+    assert heard == list(range(1, 301))
+    site.journal.flush(site.clock.now())
+    site.power_cut()
+    assert site.numbers("north") == []
+    assert len(site.numbers("south")) == 300

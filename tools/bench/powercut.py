@@ -1,9 +1,10 @@
 """Power cuts: does a commit that was acknowledged survive one, and is the journal sound afterwards?
 
-A writer process commits to a journal on a loop-mounted ext4 and acknowledges each commit on a pipe. At a random moment it is
-stopped and the file behind the block device is copied: the copy holds what had reached the device, and nothing else, as a
-card does after the power went. The copy is mounted, opened as at a start, and compared with the last acknowledgement.
-No storage is modelled that lies about flushing or writes blocks out of order. Needs root and loop devices.
+A writer process commits to a journal on a loop-mounted ext4 and acknowledges each commit on a pipe. At a random
+moment it is stopped and the file behind the block device is copied: the copy holds what had reached the device, and
+nothing else, as a card does after the power went. The copy is mounted, opened as at a start, and compared with the
+last acknowledgement. No storage is modelled that lies about flushing or writes blocks out of order. Needs root and
+loop devices.
 
     tools/bench/powercut.py --cuts 40
 """
@@ -24,6 +25,7 @@ ROOT = Path(__file__).resolve().parents[2]
 sys.path[:0] = [str(ROOT / "tests"), str(ROOT / "agent")]
 
 import structlog  # noqa: E402  (the paths above come first)
+
 from journal_site import MIB, Site  # noqa: E402
 from loop_disk import mounted, new_disk, why_not  # noqa: E402
 

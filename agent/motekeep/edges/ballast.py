@@ -14,7 +14,7 @@ SLICES = 8
 
 
 class Ballast:
-    """`bytes_` of really allocated blocks at `path`; a size of 0 means none."""
+    """`bytes_` of really allocated blocks at `path`."""
 
     def __init__(self, path: Path, bytes_: int) -> None:
         self._path = path
@@ -49,7 +49,7 @@ class Ballast:
         """Lay it down again, whole, when the disk has plenty (`free` bytes); whether it is there now."""
         if self.left == self._bytes:
             return True
-        if not self._bytes or free is None or free < PLENTY * self._bytes:
+        if free is None or free < PLENTY * self._bytes:
             return False
         try:
             descriptor = os.open(self._path, os.O_WRONLY | os.O_CREAT | os.O_CLOEXEC, 0o640)

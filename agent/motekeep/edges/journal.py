@@ -17,9 +17,10 @@ from pathlib import Path
 
 import structlog
 
+from motekeep.edges.ballast import SLICES
 from motekeep.edges.journal_boots import Boots
 from motekeep.edges.journal_file import JournalFile
-from motekeep.edges.journal_ledger import Changes, Held, Ledger
+from motekeep.edges.journal_ledger import Ledger
 from motekeep.edges.journal_reader import Reader
 from motekeep.edges.journal_restamp import Restamper
 from motekeep.edges.journal_room import Room, count_lost
@@ -34,6 +35,7 @@ from motekeep.edges.journal_schema import (
     is_store_fault,
     transaction,
 )
+from motekeep.edges.journal_shapes import Changes, Held
 from motekeep.edges.ports import Batch, Clock, NewReading, Notice, StoreState
 from motekeep.errors import StoreError, StoreFullError
 from motekeep.instant import Instant
@@ -51,6 +53,8 @@ PRUNE_BATCHES = 10
 # ballast is for bringing over what the log has already.
 TIGHT_BYTES = 1 << 20
 DAY_S = 86400.0
+# One for each slice of the ballast, and for a file that had to be rescued.
+ATTEMPTS = SLICES + 2
 NOTHING = Held((), ())
 
 
@@ -200,7 +204,7 @@ class Journal:
 
     def _save(self, held: Held, at: Instant) -> bool:
         """Store what memory holds back, then `held`; whether all of it is durable. What is not stays in memory."""
-        for _ in range(2):
+        for _ in range(ATTEMPTS):
             try:
                 db = self._file.ready(at)
                 while waiting := self._ledger.oldest_held(self._held_bytes):
@@ -268,12 +272,15 @@ class Journal:
             self._file.notices -= len(changes.notices_done)
 
     def _make_room(self, db: sqlite3.Connection, bytes_: int) -> bool:
-        free = self._file.free()
-        tight = free is not None and free < TIGHT_BYTES and self._file.ballast.low
+        tight = self._short() and self._file.ballast.low
         pages = db.execute("PRAGMA page_count").fetchone()[0] if tight else self._file.sizes.max_pages
         db.execute(f"PRAGMA max_page_count = {pages}")
         db.execute(f"PRAGMA wal_autocheckpoint = {1 if tight else self._file.sizes.checkpoint_pages}")
         return self._room.make(db, bytes_, lambda: self._save_marks(db))
+
+    def _short(self) -> bool:
+        free = self._file.free()
+        return free is not None and free < TIGHT_BYTES
 
     # -- failing ------------------------------------------------------------------------------------------------
 
@@ -296,7 +303,7 @@ class Journal:
         if not self._why_full:
             self._file.close()  # an I/O error leaves SQLite's own view in doubt
         # a full disk shows as SQLITE_FULL, but also as an I/O error of the log or its index
-        if self._file.ballast.give_back():
+        if (self._why_full or self._short()) and self._file.ballast.give_back():
             log.warning("journal.ballast_given_back", left_bytes=self._file.ballast.left)
             return True
         return False

@@ -72,7 +72,7 @@ class JournalFile:
         """The connection, opened if need be. Raises sqlite3.Error, StoreError or OSError."""
         if self._ledger.damage_seen:
             self._ledger.damage_seen = False
-            self.close()
+            self.suspect()
         if self.connection is not None:
             return self.connection
         finish(self.path, at)
@@ -120,7 +120,9 @@ class JournalFile:
             if known and self.path.exists() and not self.path.stat().st_size:
                 # SQLite would take it for a new database
                 raise DamagedError(self._attempted, "the file is empty", "")
-            return open_writer(self.path, self.sizes, self._progress, ours=known)
+            # after a mere I/O error the whole check is left out: it would come with every commit, from a failing card
+            whole = not self.loaded or self._suspicions > 0
+            return open_writer(self.path, self.sizes, self._progress, ours=known, whole=whole)
         except (DamagedError, sqlite3.Error) as error:
             if isinstance(error, sqlite3.Error) and not is_damage(error):
                 raise

@@ -7,9 +7,10 @@ given again, and an empty queue costs no query.
 
 from collections import Counter, deque
 from collections.abc import Iterable, Iterator, Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import replace
 from threading import Lock
 
+from motekeep.edges.journal_shapes import Changes, Glance, Held, SensorLine, SensorState
 from motekeep.edges.ports import NewReading, NoticeRow, Row
 from motekeep.edges.spans import Spans
 
@@ -20,69 +21,6 @@ MAX_HELD_NOTICES = 500
 # The state of a sensor is written with every commit. Ranges come from outages and refusals; past this many the smallest
 # holes are closed, which sends some readings twice.
 MAX_RANGES = 64
-# What a row takes beside its body: its other columns, its entry in the index.
-ROW_BYTES = 160
-
-
-@dataclass(slots=True)
-class SensorState:
-    """One sensor. `used`: the last number given out; `stored`: the last one in the file; `offered`: the last one shown
-    to the publisher while `unsynced`; `inherited`: the last one of earlier processes, which may have been shown too."""
-
-    used: int = 0
-    stored: int = 0
-    waiting: Spans = field(default_factory=Spans)
-    sent: Spans = field(default_factory=Spans)
-    offered: int = 0
-    inherited: int = 0
-    changes: int = 0
-    saved: int = 0
-
-
-@dataclass(frozen=True, slots=True)
-class SensorLine:
-    """What is to be written of one sensor; `changes` says which state that was."""
-
-    sensor: str
-    last_seq: int
-    waiting: str
-    sent: str
-    changes: int
-
-
-@dataclass(frozen=True, slots=True)
-class Changes:
-    """All that memory knows and the file does not, for one transaction."""
-
-    sensors: tuple[SensorLine, ...]
-    kept: Mapping[str, str]
-    lost: Mapping[str, int]
-    notices_done: frozenset[int]
-    marks: int
-
-    def __bool__(self) -> bool:
-        return bool(self.sensors or self.kept or self.lost or self.notices_done)
-
-
-@dataclass(frozen=True, slots=True)
-class Held:
-    """What one commit wanted to store."""
-
-    readings: tuple[NewReading, ...]
-    notices: tuple[NoticeRow, ...]
-
-    @property
-    def bytes(self) -> int:
-        """About what it takes in the file."""
-        return sum(len(r.body) + ROW_BYTES for r in self.readings) + sum(len(n.body) + ROW_BYTES for n in self.notices)
-
-
-@dataclass(frozen=True, slots=True)
-class Glance:
-    """What waits of one sensor at one moment: ranges in the file, then readings that only memory has."""
-
-    ranges: tuple[tuple[int, int], ...]
-    held: tuple[NewReading, ...]
 
 
 class Ledger:
@@ -434,17 +372,3 @@ def _stretches(rows: Iterable[Row]) -> Iterator[tuple[str, int, int]]:
         sensor, low, high = row.sensor, row.from_seq, row.seq
     if sensor:
         yield sensor, low, high
-
-
-def as_row(reading: NewReading) -> Row:
-    """A reading that only memory has, as the publisher sees it."""
-    return Row(
-        reading.sensor,
-        reading.seq,
-        reading.seq,
-        reading.boot_id,
-        reading.boot_s,
-        reading.seconds,
-        reading.clock,
-        reading.body,
-    )

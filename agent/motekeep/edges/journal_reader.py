@@ -11,7 +11,7 @@ from pathlib import Path
 import structlog
 
 from motekeep.edges.journal_boots import Boots
-from motekeep.edges.journal_ledger import Ledger, as_row
+from motekeep.edges.journal_ledger import Ledger
 from motekeep.edges.journal_schema import (
     DamagedError,
     code_of,
@@ -21,6 +21,7 @@ from motekeep.edges.journal_schema import (
     open_reader,
     tolerant_text,
 )
+from motekeep.edges.journal_shapes import as_row
 from motekeep.edges.ports import Clock, NoticeRow, Row
 
 log = structlog.get_logger()

@@ -11,9 +11,10 @@ from dataclasses import dataclass, replace
 import structlog
 
 from motekeep.edges.journal_boots import Boots
-from motekeep.edges.journal_ledger import Held, Ledger
+from motekeep.edges.journal_ledger import Ledger
 from motekeep.edges.journal_room import count_lost, readable
 from motekeep.edges.journal_schema import digest, transaction
+from motekeep.edges.journal_shapes import Held
 from motekeep.edges.ports import NewReading, Notice
 from motekeep.instant import Instant, from_rfc3339
 from motekeep.message.documents import Clock, ReadingDocument

@@ -105,9 +105,9 @@ def is_damage(error: sqlite3.Error) -> bool:
 
 
 def open_writer(
-    path: Path, sizes: Sizes, progress: Callable[[], None] | None = None, *, ours: bool = False
+    path: Path, sizes: Sizes, progress: Callable[[], None] | None = None, *, ours: bool = False, whole: bool = True
 ) -> sqlite3.Connection:
-    """Open or create the journal for writing, checked whole and brought up to this version.
+    """Open or create the journal for writing, checked (page by page when `whole`) and brought up to this version.
 
     `ours`: it is known to be a journal, so that one without its identity is a damaged one. `progress` is called now
     and then while the file is checked. Raises DamagedError, ForeignError, or sqlite3.Error with the store's own
@@ -115,7 +115,7 @@ def open_writer(
     """
     new = not path.exists()
     if not new:
-        check(path, progress, ours=ours)
+        check(path, progress, ours=ours, whole=whole)
     connection = sqlite3.connect(path, isolation_level=None, cached_statements=64)
     try:
         _set_up(connection, sizes)
@@ -149,8 +149,8 @@ def _set_up(connection: sqlite3.Connection, sizes: Sizes) -> None:
     connection.execute(f"PRAGMA max_page_count = {sizes.max_pages}")
 
 
-def check(path: Path, progress: Callable[[], None] | None = None, *, ours: bool = False) -> None:
-    """Whether an existing file is a sound journal of a version known here: identity, then SQLite's check.
+def check(path: Path, progress: Callable[[], None] | None = None, *, ours: bool = False, whole: bool = True) -> None:
+    """Whether an existing file is a sound journal of a version known here: identity, then SQLite's check when `whole`.
 
     The whole check: the quick one, as dear on a cold file, misses an index entry that is gone, and with it a reading.
 
@@ -164,7 +164,7 @@ def check(path: Path, progress: Callable[[], None] | None = None, *, ours: bool 
         if progress is not None:
             connection.set_progress_handler(progress, 100_000)
         fault = _foreign_or_damaged(connection, path, ours)
-        answer = fault or connection.execute("PRAGMA integrity_check(1)").fetchone()[0]
+        answer = fault or (connection.execute("PRAGMA integrity_check(1)").fetchone()[0] if whole else "ok")
     except sqlite3.Error as error:
         # a damaged header gives SQLITE_ERROR too ("unsupported file format"): these statements cannot fail otherwise
         if is_damage(error) or not is_store_fault(error):
