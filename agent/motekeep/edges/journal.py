@@ -60,7 +60,7 @@ NOTHING = Held((), ())
 
 @dataclass(frozen=True, slots=True)
 class JournalSettings:
-    """`clock_wait_s`: how long readings wait for a trusted clock before they go out `unsynced`."""
+    """`clock_wait_s`: how long after boot readings wait for a trusted clock before they go out `unsynced`."""
 
     path: Path
     topics: Topics

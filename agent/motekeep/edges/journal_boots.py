@@ -125,12 +125,13 @@ class Boots:
                     return boot.number
         raise KeyError(boot_id)
 
-    def waited_s(self, boot_id: str, boot_s: float, at: Instant) -> float:
-        """Boot seconds since second `boot_s` of that boot, counted through the boots since; endless for an unknown
-        one.
+    def waited_s(self, boot_id: str, at: Instant) -> float:
+        """How long a clock has been waited for since that boot began, in boot seconds through the boots since; endless
+        for an unknown one. Counted from the boot and not from a reading: a gateway that never finds a clock is to be
+        late once, not with every reading for ever.
         """
         with self._lock:
-            waited = at.boot_s - boot_s
+            waited = at.boot_s
             for boot in reversed(self._boots):
                 if boot.boot_id == boot_id:
                     return waited + (boot.seconds if boot is not self._boots[-1] else 0.0)

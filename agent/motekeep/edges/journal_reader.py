@@ -116,8 +116,7 @@ class Reader:
         at = self._clock.now()
         for index, row in enumerate(rows):
             if row.clock == "unsynced":
-                waited = self._boots.waited_s(row.boot_id, row.boot_s + row.seconds, at)
-                if waited < self._clock_wait_s:
+                if self._boots.waited_s(row.boot_id, at) < self._clock_wait_s:
                     return rows[:index]
         return rows
 

@@ -154,8 +154,7 @@ class Restamper:
         state = self._ledger.state_of(document.sensor)
         out = seq <= state.offered or len(state.waiting.within(from_seq, seq)) < seq - from_seq + 1
         if not out and seq <= state.inherited:
-            end_s = document.boot_s + document.seconds
-            out = self._boots.waited_s(boot_id, end_s, at) >= self._clock_wait_s
+            out = self._boots.waited_s(boot_id, at) >= self._clock_wait_s
         if not out:
             return
         for last in reversed(shifts):
