@@ -1,7 +1,7 @@
 """A gateway for the journal's tests: makes readings, keeps a journal, and can lose its power.
 
-Numbers are our own invention. `power_cut` carries on with a copy of the files as they are on the disk at that moment, the
-log not checkpointed: what a killed process leaves behind.
+Numbers are our own invention. `power_cut` carries on with a copy of the files as they are on the disk at that moment,
+the log not checkpointed: what a killed process leaves behind.
 """
 
 import shutil

@@ -71,7 +71,7 @@ def test_without_any_room_readings_go_out_from_memory_and_are_stored_when_there_
 
 def test_beside_others_that_keep_the_disk_full_the_journal_lives_within_its_pages(disk: LoopDisk, site: Site) -> None:
     disk.fill()
-    for _ in range(20):
+    for _ in range(10):
         site.minutes(20)
         site.deliver_all()
         disk.fill()
