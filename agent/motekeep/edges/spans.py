@@ -1,7 +1,7 @@
 """A set of sequence numbers kept as ranges: what waits for delivery of one sensor is one short range nearly always.
 
 Owns the arithmetic and the text form. Knows no database. Kept so, the state of any number of readings is a few bytes in
-one row, and marking a reading delivered never touches the page that the reading is on (DEVELOPERS.md, "Wear").
+one row, and marking a reading delivered never touches the page that the reading is on (`tools/bench/wear.py`).
 """
 
 from bisect import bisect_left, bisect_right
