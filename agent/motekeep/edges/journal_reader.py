@@ -115,9 +115,8 @@ class Reader:
             return rows
         at = self._clock.now()
         for index, row in enumerate(rows):
-            if row.clock == "unsynced":
-                if self._boots.waited_s(row.boot_id, at) < self._clock_wait_s:
-                    return rows[:index]
+            if row.clock == "unsynced" and self._boots.waited_s(row.boot_id, at) < self._clock_wait_s:
+                return rows[:index]
         return rows
 
     def _rows(self, sensor: str, low: int, high: int, limit: int) -> list[Row]:
