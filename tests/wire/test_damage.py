@@ -83,6 +83,8 @@ def test_a_false_start_anywhere_costs_at_most_the_frame_it_stands_in(
     at = data.draw(st.integers(0, len(units[HIT])))
     false_start = data.draw(st.sampled_from(STARTS[dialect.name]))
     hit = units[HIT][:at] + false_start + units[HIT][at:]
+    # Six bytes that happen to continue it to an answer with the right sum make it no false start.
+    assume(not (false_start == b"BM\x00\x04" and sum(hit[at : at + 6]) == int.from_bytes(hit[at + 6 : at + 8])))
     heard, damage = hear(dialect, [*units[:HIT], hit, *units[HIT + 1 :]], random)
     assert heard in ([*units[:HIT], *units[HIT + 1 :]], units)
     # A lone flag between two units is nothing; elsewhere what was inserted is a hit or, at a border, rubbish.

@@ -72,6 +72,5 @@ def coincident(rates: Floats, seen_per_cm3: Floats, sensing_volume_cm3: float) -
     alone = np.exp(-sensing_volume_cm3 * seen_per_cm3)[:, None]
     above = np.cumsum(rates[:, ::-1], axis=1)[:, ::-1]
     share = above / np.maximum(total, 1e-300)
-    below = 1.0 - share
-    kept = total * alone * (1.0 - alone * below / (1.0 - below * (1.0 - alone)))
+    kept = total * alone * share / np.maximum(share + (1.0 - share) * alone, 1e-300)
     return np.asarray(np.clip(kept - np.concatenate([kept[:, 1:], np.zeros_like(total)], axis=1), 0.0, None))
