@@ -7,7 +7,7 @@ frames only.
 from collections import deque
 from collections.abc import Sequence
 from dataclasses import dataclass
-from math import sqrt
+from math import inf, sqrt
 from typing import ClassVar
 
 from motekeep.health.chance import poisson_at_least, poisson_at_most
@@ -54,7 +54,8 @@ class FanStopped(Check):
        longer. The lowest two minutes, not the last: a plume that passes falls back to what was there before it.
     2. Order. No larger channel with pulses enough has clearly kept more than a tenth: the false counts that may hold up
        the smallest are not in it. Smoke that ends takes the small particles and leaves the large ones; gusty smoke
-       that thins takes all, but not so deep.
+       that thins takes all, but not so deep. Where pulses are few this tells little: hours of smoke over a clean site
+       (under some 300 /dL) that end within a minute can be taken for a stop.
     3. Number. The pulses missing are too many for chance, also if the air had fallen to 0.6 of that lowest level.
        How much of a printed number one pulse is comes from the scatter of the unit's own two-minute means before, and
        while there are few of them from the worst that firmware does (one second of air of which half is looked at).
@@ -81,7 +82,10 @@ class FanStopped(Check):
     CHANCE = 1e-3
     AIR_FALLS_TO = 0.6
     LEAST_PULSES = 12.0
-    ORDER_PULSES = 8.0
+    ORDER_PULSES = 2.0
+    CHANCE_ORDER = 3e-3
+    SORTED_PULSES = 8.0
+    REFINE = 25  # blocks after which levels left are taken anew: five minutes tell the drizzle better than two
     BACK = 5  # blocks that must be back
     GAP_S = 60.0
 
@@ -98,6 +102,7 @@ class FanStopped(Check):
         self._blocks: deque[_Block] = deque(maxlen=self.HISTORY + self.FALL + self.AFTER.stop)
         self._collapse: _Collapse | None = None
         self._restarted = False
+        self._refine_at = inf
 
     # -- gathering ----------------------------------------------------------------------------------------------
 
@@ -121,6 +126,8 @@ class FanStopped(Check):
             elif self._is_back(self._collapse):
                 self._collapse = None
                 self._blocks.clear()
+            else:
+                self._collapse = self._refined(self._collapse, now)
         self._block_start, self._block_end = now, now + self._block_s
 
     def _forget(self) -> None:
@@ -171,22 +178,39 @@ class FanStopped(Check):
             return None
         if poisson_at_most(int(seen[0]), self.AIR_FALLS_TO * expected[0]) > self.CHANCE:
             return None
-        kept = left[0] / before[0]
         told = [i for i, pulses in enumerate(expected) if i and pulses >= self.ORDER_PULSES]
         for i in told:
-            if poisson_at_least(round(seen[i]), self.LARGER * expected[i]) < 0.01:
+            if poisson_at_least(round(seen[i]), self.LARGER * expected[i]) < self.CHANCE_ORDER:
                 return None
-        by_size = any(poisson_at_most(int(seen[i]), 0.5 * kept * expected[i]) < 0.05 for i in told)
-        return self._collapsed(blocks, before, left, per_pulse * length, by_size=by_size)
+        return self._collapsed(blocks, before, left, per_pulse * length)
 
-    def _collapsed(
-        self, blocks: list[_Block], before: Levels, left: Levels, per_block_pulse: float, *, by_size: bool
-    ) -> _Collapse:
+    def _collapsed(self, blocks: list[_Block], before: Levels, left: Levels, per_block_pulse: float) -> _Collapse:
         normal = max(before[0] - 2.0 * sqrt(before[0] * per_block_pulse), 0.5 * before[0])
         first = len(blocks) - 1
         while first > 0 and blocks[first - 1].levels[0] < normal:
             first -= 1
-        return _Collapse(blocks[first].start, before, left, by_size, self._told(before, left, by_size=by_size))
+        self._refine_at = blocks[-1].start + self.REFINE * self._block_s
+        return self._state(blocks[first].start, before, left, len(blocks) - first)
+
+    def _state(self, since: float, before: Levels, left: Levels, blocks: int) -> _Collapse:
+        """The collapse with what its levels, means over so many blocks, say of the order."""
+        per_pulse = (
+            (self._per_pulse_counts if self._has_counts else self._per_pulse_mass) / self._frames_a_block / blocks
+        )
+        kept = left[0] / before[0]
+        by_size = any(
+            poisson_at_most(int(left[i] / per_pulse), 0.5 * kept * before[i] / per_pulse) < 0.05
+            for i in range(1, len(before))
+        )
+        return _Collapse(since, before, left, by_size, self._told(before, left, by_size=by_size))
+
+    def _refined(self, collapse: _Collapse, now: float) -> _Collapse:
+        """The same with the levels of the last five minutes, once."""
+        if now < self._refine_at or len(self._blocks) < self.REFINE:
+            return collapse
+        self._refine_at = inf
+        left = _mean(list(self._blocks)[-self.REFINE :])
+        return self._state(collapse.since, collapse.before, left, self.REFINE)
 
     def _per_pulse(self, smallest: Sequence[float]) -> float:
         """How much of a two-minute mean one pulse is: half the mean square of differences between such means, over
@@ -242,7 +266,7 @@ class FanStopped(Check):
         per_pulse = self._per_pulse_counts / (self._frames_a_block * self.BACK)
         for i in range(len(now) - 1, 0, -1):
             due = before[i] / before[0] * now[0]
-            if due >= self.ORDER_PULSES * per_pulse:
+            if due >= self.SORTED_PULSES * per_pulse:
                 return now[i] >= 0.4 * due
         return False
 

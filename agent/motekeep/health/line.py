@@ -132,7 +132,7 @@ class FramesMissing(Check):
         if longest < 0.9 * self._window:
             return None
         short = marks[bisect_left(marks, (now - self._window, 0))]
-        return self._too_few(now, *short) or self._too_few(now, *marks[0])
+        return self._too_few(now, *marks[0]) or self._too_few(now, *short)
 
     def _too_few(self, now: float, since: float, arrived: int) -> Suspicion | None:
         span = now - since

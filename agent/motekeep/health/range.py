@@ -54,7 +54,7 @@ class CountsSaturated(_IntervalCheck):
 
 
 class MassClipped(_IntervalCheck):
-    """mass-clipped: a mass at or above the end of its declared range, below zero, or not a number."""
+    """mass-clipped: a mass at or above the end of its declared range, or below zero. (Decoders let no NaN pass.)"""
 
     code: ClassVar[str] = "mass-clipped"
     clear_s: ClassVar[float] = 600.0
@@ -63,7 +63,7 @@ class MassClipped(_IntervalCheck):
         outside = [
             f"{name} {c.low:g} to {c.high:g}"
             for name, c in zip(layout.mass, interval.mass, strict=True)
-            if c.n and not (c.low >= 0.0 and c.high < layout.mass_top)  # not: NaN must not pass
+            if c.n and (c.low < 0.0 or c.high >= layout.mass_top)
         ]
         if not outside:
             return None
@@ -115,11 +115,9 @@ class ChannelsInconsistent(_IntervalCheck):
             return None
         least, most = _mass_bounds(layout.sizes_um, [c.mean for c in interval.counts])
         told = f"PM2.5 {mass.mean:.1f} ug/m3 against {least:.1f} to {most:.1f} from the counts"
-        if mass.mean < least / self.LOOSE and least / self.LOOSE > self.LEAST_UG_M3:
-            return told
-        if mass.mean > most * self.LOOSE and mass.mean > most * self.LOOSE + self.LEAST_UG_M3:
-            return told
-        return None
+        light = mass.mean < least / self.LOOSE and mass.mean < least - self.LEAST_UG_M3
+        heavy = mass.mean > most * self.LOOSE and mass.mean > most + self.LEAST_UG_M3
+        return told if light or heavy else None
 
 
 def _count_order(interval: Interval, layout: Layout, share: float) -> str | None:
