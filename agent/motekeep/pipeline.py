@@ -295,8 +295,9 @@ class Pipeline:
             }
             for code, (flag, since) in backdated.items():
                 if flag is not None:
-                    sensor.hourly.amend(since, self._span.utc, flag, (code,))
-                    self._amendments.append(amend_document(sensor.setup.name, since, self._span.utc, {code: flag}))
+                    begun = since - since % self._interval  # the reading that it began in is not sound either
+                    sensor.hourly.amend(begun, self._span.utc, flag, (code,))
+                    self._amendments.append(amend_document(sensor.setup.name, begun, self._span.utc, {code: flag}))
 
     # -- what goes out ------------------------------------------------------------------------------------------
 

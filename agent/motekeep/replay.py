@@ -7,7 +7,7 @@ import gzip
 import heapq
 import json
 from collections import Counter
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import ExitStack
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -20,6 +20,7 @@ from motekeep.measure.document import CalibrationDocument
 from motekeep.measure.dose import ServiceKind
 from motekeep.measure.interval import Climate
 from motekeep.message.compose import Place
+from motekeep.message.health import SensorAccount
 from motekeep.pipeline import Harvest, Pipeline, SensorSetup
 
 HARVEST_EVERY_S = 600.0  # of capture time: keeps memory flat without a call a frame
@@ -35,6 +36,7 @@ class Summary:
     readings: Counter[str] = field(default_factory=Counter)
     findings: Counter[str] = field(default_factory=Counter)
     unknown_sensors: Counter[str] = field(default_factory=Counter)
+    accounts: Mapping[str, SensorAccount] = field(default_factory=dict)
 
     def as_dict(self) -> dict[str, object]:
         return {
@@ -45,6 +47,8 @@ class Summary:
             "readings": dict(self.readings),
             "findings_opened": dict(self.findings),
             "unknown_sensors": dict(self.unknown_sensors),
+            "dust_dose_ug": {name: round(account.dust_dose_ug, 3) for name, account in self.accounts.items()},
+            "laser_hours": {name: round(account.laser_hours, 3) for name, account in self.accounts.items()},
         }
 
 
@@ -126,7 +130,7 @@ def replay(
         if pipeline is not None:
             pipeline.finish(at)
             results.write(pipeline.harvest())
-            summary.last = at.utc
+            summary.last, summary.accounts = at.utc, pipeline.accounts()
         results.write_hours(out / "hourly.ndjson")
     (out / "summary.json").write_text(json.dumps(summary.as_dict(), indent=1) + "\n", encoding="utf-8")
     return summary
