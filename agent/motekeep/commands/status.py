@@ -10,31 +10,36 @@ import click
 
 from motekeep.config import Config
 from motekeep.edges.journal_view import JournalView
-from motekeep.instant import from_rfc3339
+from motekeep.instant import rfc3339
 from motekeep.loops.recorder import HEALTH
 from motekeep.message.documents import HealthDocument, OpenFinding
 
+GRACE_S = 30.0
+
 
 def status(config: Config, as_json: bool) -> bool:
-    """Print the health document; whether it is normal and not overdue."""
+    """Print the health document; whether it is normal and the daemon goes on storing readings."""
     with JournalView(config.store.path) as view:
         text = view.kept(HEALTH)
+        ends = [sensor.last + config.interval for sensor in view.sensors() if sensor.last is not None]
     if text is None:
         click.echo("no health document yet; has the daemon run for a minute?")
         return False
     health = HealthDocument.model_validate(json.loads(text))
-    overdue = health.next_by is not None and from_rfc3339(health.next_by) < time.time()
+    # the document is kept when something changes and every ten minutes; readings come every interval
+    overdue = not ends or time.time() - max(ends) > 2 * config.interval + GRACE_S
     if as_json:
         click.echo(health.json_text())
     else:
-        _print(health, overdue)
+        _print(health, max(ends, default=None), overdue)
     return health.status == "normal" and not overdue
 
 
-def _print(health: HealthDocument, overdue: bool) -> None:
+def _print(health: HealthDocument, last: float | None, overdue: bool) -> None:
     click.echo(f"{health.site}/{health.gateway}: {health.status}")
     if overdue:
-        click.echo(f"  OVERDUE: written {health.at}, the next was due by {health.next_by}; is the daemon running?")
+        ended = "none yet" if last is None else f"the last ended {rfc3339(last)}"
+        click.echo(f"  OVERDUE: no reading is stored any more ({ended}); is the daemon running?")
     click.echo(f"  at {health.at}, clock {health.clock}, version {health.version}, life {health.life}")
     if health.store is not None:
         store = health.store

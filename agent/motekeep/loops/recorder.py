@@ -31,6 +31,7 @@ log = structlog.get_logger()
 
 FACTS_EVERY_S = 5.0
 FLUSH_MARKS = 2000  # marks waiting in memory beyond this get a commit of their own: they bound what a crash repeats
+KEEP_EVERY_S = 600.0
 HEALTH = "health-document"  # the name under which the journal keeps the last health document
 GRACE_S = 30.0  # on top of two periods before a health document counts as stale
 
@@ -77,7 +78,8 @@ class Recorder:
         self._why_closed = ""
         self._outlet = outlet
         self._facts = facts
-        self._facts_at = self._health_at = float("-inf")
+        self._facts_at = self._health_at = self._kept_at = float("-inf")
+        self._ending = False
         self._told: object = None
         self._health = ""
         self._vouched = False
@@ -92,12 +94,13 @@ class Recorder:
             self._facts_at = at.boot_s
             self._store = self._state()
             facts, self._link = self._facts(self._store, at)
-        self._record(self._intake.harvest(at, facts), at)
+        harvest = self._intake.harvest(at, facts)
+        if facts is not None or harvest.findings:
+            self._tell_health(at)
+        self._record(harvest, at)
         if self._journal is not None and self._prune_due.is_set():
             self._prune_due.clear()
             self._journal.prune(at)
-        if facts is not None:
-            self._tell_health(at)
 
     def prune_soon(self) -> None:
         """Prune at the next turn; from any thread."""
@@ -123,6 +126,7 @@ class Recorder:
 
     def finish(self, at: Instant) -> None:
         """Store what was measured of the span under way, short as it is."""
+        self._ending = True
         self._record(self._intake.finish(at), at)
 
     def close(self, at: Instant) -> None:
@@ -141,7 +145,7 @@ class Recorder:
         self._vouched = at.trusted
         if harvest:
             readings = [_row(r) for r in harvest.readings]
-            self._journal.commit(Batch(readings, self._notices(harvest), self._kept(harvest)), at)
+            self._journal.commit(Batch(readings, self._notices(harvest), self._kept(harvest, at)), at)
             self._post_hours(harvest)
             self._outlet.wake()
         elif self._journal.pending_marks() > FLUSH_MARKS:
@@ -154,9 +158,16 @@ class Recorder:
                 self._posted_hours[hour.sensor] = hour.start
                 self._outlet.post(self._settings.topics.hourly(hour.sensor), hour.json_text())
 
-    def _kept(self, harvest: Harvest) -> dict[str, str]:
-        """What the next life needs, and the health document for `motekeep status`: free in a transaction due anyway."""
-        return {**harvest.keep, HEALTH: self._health} if self._health else dict(harvest.keep)
+    def _kept(self, harvest: Harvest, at: Instant) -> Mapping[str, str]:
+        """What the next life needs, and the health document for `motekeep status`.
+
+        Written when something opened or closed, at the end, and every ten minutes: with each minute's transaction these
+        few kilobytes would be a fifth of all that wears the card, for sums that change by a thousandth.
+        """
+        if not harvest.findings and not self._ending and at.boot_s - self._kept_at < KEEP_EVERY_S:
+            return {}
+        self._kept_at = at.boot_s
+        return {**harvest.keep, HEALTH: self._health} if self._health else harvest.keep
 
     def _notices(self, harvest: Harvest) -> list[Notice]:
         topics = self._settings.topics

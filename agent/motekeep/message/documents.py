@@ -130,7 +130,7 @@ class AmendDocument(Document):
     """Readings of `sensor` that start in [from, to) have, from now on, this flag, and these reasons as well.
 
     As a restamp it names a range of sequence numbers instead, their clock from now on, and the seconds to add to their
-    `start`. It holds for those that were received as `unsynced`: one that came as `corrected` or `bounded` has it already.
+    `start`. It holds for those that were received as `unsynced`: what came as `corrected` or `bounded` has it already.
     """
 
     schema_: Literal["motekeep/amend/1"] = Field(alias="schema")
