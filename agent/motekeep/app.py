@@ -40,7 +40,7 @@ from motekeep.loops.reader import Reader, ReaderSettings
 from motekeep.loops.recorder import Recorder, RecorderSettings
 from motekeep.loops.rows import RowSettings
 from motekeep.loops.supervisor import Hand, Supervisor
-from motekeep.measure.climate import from_message
+from motekeep.measure.climate import FIXED, from_message
 from motekeep.measure.hourly import HOUR_S, WINDOW_HOURS
 from motekeep.measure.interval import Climate
 from motekeep.message.compose import Place
@@ -297,7 +297,7 @@ def _climate_feed(config: Config, intake: Intake, now: Instant) -> ClimateFeed:
     for sensor in config.sensor:
         match sensor.climate:
             case FixedClimate(rh=rh, t=t):
-                intake.climate(sensor.name, Climate(rh, t, "fixed"), now)
+                intake.climate(sensor.name, Climate(rh, t, FIXED), now)
             case FileClimate(path=path):
                 sources[sensor.name] = SysfsClimate(path).read
     return ClimateFeed(sources, intake)

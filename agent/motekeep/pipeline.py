@@ -7,13 +7,16 @@ call and must not run backwards by the boot clock.
 
 import json
 from collections.abc import Iterable, Mapping
+from contextlib import suppress
 from dataclasses import dataclass, field
+from typing import Any
 
 from motekeep.health.check import LineState
 from motekeep.health.finding import Finding, FindingEvent
 from motekeep.health.gateway import GatewayFacts, GatewayHealth
 from motekeep.health.sensor import SensorHealth
 from motekeep.instant import Instant
+from motekeep.measure.climate import FIXED
 from motekeep.measure.correction import compile_document
 from motekeep.measure.document import CalibrationDocument
 from motekeep.measure.dose import Dose, ServiceKind
@@ -72,6 +75,14 @@ def dose_name(sensor: str) -> str:
     return f"dose/{sensor}"
 
 
+def _recalled(text: str | None) -> Any:  # Any: JSON
+    """What `json.dumps` made this text of; None when it made none."""
+    try:
+        return json.loads(text or "null")
+    except (ValueError, RecursionError):
+        return None
+
+
 @dataclass(slots=True)
 class _Sensor:
     """The running state of one sensor."""
@@ -119,15 +130,19 @@ class Pipeline:
         return _Sensor(setup, health, Cadence(setup.period_s, at.boot_s), setup.dialect.decoder())
 
     def resume(self, seqs: Mapping[str, int], kept: Mapping[str, str], at: Instant) -> None:
-        """Go on from an earlier life: each sensor's next sequence number, and what `Harvest.keep` held last."""
+        """Go on from an earlier life: each sensor's next sequence number, and what `Harvest.keep` held last.
+
+        What was kept and cannot be read begins anew: a journal that had to be rescued must not stop the measuring.
+        """
         for name, sensor in self._sensors.items():
             sensor.seq = seqs[name]
-            if memory := kept.get(kept_name(name)):
-                sensor.health.restore(json.loads(memory), at)
+            if isinstance(memory := _recalled(kept.get(kept_name(name))), dict):
+                sensor.health.restore(memory, at)
             if dose := kept.get(dose_name(name)):
-                sensor.dose = Dose.restored(dose)
-        if memory := kept.get(GATEWAY_KEPT):
-            self._gateway.restore(json.loads(memory), at)
+                with suppress(ValueError):
+                    sensor.dose = Dose.restored(dose)
+        if isinstance(memory := _recalled(kept.get(GATEWAY_KEPT)), list):
+            self._gateway.restore([item for item in memory if isinstance(item, dict)], at)
 
     @property
     def kept_names(self) -> list[str]:
@@ -278,6 +293,8 @@ class Pipeline:
     def _climate_of(self, sensor: _Sensor, end_s: float) -> Climate | None:
         if sensor.climate is not None:
             climate, since_s = sensor.climate
+            if climate.source == FIXED:
+                return climate
             age_s = end_s - since_s
             if age_s > sensor.setup.climate_max_age_s:
                 return None

@@ -8,6 +8,8 @@ from math import isfinite
 
 from motekeep.measure.interval import Climate
 
+FIXED = "fixed"  # the source of a climate that somebody wrote down: it does not age
+
 # Capacitive sensors read a few percent over 100 in fog: held at 100. Beyond that the number is a fault.
 RH_TOP_PCT = 105.0
 # What such sensors are rated for (common practice, no source).
