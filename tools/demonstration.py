@@ -16,8 +16,10 @@ from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import IO, Any
 
 BIN = Path(sys.executable).parent
+Message = dict[str, Any]  # Any: JSON as a subscriber gets it
 LIMIT_S = 175.0  # it ends by itself in under three minutes, whatever happens
 SENSORS = ("north", "south")
 
@@ -58,13 +60,13 @@ class Seen:
 
     readings: dict[tuple[str, int], str] = field(default_factory=dict)  # (sensor, seq) to the way it came
     late_order: dict[str, list[int]] = field(default_factory=dict)
-    bodies: dict[tuple[str, int], dict[str, object]] = field(default_factory=dict)
+    bodies: dict[tuple[str, int], Message] = field(default_factory=dict)
     statuses: list[str] = field(default_factory=list)
-    findings: list[dict[str, object]] = field(default_factory=list)
-    amendments: list[dict[str, object]] = field(default_factory=list)
+    findings: list[Message] = field(default_factory=list)
+    amendments: list[Message] = field(default_factory=list)
     changed: threading.Condition = field(default_factory=threading.Condition)
 
-    def take(self, topic: str, document: dict[str, object]) -> str:
+    def take(self, topic: str, document: Message) -> str:
         """Note a message; the line to show for it."""
         kind, _, sensor = topic.split("/", 3)[3].partition("/")
         with self.changed:
@@ -72,18 +74,17 @@ class Seen:
             self.changed.notify_all()
         return line
 
-    def _note(self, kind: str, sensor: str, document: dict[str, object]) -> str:
+    def _note(self, kind: str, sensor: str, document: Message) -> str:
         if kind == "reading":
             return self._reading(sensor, document, "live")
         if kind == "late":
             listed = document["readings"]
-            assert isinstance(listed, list)
             for one in listed:
                 self._reading(sensor, one, "late")
                 self.late_order.setdefault(sensor, []).append(one["seq"])
             return f"#{listed[0]['seq']} to #{listed[-1]['seq']}, {len(listed)} readings that waited"
         if kind == "health":
-            self.statuses.append(str(document["status"]))
+            self.statuses.append(document["status"])
             return f"status {document['status']}"
         if kind == "finding":
             self.findings.append(document)
@@ -93,14 +94,32 @@ class Seen:
             return f"from {document['from']}: flag {document['flag']}, {document['reasons']}"
         return json.dumps(document)
 
-    def _reading(self, sensor: str, document: dict[str, object], way: str) -> str:
-        key = (sensor, int(str(document["seq"])))
+    def _reading(self, sensor: str, document: Message, way: str) -> str:
+        key = (sensor, document["seq"])
         self.readings.setdefault(key, way)
         self.bodies[key] = document
         mass = document.get("pm2_5")
-        figure = f"PM2.5 {mass['value']:5.1f} ug/m3" if isinstance(mass, dict) and mass["value"] is not None else "no figure"
+        figure = f"PM2.5 {mass['value']:5.1f} ug/m3" if mass and mass["value"] is not None else "no figure"
         frames = document["frames"]
         return f"#{document['seq']:<3} {figure}  flag {document['flag']} {document['reasons']}  frames {frames}"
+
+    # -- questions ----------------------------------------------------------------------------------------------
+
+    def live(self, name: str) -> int:
+        return sum(way == "live" for (n, _), way in self.readings.items() if n == name)
+
+    def highest(self) -> dict[str, int]:
+        return {name: max((seq for n, seq in self.readings if n == name), default=0) for name in SENSORS}
+
+    def gapless(self, name: str, after: int) -> bool:
+        numbers = {seq for n, seq in self.readings if n == name and seq > after}
+        return bool(numbers) and numbers == set(range(after + 1, max(numbers) + 1))
+
+    def most_bad(self, name: str) -> int:
+        return max((body["frames"]["bad"] for (n, _), body in self.bodies.items() if n == name), default=0)
+
+    def stopped_fans(self) -> list[Message]:
+        return [f for f in self.findings if f["code"] == "fan-stopped" and f["event"] == "opened"]
 
 
 class Site:
@@ -110,7 +129,6 @@ class Site:
         self.work = work
         self.seen = Seen()
         self.began = time.monotonic()
-        self.daemon: subprocess.Popen[bytes] | None = None
         self._running: list[subprocess.Popen[bytes]] = []
         self._config = work / "config.toml"
         self._port = _free_port()
@@ -150,18 +168,14 @@ class Site:
 
     def subscribe(self) -> None:
         """mosquitto_sub with a session of its own, so that it sees what comes while it reconnects."""
-        subscriber = subprocess.Popen(
-            ["mosquitto_sub", "-p", str(self._port), "-V", "5", "-t", "motekeep/#", "-v", "-q", "1", "-c", "-i", "watcher"]
-            + ["-x", "600"],
-            stdout=subprocess.PIPE,
-            stderr=subprocess.DEVNULL,
-        )
+        session = ["-c", "-i", "watcher", "-q", "1", "-x", "600"]
+        command = ["mosquitto_sub", "-p", str(self._port), "-V", "5", "-t", "motekeep/#", "-v", *session]
+        subscriber = subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.DEVNULL)
         self._running.append(subscriber)
-        threading.Thread(target=self._read, args=(subscriber,), daemon=True).start()
+        threading.Thread(target=self._read, args=(subscriber.stdout,), daemon=True).start()
 
-    def _read(self, subscriber: subprocess.Popen[bytes]) -> None:
-        assert subscriber.stdout is not None
-        for line in subscriber.stdout:
+    def _read(self, lines: IO[bytes]) -> None:
+        for line in lines:
             topic, _, body = line.decode().strip().partition(" ")
             self.say(f"  {topic.split('/', 3)[3]:<14} {self.seen.take(topic, json.loads(body))}")
 
@@ -179,7 +193,10 @@ class Site:
             control.write(line + "\n")
 
     def start_daemon(self) -> None:
-        self.daemon = self.start(str(BIN / "motekeep"), "run", "--config", str(self._config), log="motekeep.log")
+        self._daemon = self.start(str(BIN / "motekeep"), "run", "--config", str(self._config), log="motekeep.log")
+
+    def kill_daemon(self) -> None:
+        self._daemon.send_signal(signal.SIGKILL)
 
     def end(self) -> None:
         for process in reversed(self._running):
@@ -208,69 +225,69 @@ class Checks:
 
 def story(site: Site, checks: Checks) -> None:
     """One trouble after the other. Each waits for what it should cause, so a slow machine only takes longer."""
-    say, wait = site.say, site.wait
-    say("-- a broker, a subscriber, two emulated sensors on pseudo-terminals, and the daemon; a reading every 10 s")
+    for chapter in (begin, lose_broker, damage_bytes, stop_fan, kill_daemon):
+        chapter(site, checks)
+
+
+def begin(site: Site, checks: Checks) -> None:
+    site.say(
+        "-- a broker, a subscriber, two emulated sensors on pseudo-terminals, and the daemon; a reading every 10 s"
+    )
     site.start_broker()
     site.subscribe()
     site.start_sensors()
     site.start_daemon()
-    well = wait(lambda s: all(sum(way == "live" for (n, _), way in s.readings.items() if n == name) >= 2 for name in SENSORS), 40)
+    well = site.wait(lambda s: all(s.live(name) >= 2 for name in SENSORS), 40)
     checks.note(well, "readings of both sensors come live")
-    checks.note(bool(site.seen.statuses), "a retained health status is there", site.seen.statuses[-1] if site.seen.statuses else "")
+    checks.note(bool(site.seen.statuses), "a retained health status is there", " ".join(site.seen.statuses[-1:]))
 
-    say("-- the broker goes away for 20 s; the daemon goes on measuring")
-    before = _highest(site.seen)
+
+def lose_broker(site: Site, checks: Checks) -> None:
+    site.say("-- the broker goes away for 20 s; the daemon goes on measuring")
+    before = site.seen.highest()
     site.stop_broker()
     time.sleep(20)
     site.start_broker()
-    say("-- the broker is back: what waited comes late, oldest first")
-    well = wait(lambda s: all(s.late_order.get(name) for name in SENSORS), 40)
-    well = well and wait(lambda s: all(_gapless(s, name, before) for name in SENSORS), 15)
+    site.say("-- the broker is back: what waited comes late, oldest first")
+    well = site.wait(lambda s: all(s.late_order.get(name) and s.gapless(name, before[name]) for name in SENSORS), 50)
     late = sum(way == "late" for way in site.seen.readings.values())
-    checks.note(well, "all readings of the outage came late, without a gap", f"{late} late")
-    ordered = all(order == sorted(order) for order in site.seen.late_order.values())
-    checks.note(ordered and bool(site.seen.late_order), "they came oldest first")
+    checks.note(well, "all readings of the outage came, without a gap", f"{late} late")
+    orders = site.seen.late_order.values()
+    checks.note(bool(orders) and all(order == sorted(order) for order in orders), "they came oldest first")
 
-    say("-- a third of the frames of south is damaged on the wire")
+
+def damage_bytes(site: Site, checks: Checks) -> None:
+    site.say("-- a third of the frames of south is damaged on the wire")
     site.order("fault south bad-checksums 0.34")
-    damaged = lambda s: [b for (n, _), b in s.bodies.items() if n == "south" and b["frames"]["bad"] > 1]  # type: ignore[index]  # noqa: E731
-    well = wait(lambda s: bool(damaged(s)), 30)
+    well = site.wait(lambda s: s.most_bad("south") > 1, 30)
     site.order("clear south bad-checksums")
-    checks.note(well, "damaged frames are counted, the good ones are used", str(damaged(site.seen)[0]["frames"]) if well else "")
+    figure = f"{site.seen.most_bad('south')} bad in one reading"
+    checks.note(well, "damaged frames are counted, the good ones are used", figure)
 
-    say("-- the fan of north stops")
+
+def stop_fan(site: Site, checks: Checks) -> None:
+    site.say("-- the fan of north stops")
     site.order("fault north fan-stopped")
     stopped = time.monotonic()
-    found = lambda s: [f for f in s.findings if f["code"] == "fan-stopped" and f["event"] == "opened"]  # noqa: E731
-    well = wait(lambda s: bool(found(s)), 90)
+    well = site.wait(lambda s: bool(s.stopped_fans()), 90)
     checks.note(well, "the stopped fan is found", f"after {time.monotonic() - stopped:.0f} s")
     if well:
-        say(f"   remedy: {found(site.seen)[0]['remedy']}")
-    right = well and found(site.seen)[0]["sensor"] == "north" and all(f["sensor"] == "north" for f in found(site.seen))
+        site.say(f"   remedy: {site.seen.stopped_fans()[0]['remedy']}")
+    right = well and all(finding["sensor"] == "north" for finding in site.seen.stopped_fans())
     checks.note(right, "it is found at the right sensor, and at no other")
-    well = wait(lambda s: s.statuses[-1:] == ["failure"], 10)
-    checks.note(well, "the health status says failure")
-    well = wait(lambda s: any(a["sensor"] == "north" for a in s.amendments), 5)
-    checks.note(well, "readings made before it was proven are amended")
-    failed = lambda s: any(n == "north" and b["flag"] == 4 for (n, _), b in s.bodies.items())  # noqa: E731
-    checks.note(wait(failed, 15), "readings from then on carry flag 4, fail")
+    checks.note(site.wait(lambda s: s.statuses[-1:] == ["failure"], 10), "the health status says failure")
+    amended = site.wait(lambda s: any(a["sensor"] == "north" for a in s.amendments), 5)
+    checks.note(amended, "readings made before it was proven are amended")
+    failed = site.wait(lambda s: any(n == "north" and b["flag"] == 4 for (n, _), b in s.bodies.items()), 15)
+    checks.note(failed, "readings from then on carry flag 4, fail")
 
-    say("-- the daemon is killed (SIGKILL); the broker notices")
-    assert site.daemon is not None
-    site.daemon.send_signal(signal.SIGKILL)
-    well = wait(lambda s: s.statuses[-1:] == ["offline"], 25)
-    checks.note(well, "the health status says offline")
-    gapless = all(_gapless(site.seen, name, {n: 0 for n in SENSORS}) for name in SENSORS)
+
+def kill_daemon(site: Site, checks: Checks) -> None:
+    site.say("-- the daemon is killed (SIGKILL); the broker notices")
+    site.kill_daemon()
+    checks.note(site.wait(lambda s: s.statuses[-1:] == ["offline"], 25), "the health status says offline")
+    gapless = all(site.seen.gapless(name, 0) for name in SENSORS)
     checks.note(gapless, "every number of every sensor was seen, from 1 on", f"{len(site.seen.readings)} readings")
-
-
-def _highest(seen: Seen) -> dict[str, int]:
-    return {name: max((seq for n, seq in seen.readings if n == name), default=0) for name in SENSORS}
-
-
-def _gapless(seen: Seen, name: str, after: dict[str, int]) -> bool:
-    numbers = {seq for n, seq in seen.readings if n == name and seq > after[name]}
-    return bool(numbers) and numbers == set(range(after[name] + 1, max(numbers) + 1))
 
 
 def _free_port() -> int:
