@@ -1,5 +1,6 @@
 """The broker edge without a broker: backoff, login files, and the sentences for what refuses to talk."""
 
+import gc
 import socket
 import ssl
 import threading
@@ -93,6 +94,23 @@ def test_a_fleet_that_lost_its_broker_comes_back_spread_out() -> None:
     assert delays[-1] > 59.0
     busiest = max(sum(1 for d in delays if second <= d < second + 1) for second in range(30, 60))
     assert busiest < 70  # 1000 over 30 s, evenly: 33
+
+
+def open_files() -> int:
+    return sum(1 for _ in Path("/proc/self/fd").iterdir())
+
+
+def test_attempts_without_end_leave_no_open_file_behind() -> None:
+    gc.disable()  # on a quiet gateway the cycle collector does not come by either
+    try:
+        with started(settings_for(free_port(), backoff_s=(0.002, 0.004))) as broker:
+            next_event(broker, Disconnected)
+            before = open_files()
+            for _ in range(8):
+                next_event(broker, Disconnected)
+            assert open_files() <= before + 6  # those of the newest three; each has two
+    finally:
+        gc.enable()
 
 
 # -- settings and files -----------------------------------------------------------------------------------------

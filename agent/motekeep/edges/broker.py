@@ -103,7 +103,10 @@ class MqttBroker:
                 return TEND_S
             self._ended(connection, now_s)
         if now_s >= self._due_s:
-            self._strays = [stray for stray in self._strays if stray.alive]
+            ended = [stray for stray in self._strays if not stray.alive]
+            for stray in ended:
+                stray.release()
+            self._strays = [stray for stray in self._strays if stray not in ended]
             if len(self._strays) < STRAYS:
                 self._begin(now_s)
                 return TEND_S

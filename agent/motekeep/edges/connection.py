@@ -170,6 +170,13 @@ class Connection:
         self.tell(why)
         _shut(self._client.socket())
 
+    def release(self) -> None:
+        """Let go of the client, once its thread has ended. Its callbacks hold us and we hold it, so its sockets would
+        stay open until the cycle collector comes by, which on a quiet gateway is after a hundred attempts or more."""
+        client = self._client
+        client.on_socket_open = client.on_connect = client.on_connect_fail = client.on_disconnect = None
+        client.on_publish = client.on_message = client.on_subscribe = client.on_log = None
+
     def tell(self, why: str, *, refused: bool = False) -> None:
         """Report the end of this link, once: paho reports some ends twice and others never."""
         with self._telling:
