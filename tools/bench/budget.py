@@ -54,7 +54,8 @@ class Use:
     at_s: float
     cpu_s: float
     wakes: int
-    written: int
+    handed: int  # bytes in write calls
+    written: int  # bytes of the pages that they touched, as they go to the card
 
     @classmethod
     def of(cls, pid: int) -> "Use":
@@ -64,7 +65,8 @@ class Use:
             wakes += _field(task / "status", "voluntary_ctxt_switches")
         # with the scheduler's own account the sum of both times is exact, only its split is sampled (proc(5))
         cpu_s = (int(fields[11]) + int(fields[12])) / os.sysconf("SC_CLK_TCK")
-        return cls(time.monotonic(), cpu_s, wakes, _field(Path(f"/proc/{pid}/io"), "write_bytes"))
+        io = Path(f"/proc/{pid}/io")
+        return cls(time.monotonic(), cpu_s, wakes, _field(io, "wchar"), _field(io, "write_bytes"))
 
 
 def _field(file: Path, name: str) -> int:
@@ -101,7 +103,9 @@ def device_command(folder: Path) -> Path:
     subprocess.run([sys.executable, "-m", "venv", str(venv)], check=True)
     pins = ["--constraint", str(ROOT / "tools" / "constraints.txt")]
     install = [str(venv / "bin" / "python"), "-m", "pip", "install", "-q", "--disable-pip-version-check", *pins]
-    subprocess.run([*install, str(ROOT)], check=True)
+    done = subprocess.run([*install, str(ROOT)], capture_output=True, text=True, check=False)
+    if done.returncode:
+        raise SystemExit(f"the base install failed; name another one with --command\n{done.stderr}")
     return venv / "bin" / "motekeep"
 
 
@@ -146,6 +150,7 @@ def measure(command: Path, minutes: int, folder: Path) -> dict[str, float]:
             "commits": (commits.count - before) / minutes,
             "wakes": (last.wakes - first.wakes) / took_s,
             "peer_wakes": (peer_last.wakes - peer_first.wakes) / took_s,
+            "handed": (last.handed - first.handed) / took_s * 86400.0 / 1e6,
             "written": (last.written - first.written) / took_s * 86400.0 / 1e6,
             "good": _share_of_good(subscriber, whole_site),
             "stop_s": stop_s,
@@ -179,7 +184,7 @@ def main() -> int:
         ("peak memory, MB", f"{found['memory']:.1f}", f"<= {MEMORY_BAR:.0f}", found["memory"] <= MEMORY_BAR),
         ("journal transactions a minute", f"{found['commits']:.2f}", "<= 1", found["commits"] <= COMMITS_BAR),
         ("wake-ups a second", f"{found['wakes']:.1f}", f"bare loop {found['peer_wakes']:.1f}", True),
-        ("written, MB a day", f"{found['written']:.1f}", "", True),
+        ("written, MB a day", f"{found['handed']:.1f}", f"whole pages {found['written']:.1f}", True),
         ("frames counted good, %", f"{found['good']:.1f}", ">= 99", found["good"] >= 99.0),
         ("SIGTERM to exit, s", f"{found['stop_s']:.1f}", "<= 5", found["stop_s"] <= 5.0),
     ]
