@@ -3,6 +3,7 @@
 from pathlib import Path
 
 import pytest
+
 from motekeep.config import Config, load, parse
 from motekeep.errors import ConfigError
 
@@ -91,6 +92,7 @@ def test_a_file_that_is_not_text_is_one_line(tmp_path: Path) -> None:
 
 def test_every_key_of_the_models_stands_in_the_example() -> None:
     text = EXAMPLE.read_text()
-    for model in (Config, *[f.annotation for f in Config.model_fields.values() if hasattr(f.annotation, "model_fields")]):
+    sections = [f.annotation for f in Config.model_fields.values() if hasattr(f.annotation, "model_fields")]
+    for model in (Config, *sections):
         for key, field in model.model_fields.items():  # type: ignore[union-attr]
             assert (field.alias or key) in text, f"{key} is not in config.example.toml"

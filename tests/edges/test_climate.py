@@ -3,6 +3,7 @@
 from pathlib import Path
 
 import pytest
+
 from motekeep.edges.climate import SysfsClimate
 from motekeep.errors import ClimateError
 from motekeep.measure.climate import from_message, plausible
@@ -55,7 +56,8 @@ def test_messages_carry_rh_and_perhaps_t() -> None:
 
 
 @pytest.mark.parametrize(
-    "payload", [b"", b"[]", b"{}", b'{"rh": "wet"}', b'{"rh": true}', b'{"rh": 300}', b'{"rh": 40, "t": 900}', b"x" * 2000,
+    "payload",
+    [b"", b"[]", b"{}", b'{"rh": "wet"}', b'{"rh": true}', b'{"rh": 300}', b'{"rh": 40, "t": 900}', b"x" * 2000,
                 b'{"rh": 40, "t": "warm"}', b"\xff\xfe", b"[" * 1024],
 )  # fmt: skip
 def test_bad_messages_are_one_value_error(payload: bytes) -> None:

@@ -1,6 +1,6 @@
 """Housekeeping survives steps of the wall clock: a year forward costs nothing, an hour back delays nothing."""
 
-import datetime as real
+import datetime as dt
 import threading
 import tracemalloc
 from collections.abc import Iterator
@@ -21,7 +21,7 @@ class Steps:
         self.by_s = 0.0
 
     def instant(self) -> Instant:
-        now = real.datetime.now(real.UTC).timestamp()
+        now = dt.datetime.now(dt.UTC).timestamp()
         return Instant(now + self.by_s, now, "boot", trusted=True)
 
 
@@ -29,10 +29,10 @@ class Steps:
 def steps(monkeypatch: pytest.MonkeyPatch) -> Steps:
     stepped = Steps()
 
-    class Datetime(real.datetime):
+    class Datetime(dt.datetime):
         @classmethod
-        def now(cls, tz: real.tzinfo | None = None) -> real.datetime:  # type: ignore[override]
-            return real.datetime.now(tz) + real.timedelta(seconds=stepped.by_s)
+        def now(cls, tz: dt.tzinfo | None = None) -> dt.datetime:  # type: ignore[override]
+            return dt.datetime.now(tz) + dt.timedelta(seconds=stepped.by_s)
 
     monkeypatch.setattr(apscheduler.schedulers.base, "datetime", Datetime)
     return stepped
@@ -117,9 +117,9 @@ def test_a_job_that_fails_is_counted_and_runs_again(steps: Steps) -> None:
 
 
 def test_the_trigger_goes_on_from_now_when_far_behind_and_keeps_step_otherwise() -> None:
-    trigger = SteadyInterval(seconds=10, start_date=real.datetime(2026, 1, 1, tzinfo=real.UTC), timezone=real.UTC)
-    start = real.datetime(2026, 1, 1, tzinfo=real.UTC)
-    late = start + real.timedelta(days=365)
-    assert trigger.get_next_fire_time(start, late) == late + real.timedelta(seconds=10)
-    soon = start + real.timedelta(seconds=15)
-    assert trigger.get_next_fire_time(start, soon) == start + real.timedelta(seconds=10)
+    trigger = SteadyInterval(seconds=10, start_date=dt.datetime(2026, 1, 1, tzinfo=dt.UTC), timezone=dt.UTC)
+    start = dt.datetime(2026, 1, 1, tzinfo=dt.UTC)
+    late = start + dt.timedelta(days=365)
+    assert trigger.get_next_fire_time(start, late) == late + dt.timedelta(seconds=10)
+    soon = start + dt.timedelta(seconds=15)
+    assert trigger.get_next_fire_time(start, soon) == start + dt.timedelta(seconds=10)

@@ -1,10 +1,12 @@
 """An interval holds exactly what its frames were."""
 
 import statistics
+from itertools import pairwise
 
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+
 from motekeep.instant import Instant
 from motekeep.measure.interval import Accumulator, Cadence, channel, frame_climate
 from motekeep.wire.frame import Frame, Layout
@@ -25,7 +27,7 @@ def test_statistics_agree_with_the_standard_library(values: list[float]) -> None
     assert got.mean == pytest.approx(statistics.fmean(values), rel=1e-9, abs=1e-9)
     assert got.sd == pytest.approx(statistics.stdev(values), rel=1e-6, abs=1e-4)
     assert (got.low, got.high) == (min(values), max(values))
-    steps = [(b - a) ** 2 for a, b in zip(values, values[1:], strict=False)]
+    steps = [(b - a) ** 2 for a, b in pairwise(values)]
     assert got.step == pytest.approx(sum(steps) / len(steps) / 2, rel=1e-5, abs=1e-3)
 
 
