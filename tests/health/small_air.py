@@ -86,11 +86,14 @@ def frames(counts: Floats, layout: Layout = BM_28) -> list[Frame]:
     resolution = layout.mass_resolution
     mass = np.minimum(np.rint(mass / resolution) * resolution, layout.mass_top)
     with_counts = bool(layout.sizes_um)
+    # what a frozen output would repeat: the words of a frame
+    words = np.concatenate([mass / resolution, counts] if with_counts else [mass / resolution], axis=1).astype("<u2")
+    payloads, size = words.tobytes(), 2 * words.shape[1]
     made = []
-    for row, masses in zip(counts.tolist(), mass.tolist(), strict=True):
+    for i, (row, masses) in enumerate(zip(counts.tolist(), mass.tolist(), strict=True)):
         shown = tuple(masses[-len(layout.mass) :])
-        printed_counts = tuple(row) if with_counts else ()
-        made.append(Frame(layout, shown, printed_counts, repr((shown, printed_counts)).encode()))
+        payload = payloads[i * size : i * size + size]
+        made.append(Frame(layout, shown, tuple(row) if with_counts else (), payload))
     return made
 
 

@@ -71,16 +71,16 @@ def test_zeros_and_near_zeros_of_very_clean_air_open_nothing(period_s: float, le
     rng = np.random.default_rng([int(level * 100), int(period_s)])
     for averaging in (1, 10):
         unit = Unit(period_s=period_s, averaging=averaging, floor=0.0)
-        made = frames(printed(steady(level, MARINE, 5_400.0, period_s), unit, rng))
+        made = frames(printed(steady(level, MARINE, 3_600.0, period_s), unit, rng))
         assert feed(OutputFrozen(0.1, instant(1000.0)), made, period_s) == []
 
 
 @pytest.mark.parametrize(("period_s", "averaging"), AT_1_AND_6)
 @pytest.mark.parametrize("level", [30.0, 200.0, 3_000.0])
-def test_half_a_day_of_ordinary_air_opens_nothing(period_s: float, averaging: int, level: float) -> None:
+def test_hours_of_ordinary_air_opens_nothing(period_s: float, averaging: int, level: float) -> None:
     rng = np.random.default_rng([int(level), int(period_s), averaging, 7])
     unit = Unit(period_s=period_s, averaging=averaging)
-    made = frames(printed(ordinary(rng, level, URBAN, 8.0 if period_s > 1 else 1.5, period_s), unit, rng))
+    made = frames(printed(ordinary(rng, level, URBAN, 6.0 if period_s > 1 else 1.0, period_s), unit, rng))
     assert feed(OutputFrozen(0.1, instant(1000.0)), made, period_s) == []
 
 
@@ -122,7 +122,7 @@ def test_without_counts_frozen_mass_is_found_where_mass_is_noisy_enough() -> Non
 @pytest.mark.parametrize("level", [0.0, 100.0, 1_000.0, 8_000.0])
 def test_without_counts_a_steady_night_is_not_frozen(level: float) -> None:
     rng = np.random.default_rng(int(level))
-    assert feed(OutputFrozen(0.1, instant(1000.0)), masses(level, 7_200.0, rng), 1.0) == []
+    assert feed(OutputFrozen(0.1, instant(1000.0)), masses(level, 3_600.0, rng), 1.0) == []
 
 
 def test_whole_micrograms_of_clean_air_say_nothing_however_long_they_stand() -> None:

@@ -134,3 +134,12 @@ def test_the_evidence_shows_all_bits_seen_and_since_the_first() -> None:
     assert suspicion is not None
     assert suspicion.since == 2.0
     assert suspicion.evidence.endswith("0x30")
+
+
+def test_bits_are_named_where_the_dialect_knows_them() -> None:
+    check = SensorError(((0x10, "fan stands still"), (0x20, "laser current out of range")))
+    for i in range(3):
+        check.observe(Observation(Frame(BM_28, (), (), b"", error=0x80000010), instant(float(i))))
+    suspicion = check.judge(instant(5.0))
+    assert suspicion is not None
+    assert suspicion.evidence.endswith("0x80000010 (fan stands still)")

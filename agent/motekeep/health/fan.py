@@ -7,6 +7,7 @@ frames only.
 from collections import deque
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import accumulate
 from math import inf, sqrt
 from typing import ClassVar
 
@@ -30,12 +31,13 @@ class _Block:
 
 @dataclass(frozen=True, slots=True)
 class _Collapse:
-    """What is known of a fan that stopped: levels before and after, and whether the large particles went further
-    down than the small ones."""
+    """What is known of a fan that stopped: levels before and after, what one pulse is in the mean of a single block,
+    and whether the large particles went further down than the small ones."""
 
     since: float
     before: Levels
     left: Levels
+    per_pulse: float
     sorted: bool
     evidence: str
 
@@ -55,7 +57,7 @@ class FanStopped(Check):
     2. Order. No larger channel with pulses enough has clearly kept more than a tenth: the false counts that may hold up
        the smallest are not in it. Smoke that ends takes the small particles and leaves the large ones; gusty smoke
        that thins takes all, but not so deep. Where pulses are few this tells little: hours of smoke over a clean site
-       (under some 300 /dL) that end within a minute can be taken for a stop.
+       (under some 300 /dL) that end within a minute can be taken for a stop, until five minutes of pulses deny it.
     3. Number. The pulses missing are too many for chance, also if the air had fallen to 0.6 of that lowest level.
        How much of a printed number one pulse is comes from the scatter of the unit's own two-minute means before, and
        while there are few of them from the worst that firmware does (one second of air of which half is looked at).
@@ -79,11 +81,12 @@ class FanStopped(Check):
     DEPTH = 0.25
     DEPTH_MASS = 0.15
     LARGER = 0.1
-    CHANCE = 1e-3
+    CHANCE = 1e-5
     AIR_FALLS_TO = 0.6
-    LEAST_PULSES = 12.0
+    LEAST_PULSES = 20.0
     ORDER_PULSES = 2.0
     CHANCE_ORDER = 3e-3
+    ORDER_SURE, LARGER_SURE = 20.0, 0.12
     SORTED_PULSES = 8.0
     REFINE = 25  # blocks after which levels left are taken anew: five minutes tell the drizzle better than two
     BACK = 5  # blocks that must be back
@@ -121,14 +124,18 @@ class FanStopped(Check):
             levels = tuple([sum(column) / len(rows) for column in zip(*rows, strict=True)])
             self._blocks.append(_Block(self._block_start, levels))
             self._frames.clear()
-            if self._collapse is None:
-                self._collapse = self._look()
-            elif self._is_back(self._collapse):
-                self._collapse = None
-                self._blocks.clear()
-            else:
-                self._collapse = self._refined(self._collapse, now)
+            self._follow(now)
         self._block_start, self._block_end = now, now + self._block_s
+
+    def _follow(self, now: float) -> None:
+        """A block is complete: look for a collapse, or for its end."""
+        collapse = self._collapse
+        if collapse is None:
+            self._collapse = self._look()
+            return
+        self._collapse = None if self._is_back(collapse) else self._refined(collapse, now)
+        if self._collapse is None:
+            self._blocks.clear()
 
     def _forget(self) -> None:
         self._frames.clear()
@@ -169,7 +176,7 @@ class FanStopped(Check):
         depth = self.DEPTH if self._has_counts else self.DEPTH_MASS
         if before[0] <= 0.0 or left[0] > depth * before[0]:
             return None
-        per_pulse = self._per_pulse(smallest[:split]) * self.CHUNK / length
+        per_pulse = self._per_pulse(blocks[:split]) * self.CHUNK / length
         expected = [level / per_pulse for level in before]
         seen = [level / per_pulse for level in left]
         if not self._has_counts and before[0] < 5.0 * self._resolution:
@@ -178,58 +185,63 @@ class FanStopped(Check):
             return None
         if poisson_at_most(int(seen[0]), self.AIR_FALLS_TO * expected[0]) > self.CHANCE:
             return None
-        told = [i for i, pulses in enumerate(expected) if i and pulses >= self.ORDER_PULSES]
-        for i in told:
-            if poisson_at_least(round(seen[i]), self.LARGER * expected[i]) < self.CHANCE_ORDER:
-                return None
+        if any(self._has_kept(pulses, left) for pulses, left in zip(expected[1:], seen[1:], strict=True)):
+            return None
         return self._collapsed(blocks, before, left, per_pulse * length)
 
-    def _collapsed(self, blocks: list[_Block], before: Levels, left: Levels, per_block_pulse: float) -> _Collapse:
-        normal = max(before[0] - 2.0 * sqrt(before[0] * per_block_pulse), 0.5 * before[0])
+    def _has_kept(self, expected: float, seen: float) -> bool:
+        """Whether a larger channel has kept more than a stopped fan leaves it, as far as its pulses tell."""
+        if expected >= self.ORDER_SURE:
+            return seen > self.LARGER_SURE * expected
+        few = expected < self.ORDER_PULSES
+        return not few and poisson_at_least(round(seen), self.LARGER * expected) < self.CHANCE_ORDER
+
+    def _collapsed(self, blocks: list[_Block], before: Levels, left: Levels, per_pulse: float) -> _Collapse:
+        normal = max(before[0] - 2.0 * sqrt(before[0] * per_pulse), 0.5 * before[0])
         first = len(blocks) - 1
         while first > 0 and blocks[first - 1].levels[0] < normal:
             first -= 1
         self._refine_at = blocks[-1].start + self.REFINE * self._block_s
-        return self._state(blocks[first].start, before, left, len(blocks) - first)
+        return self._state(blocks[first].start, before, left, per_pulse, len(blocks) - first)
 
-    def _state(self, since: float, before: Levels, left: Levels, blocks: int) -> _Collapse:
+    def _state(self, since: float, before: Levels, left: Levels, per_pulse: float, blocks: int) -> _Collapse:
         """The collapse with what its levels, means over so many blocks, say of the order."""
-        per_pulse = (
-            (self._per_pulse_counts if self._has_counts else self._per_pulse_mass) / self._frames_a_block / blocks
-        )
+        one = per_pulse / blocks
         kept = left[0] / before[0]
-        by_size = any(
-            poisson_at_most(int(left[i] / per_pulse), 0.5 * kept * before[i] / per_pulse) < 0.05
-            for i in range(1, len(before))
-        )
-        return _Collapse(since, before, left, by_size, self._told(before, left, by_size=by_size))
+        pairs = list(zip(before, left, strict=True))[1:]
+        by_size = any(poisson_at_most(int(a / one), 0.5 * kept * b / one) < 0.05 for b, a in pairs)
+        return _Collapse(since, before, left, per_pulse, by_size, self._told(before, left, by_size=by_size))
 
-    def _refined(self, collapse: _Collapse, now: float) -> _Collapse:
-        """The same with the levels of the last five minutes, once."""
+    def _refined(self, collapse: _Collapse, now: float) -> _Collapse | None:
+        """The same with the levels of the first five minutes, once. None when these show that large particles were
+        kept after all: what two minutes of few pulses could not tell from a stop was the end of some smoke."""
         if now < self._refine_at or len(self._blocks) < self.REFINE:
             return collapse
         self._refine_at = inf
         left = _mean(list(self._blocks)[-self.REFINE :])
-        return self._state(collapse.since, collapse.before, left, self.REFINE)
+        one = collapse.per_pulse / self.REFINE
+        pairs = list(zip(collapse.before, left, strict=True))[1:]
+        if any(self._has_kept(b / one, a / one) for b, a in pairs):
+            return None
+        return self._state(collapse.since, collapse.before, left, collapse.per_pulse, self.REFINE)
 
-    def _per_pulse(self, smallest: Sequence[float]) -> float:
-        """How much of a two-minute mean one pulse is: half the mean square of differences between such means, over
-        their mean, 3 minutes apart so that firmware averaging does not hide in it. Gusts make it larger, up to the
-        worst case, which cannot be passed; that also counts like two such means."""
+    def _per_pulse(self, history: Sequence[_Block]) -> float:
+        """How much of a two-minute mean one pulse is, from the unit's own scatter before the fall.
+
+        Half the mean square of differences between such means, over their mean, is one pulse plus what the air did. All
+        channels count the same pulses, and the air does least to the large, rare ones: so the smallest figure among
+        the channels with pulses enough, raised by a third since the smallest of several is biased. The worst that
+        firmware does is the limit, and counts like half such a mean while the history is short.
+        """
         worst = self._per_pulse_counts if self._has_counts else self._per_pulse_mass
         worst /= self._frames_a_block * self.CHUNK
-        sums = [0.0]
-        for level in smallest:
-            sums.append(sums[-1] + level)
-        means = [(b - a) / self.CHUNK for a, b in zip(sums, sums[self.CHUNK :], strict=False)]
-        apart = self.CHUNK + self.CHUNK // 2
-        squares = [(b - a) ** 2 / 2.0 for a, b in zip(means, means[apart:], strict=False)]
-        average = sums[-1] / len(smallest)
-        if not squares or average <= 0.0:
+        columns = list(zip(*[block.levels for block in history], strict=True))
+        figures = [_scatter(column, self.CHUNK) for column in (columns if self._has_counts else columns[:1])]
+        enough = [f for f, column in zip(figures, columns, strict=False) if 0.0 < f * 20.0 * self.CHUNK <= sum(column)]
+        if not enough:
             return worst
-        own = sum(squares) / len(squares) / average
-        independent = len(squares) / self.CHUNK
-        return min((2.0 * worst + independent * own) / (2.0 + independent), worst)
+        independent = (len(history) - 2.5 * self.CHUNK) / self.CHUNK
+        return min((0.5 * worst + independent * 1.33 * min(enough)) / (0.5 + independent), worst)
 
     @property
     def _has_counts(self) -> bool:
@@ -263,7 +275,7 @@ class FanStopped(Check):
             return True
         if not collapse.sorted or now[0] < 3.0 * left[0]:
             return False
-        per_pulse = self._per_pulse_counts / (self._frames_a_block * self.BACK)
+        per_pulse = collapse.per_pulse / self.BACK
         for i in range(len(now) - 1, 0, -1):
             due = before[i] / before[0] * now[0]
             if due >= self.SORTED_PULSES * per_pulse:
@@ -295,8 +307,19 @@ class FanStopped(Check):
             return
         if before and before[0] > 0.0:
             evidence = f"stopped before the restart: smallest channel {before[0]:.4g} to {left[0]:.3g}"
-            self._collapse = _Collapse(at.boot_s, tuple(before), tuple(left), bool(by_size), evidence)
+            worst = self._per_pulse_counts / self._frames_a_block
+            self._collapse = _Collapse(at.boot_s, tuple(before), tuple(left), worst, bool(by_size), evidence)
 
 
 def _mean(blocks: Sequence[_Block]) -> Levels:
     return tuple([sum(column) / len(blocks) for column in zip(*[b.levels for b in blocks], strict=True)])
+
+
+def _scatter(levels: Sequence[float], chunk: int) -> float:
+    """Half the mean square of differences between means of `chunk` blocks, over the mean of all; 0 when unknown. The
+    means are one and a half chunks apart, so that firmware averaging does not hide in the differences."""
+    sums = [0.0, *accumulate(levels)]
+    means = [(b - a) / chunk for a, b in zip(sums, sums[chunk:], strict=False)]
+    squares = [(b - a) ** 2 / 2.0 for a, b in zip(means, means[chunk + chunk // 2 :], strict=False)]
+    average = sums[-1] / len(levels)
+    return sum(squares) / len(squares) / average if squares and average > 0.0 else 0.0

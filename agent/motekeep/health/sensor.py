@@ -39,7 +39,7 @@ class SensorHealth:
             CountsSaturated(),
             MassClipped(),
             ChannelsInconsistent(),
-            SensorError(),
+            SensorError(dialect.error_bits),
             FanStopped(flow_l_min, period_s),
             FanStoppedBesideTwin(flow_l_min, period_s),
         )

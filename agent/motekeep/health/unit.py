@@ -76,7 +76,8 @@ class SensorError(Check):
     """sensor-error: the unit reports a fault of its own.
 
     A frame with error bits counts one, a frame without takes a quarter back; three open it, so that three in a row do
-    and so does every other one, but not a single misread frame. The bits are shown as the dialect sends them.
+    and so does every other one, but not a single misread frame. The bits are shown as sent, with their
+    names where the dialect knows them.
     """
 
     code: ClassVar[str] = "sensor-error"
@@ -87,7 +88,8 @@ class SensorError(Check):
     TOP = 6.0
     BACK = 0.25
 
-    def __init__(self) -> None:
+    def __init__(self, names: tuple[tuple[int, str], ...] = ()) -> None:
+        self._names = names
         self._weight = 0.0
         self._bits = 0
         self._since = 0.0
@@ -109,4 +111,6 @@ class SensorError(Check):
     def judge(self, at: Instant) -> Suspicion | None:
         if not self._holds:
             return None
-        return Suspicion(self._since, 0.95, f"the sensor's own error bits: 0x{self._bits:02x}")
+        named = ", ".join([name for bit, name in self._names if bit & self._bits])
+        told = f"0x{self._bits:02x}" + (f" ({named})" if named else "")
+        return Suspicion(self._since, 0.95, f"the sensor's own error bits: {told}")

@@ -118,6 +118,7 @@ class Dialect:
     `encode` is the way back, for the emulator and the tests: the bytes whose decoding gives this frame. `polled`
     dialects speak only after `commands.read`. `start` is sent after opening the line, before anything else
     is expected of it. `warm_up_s` is how long after power or wake its numbers are not to be trusted.
+    `error_bits` names the bits of `Frame.error` whose meaning is known.
     """
 
     name: str
@@ -130,6 +131,7 @@ class Dialect:
     start: bytes = b""
     warm_up_s: float = 30.0
     longest: int = 64
+    error_bits: tuple[tuple[int, str], ...] = ()
 
 
 @dataclass(frozen=True, slots=True)

@@ -168,4 +168,5 @@ DIALECT: Final = Dialect(
     start=b"\xff" + unit(0, WAKE) + MEASURE,
     warm_up_s=30.0,
     longest=LONGEST,
+    error_bits=((FAN_SPEED, "fan off its speed"), (LASER, "laser current out of range"), (FAN, "fan stands still")),
 )
