@@ -126,7 +126,14 @@ class Pipeline:
 
     @staticmethod
     def _sensor(setup: SensorSetup, at: Instant) -> _Sensor:
-        health = SensorHealth(setup.name, setup.dialect, setup.period_s, at, flow_l_min=setup.flow_l_min)
+        health = SensorHealth(
+            setup.name,
+            setup.dialect,
+            setup.period_s,
+            at,
+            flow_l_min=setup.flow_l_min,
+            twinned=setup.twin is not None,
+        )
         return _Sensor(setup, health, Cadence(setup.period_s, at.boot_s), setup.dialect.decoder())
 
     def resume(self, seqs: Mapping[str, int], kept: Mapping[str, str], at: Instant) -> None:

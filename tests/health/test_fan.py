@@ -272,7 +272,7 @@ def test_what_few_pulses_took_for_a_stop_is_taken_back_when_more_deny_it() -> No
     for n in range(6):
         rng = np.random.default_rng([n, 5])
         unit = drawn_unit(rng, 6.0)
-        air = ordinary(rng, 100.0, RURAL, 2.9, 6.0)
+        air = ordinary(rng, 100.0, RURAL, 3.2, 6.0)
         t = np.arange(len(air)) * 6.0
         changes = feed(fan(6.0), frames(printed(long_smoke_that_ends_at_once(rng, t, air), unit, rng)), 6.0)
         opened += bool(changes)

@@ -7,7 +7,7 @@ frames only.
 from collections import deque
 from collections.abc import Sequence
 from dataclasses import dataclass
-from itertools import accumulate
+from itertools import accumulate, islice
 from math import inf, sqrt
 from typing import ClassVar
 
@@ -121,7 +121,7 @@ class FanStopped(Check):
             self._layout = frame.layout
         if self._frames:
             rows = [f.counts or f.mass for f in self._frames]
-            levels = tuple([sum(column) / len(rows) for column in zip(*rows, strict=True)])
+            levels = tuple([total / len(rows) for total in map(sum, zip(*rows, strict=True))])
             self._blocks.append(_Block(self._block_start, levels))
             self._frames.clear()
             self._follow(now)
@@ -151,14 +151,16 @@ class FanStopped(Check):
     def _look(self) -> _Collapse | None:
         """Whether the blocks end in a collapse. The first lines are the cheap way out, taken nearly always."""
         n, shortest, chunk = len(self._blocks), self.AFTER.start, self.CHUNK
-        gap = n - shortest - self.FALL
-        if gap < 2 * chunk:
+        since = shortest + self.FALL
+        if n < since + 2 * chunk:
             return None
-        smallest = [block.levels[0] for block in self._blocks]
-        just_before = max(sum(smallest[gap - chunk : gap]), sum(smallest[gap - 2 * chunk : gap - chunk])) / chunk
-        if just_before <= 0.0 or sum(smallest[-shortest:]) / shortest > 2.0 * self.DEPTH * just_before:
+        # newest first, as a deque is slow to look into
+        newest = [block.levels[0] for block in islice(reversed(self._blocks), since + 2 * chunk)]
+        just_before = max(sum(newest[since : since + chunk]), sum(newest[since + chunk :])) / chunk
+        if just_before <= 0.0 or sum(newest[:shortest]) / shortest > 2.0 * self.DEPTH * just_before:
             return None
         blocks = list(self._blocks)
+        smallest = [block.levels[0] for block in blocks]
         for length in self.AFTER:
             split = n - length - self.FALL
             if split < 2 * chunk:

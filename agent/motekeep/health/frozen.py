@@ -3,7 +3,7 @@
 Owns the chance that honest air gives the same payload again and again. Must not know the line.
 """
 
-from math import erf, log, sqrt
+from math import erf, log10, sqrt
 from typing import ClassVar
 
 from motekeep.health.check import Check, LineState
@@ -47,56 +47,67 @@ class OutputFrozen(Check):
 
     def __init__(self, flow_l_min: float, at: Instant) -> None:
         self._scale = 6.0 / flow_l_min
+        self._first: Observation | None = None  # of the run
         self._payload = b""
-        self._frame: Frame | None = None
         self._run = 0  # identical frames after the first
-        self._since = self._last = at.boot_s
-        self._repeats = self.UNLEARNT
+        self._last = at.boot_s
         self._reported = False
+        self._repeats = self.UNLEARNT
         self._natural = 3.0  # longest run seen that chance allows, slowly forgotten
+        self._ended = 0  # runs of a single frame that are not learnt from yet
 
     def observe(self, observation: Observation) -> None:
-        frame = observation.frame
-        if frame.payload == self._payload:
+        payload = observation.frame.payload
+        if payload == self._payload:
             self._run += 1
             self._last = observation.at.boot_s
             return
-        self._learn()
-        self._payload, self._frame = frame.payload, frame
-        self._since = self._last = observation.at.boot_s
-        self._run = 0
-        self._reported = False
+        self._ended += 1
+        if self._run:
+            self._learn()
+            self._run = 0
+        self._payload, self._first = payload, observation
 
     def _learn(self) -> None:
-        """A run has ended: what it says of the unit's natural repeats. Runs of zeros say nothing."""
-        if self._reported or self._frame is None or _chance_of_repeat(self._frame, self._scale) >= 1.0:
+        """A run of several frames has ended: what it and the single frames before it say of the unit's natural
+        repeats. Runs of zeros, and those that were reported, say nothing."""
+        reported, self._reported = self._reported, False
+        self._repeats *= (1.0 - self.LEARN) ** self._ended
+        self._natural *= self.FORGET**self._ended
+        self._ended = 0
+        if reported or self._first is None or _chance_of_repeat(self._first.frame, self._scale) >= 1.0:
             return
         run = min(self._run, self.LEARN_RUN)
-        self._repeats += (1.0 - self._repeats) * self.LEARN * run - self._repeats * self.LEARN
-        self._natural = max(self._natural * self.FORGET, float(run))
+        self._repeats += (1.0 - self._repeats) * self.LEARN * run
+        self._natural = max(self._natural, float(run))
 
     def line(self, state: LineState, at: Instant, why: str) -> None:
-        self._frame = None
+        self._first = None
         self._payload = b""
         self._run = 0
         self._reported = False
 
     def judge(self, at: Instant) -> Suspicion | None:
-        if self._run < max(self.LEAST_FRAMES, 3.0 * self._natural) or self._frame is None:
+        if self._run < self.LEAST_FRAMES or self._first is None:
             return None
-        chance = _chance_of_repeat(self._frame, self._scale)
-        if chance >= 1.0 or self._last - self._since < self.LEAST_S:
+        natural = self._natural * self.FORGET**self._ended
+        since = self._first.at.boot_s
+        if self._run < 3.0 * natural or self._last - since < self.LEAST_S:
             return None
-        likely = max(chance, min(self._repeats, self.REPEATS_TOP))
-        exponent = self._run * log(likely) / log(10.0)
-        if exponent > log(self.CHANCE) / log(10.0):
+        frame = self._first.frame
+        chance = _chance_of_repeat(frame, self._scale)
+        if chance >= 1.0:
+            return None
+        usual = min(self._repeats * (1.0 - self.LEARN) ** self._ended, self.REPEATS_TOP)
+        exponent = self._run * log10(max(chance, usual))
+        if exponent > log10(self.CHANCE):
             return None
         self._reported = True
         evidence = (
-            f"{self._run + 1} identical frames in {self._last - self._since:.0f} s at {_level(self._frame)}; "
+            f"{self._run + 1} identical frames in {self._last - since:.0f} s at {_level(frame)}; "
             f"chance under 1e{max(int(exponent), -99)}"
         )
-        return Suspicion(self._since, 0.99, evidence)
+        return Suspicion(since, 0.99, evidence)
 
 
 def _chance_of_repeat(frame: Frame, scale: float) -> float:

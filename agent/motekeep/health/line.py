@@ -58,6 +58,7 @@ class FramesMissing(Check):
         # (boot seconds, frames arrived by then), thinned to what the window needs
         self._marks: deque[tuple[float, int]] = deque(maxlen=2 * self.MARKS)
         self._spacing = self.LONG * self._window / self.MARKS
+        self._thin: Suspicion | None = None  # what the cadence said at the last mark
 
     def observe(self, observation: Observation) -> None:
         self._arrived += 1
@@ -94,6 +95,7 @@ class FramesMissing(Check):
     def _begin(self, boot_s: float) -> None:
         self._listening = boot_s
         self._marks.clear()
+        self._thin = None
         self._quiet()
 
     def judge(self, at: Instant) -> Suspicion | None:
@@ -104,9 +106,10 @@ class FramesMissing(Check):
             return None
         if not self._marks or now - self._marks[-1][0] >= self._spacing:
             self._marks.append((now, self._arrived))
+            self._thin = self._judge_cadence(now)
         if now - self._last >= self._patience:
             return self._judge_silent(now)
-        return self._judge_cadence(now)
+        return self._thin
 
     def _judge_gone(self, now: float, since: float, why: str) -> Suspicion | None:
         if now - since < self.SILENT_S:

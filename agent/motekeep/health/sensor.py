@@ -26,10 +26,20 @@ class SensorHealth:
     """Hears everything that one sensor does; says what is wrong with it.
 
     `at` is when the watch begins: from then on frames are due each `period_s`. `flow_l_min` is the nominal flow, which
-    says how many real pulses a printed count can rest on.
+    says how many real pulses a printed count can rest on. `twinned`: a twin breathes the same air, and `twin` will be
+    called with its frames.
     """
 
-    def __init__(self, sensor: str, dialect: Dialect, period_s: float, at: Instant, *, flow_l_min: float = 0.1) -> None:
+    def __init__(
+        self,
+        sensor: str,
+        dialect: Dialect,
+        period_s: float,
+        at: Instant,
+        *,
+        flow_l_min: float = 0.1,
+        twinned: bool = False,
+    ) -> None:
         self._warm_up = WarmingUp(dialect.warm_up_s, period_s, at)
         self._checks: tuple[Check, ...] = (
             self._warm_up,
@@ -41,7 +51,7 @@ class SensorHealth:
             ChannelsInconsistent(),
             SensorError(dialect.error_bits),
             FanStopped(flow_l_min, period_s),
-            FanStoppedBesideTwin(flow_l_min, period_s),
+            *([FanStoppedBesideTwin(flow_l_min, period_s)] if twinned else []),
         )
         terms = {check.code: Terms(check.clear_s, check.again_s) for check in self._checks}
         self._ledger = Ledger(sensor, terms)
@@ -58,6 +68,7 @@ class SensorHealth:
         self._heard = tuple([c.heard for c in checks if listens(c, "heard")])
         self._line = tuple([c.line for c in checks if listens(c, "line")])
         self._interval = tuple([c.interval for c in checks if listens(c, "interval")])
+        self._judge = tuple([(c.code, c.judge) for c in checks])
 
     # -- what comes in ------------------------------------------------------------------------------------------
 
@@ -112,13 +123,13 @@ class SensorHealth:
 
     def _update(self, at: Instant) -> list[FindingEvent]:
         raised: dict[str, Suspicion] = {}
-        for check in self._checks:
-            suspicion = check.judge(at)
+        for code, judge in self._judge:
+            suspicion = judge(at)
             if suspicion is None:
                 continue
-            known = raised.get(check.code)
+            known = raised.get(code)
             if known is None or suspicion.confidence > known.confidence:
-                raised[check.code] = suspicion
+                raised[code] = suspicion
         return self._ledger.update(raised, at)
 
     def open(self) -> list[Finding]:
