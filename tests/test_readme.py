@@ -4,6 +4,7 @@ from pathlib import Path
 
 from motekeep.cli import main
 from motekeep.health.finding import KINDS
+from motekeep.measure.document_text import parse
 from motekeep.message.schema import CHANNELS
 
 ROOT = Path(__file__).parent.parent
@@ -55,3 +56,9 @@ def test_the_cautions_are_there() -> None:
         "reversed supply",
     ):
         assert word in README
+
+
+def test_the_calibration_document_of_the_readme_is_a_valid_one() -> None:
+    text = README.split("```toml\n")[1].split("```")[0]
+    document = parse(text.encode())
+    assert (document.issue, document.sensor) == (7, "north")
