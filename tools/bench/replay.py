@@ -109,7 +109,7 @@ class Cost:
 
 
 def run(*command: str) -> Cost:
-    """Run a command to its end. Its peak cannot be told below that of this process: see proc(5), VmHWM."""
+    """Run a command to its end."""
     began = time.perf_counter()
     process = subprocess.Popen(command, stdout=subprocess.DEVNULL)
     _, status, used = os.wait4(process.pid, 0)
@@ -133,9 +133,11 @@ def prepare(days: int) -> tuple[Path, Path]:
     made = run(str(COMMANDS / "motesim"), "capture", str(scenario), str(whole))
     print(f"  {made.cpu_s:.0f} s of processor, {whole.stat().st_size / 1e6:.0f} MB", flush=True)
     end = (START + timedelta(days=days / 10.0)).timestamp()
-    with whole.open(encoding="ascii") as lines:
-        early = "".join(takewhile(lambda line: line[0] == "#" or float(line.split(" ", 1)[0]) < end, lines))
-    tenth.write_text(early, encoding="ascii")
+    # line by line: what this process holds at most is the least that a child's peak can be told as
+    part = folder / "tenth.part"
+    with whole.open(encoding="ascii") as lines, part.open("w", encoding="ascii") as out:
+        out.writelines(takewhile(lambda line: line[0] == "#" or float(line.split(" ", 1)[0]) < end, lines))
+    part.rename(tenth)
     return whole, tenth
 
 
