@@ -356,6 +356,15 @@ def test_a_document_that_must_not_be_used_ends_it_in_one_line_that_names_the_key
     assert not (tmp_path / "out").exists()
 
 
+def test_two_documents_of_one_sensor_are_refused_since_only_one_could_be_in_force(tmp_path: Path) -> None:
+    path, first, second = capture(tmp_path / "a.capture", frames(60.0)), tmp_path / "1.toml", tmp_path / "2.toml"
+    for document in (first, second):
+        document.write_text(DOCUMENT)
+    done = command(tmp_path, str(path), "--calibration", str(first), "--calibration", str(second))
+    assert done.exit_code == 2
+    assert done.output == "motekeep: --calibration: two documents are for sensor 'north'; give one a sensor\n"
+
+
 def test_exit_codes_tell_done_from_nothing_to_do_from_a_bad_capture_from_bad_usage(tmp_path: Path) -> None:
     good = capture(tmp_path / "good.capture", frames(120.0), frames(120.0, "attic"))
     done = command(tmp_path, str(good))

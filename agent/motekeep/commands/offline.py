@@ -17,6 +17,9 @@ from motekeep.replay import Plan, replay
 def run_captures(config: Config, captures: list[Path], out: Path, documents: list[Path]) -> bool:
     """Replay and tell what was left out; whether there was anything to replay."""
     calibrations = [_document(path, config) for path in documents]
+    names = [document.sensor for document in calibrations]
+    if twice := next((name for name in names if names.count(name) > 1), None):
+        raise ConfigError("--calibration", f"two documents are for sensor {twice!r}", "give one a sensor")
     plan = Plan(Place(config.site, config.gateway), config.interval, sensor_setups(config), calibrations)
     with bytes_bar("replay", captures) as progress:
         summary = replay(captures, out, plan, progress)
