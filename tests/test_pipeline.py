@@ -222,3 +222,17 @@ def test_a_torn_frame_that_only_the_next_one_proves_is_bad_and_not_missing_as_we
     pipeline.advance(at(60))
     [reading] = readings(pipeline)
     assert reading.frames.model_dump() == {"good": 59, "bad": 1, "missing": 0}
+
+
+def test_an_instant_taken_just_before_a_step_does_not_step_back() -> None:
+    pipeline = started()
+    for second in range(1, 31):
+        pipeline.receive("north", data(second), at(second - 0.5))
+    pipeline.advance(at(30.0, 3600.0))
+    pipeline.receive("north", data(30), at(29.99))
+    for second in range(31, 61):
+        pipeline.receive("north", data(second), at(second - 0.5, 3600.0))
+    pipeline.advance(at(60, 3600.0))
+    before, after = readings(pipeline)
+    assert (before.seconds, after.seconds) == (30, 30)
+    assert before.frames.good + after.frames.good == 61
