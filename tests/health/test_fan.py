@@ -288,6 +288,6 @@ def test_sixty_days_of_each_weather_open_nothing(weather: Weather, layout: Layou
     for n in range(60):
         rng = np.random.default_rng([n, 99])
         unit = replace(drawn_unit(rng, 6.0), layout=layout)
-        lowest = 2.8 if weather in (long_smoke_that_ends_at_once, fireworks) else 0.0  # below: see the check's own word
+        lowest = 3.3 if weather in (long_smoke_that_ends_at_once, fireworks) else 0.0  # below: see the check's own word
         level = float(10.0 ** rng.uniform(lowest, 4.3))
         assert opened_by(weather, rng, level, list(SHAPES.values())[n % 4], unit, 24.0) == 0, (n, level)
