@@ -331,8 +331,8 @@ def judged(cases: list[Case], days: int, seed: int) -> Iterator[Judged]:
 
 def main() -> int:
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
-    parser.add_argument("--days", type=int, default=10, help="judged of each unit")
-    parser.add_argument("--quick", action="store_true", help="one unit a site, seven days, none at 1 s")
+    parser.add_argument("--days", type=int, default=7, help="judged of each unit")
+    parser.add_argument("--quick", action="store_true", help="one unit a site, none at 1 s")
     parser.add_argument("--only", choices=SITES, help="this site only")
     parser.add_argument("--seed", type=int, default=2027, help="of weather and events")
     parser.add_argument("--documents", type=Path, help="keep the fitted documents in this folder")
@@ -341,7 +341,7 @@ def main() -> int:
     began = perf_counter()
     print(HEAD)
     everything: list[Judged] = []
-    for found in judged(cases, 7 if arguments.quick else arguments.days, arguments.seed):
+    for found in judged(cases, arguments.days, arguments.seed):
         case = found.case
         name = f"{case.site}, {case.unit} {case.dialect}, {case.period_s:g} s"
         print(row(name, found.hours, found.without), flush=True)
