@@ -236,3 +236,20 @@ def test_an_instant_taken_just_before_a_step_does_not_step_back() -> None:
     before, after = readings(pipeline)
     assert (before.seconds, after.seconds) == (30, 30)
     assert before.frames.good + after.frames.good == 61
+
+
+def test_amendments_survive_a_restart_and_change_the_hours_again() -> None:
+    pipeline = started()
+    for second in range(1, 3601):
+        pipeline.receive("north", data(second), at(second - 0.5))
+    pipeline.advance(at(3600))
+    stored = readings(pipeline)
+    second = started(3700)
+    kept = {"amendments/north": f'[[{NOON}, {NOON + 1800}, 4, "fan-stopped"]]'}
+    second.resume({"north": 67}, kept, at(3700))
+    second.remember("north", stored)
+    second.advance(at(3720))
+    [hour] = second.harvest().hours
+    assert hour.pm2_5 is not None
+    assert hour.pm2_5.completeness < 0.75  # half of it fails, and is left out
+    assert hour.pm2_5.mean is None

@@ -102,6 +102,7 @@ class Daemon:
         place = Place(config.site, config.gateway)
         topics = Topics(config.broker.root, config.site, config.gateway)
         names = [sensor.name for sensor in config.sensor]
+        self._config = config
         self._clock = clock
         self._busy = busy
         self._intake = intake = Intake(Pipeline(place, config.interval, sensor_setups(config), now))
@@ -124,6 +125,7 @@ class Daemon:
             intake,
             lambda: self._open_journal(config, topics),
             self._publisher,
+            self._remember,
             Facts(Host(), config.store.path, self._publisher.facts),
         )
         shelf = Shelf(config.calibration.folder, config.site, config.gateway)
@@ -155,10 +157,13 @@ class Daemon:
         store = config.store
         settings = JournalSettings(store.path, topics, store.keep_days, store.max_bytes, store.clock_wait)
         journal = Journal(settings, self._clock, self._busy)
-        for sensor in config.sensor:
-            self._intake.remember(sensor.name, _last_readings(journal, sensor.name, config.interval))
+        self._store = journal
         self._journal.attach(journal.reader())
         return journal
+
+    def _remember(self) -> None:
+        for sensor in self._config.sensor:
+            self._intake.remember(sensor.name, _last_readings(self._store, sensor.name, self._config.interval))
 
 
 def _last_readings(journal: Journal, sensor: str, interval_s: int) -> Iterator[ReadingDocument]:

@@ -16,6 +16,7 @@ from motekeep.health.finding import Finding, FindingEvent
 from motekeep.health.gateway import GatewayFacts, GatewayHealth
 from motekeep.health.sensor import SensorHealth
 from motekeep.instant import Instant
+from motekeep.measure.amendment import Amendment, Amendments
 from motekeep.measure.climate import FIXED
 from motekeep.measure.correction import compile_document
 from motekeep.measure.document import CalibrationDocument
@@ -70,6 +71,11 @@ def kept_name(sensor: str) -> str:
     return f"health/{sensor}"
 
 
+def amendments_name(sensor: str) -> str:
+    """The name under which a sensor's amendments are kept."""
+    return f"amendments/{sensor}"
+
+
 def dose_name(sensor: str) -> str:
     """The name under which a sensor's dose and laser hours are kept."""
     return f"dose/{sensor}"
@@ -99,6 +105,7 @@ class _Sensor:
     correction: Correction = uncorrected
     dose: Dose = field(default_factory=Dose)
     hourly: Hourly = field(default_factory=Hourly)
+    amendments: Amendments = field(default_factory=Amendments)
     asleep_since: float | None = None
     asleep_s: float = 0.0
 
@@ -148,13 +155,17 @@ class Pipeline:
             if dose := kept.get(dose_name(name)):
                 with suppress(ValueError):
                     sensor.dose = Dose.restored(dose)
+            if amendments := kept.get(amendments_name(name)):
+                with suppress(ValueError):
+                    sensor.amendments = Amendments.restored(amendments)
         if isinstance(memory := _recalled(kept.get(GATEWAY_KEPT)), list):
             self._gateway.restore([item for item in memory if isinstance(item, dict)], at)
 
     @property
     def kept_names(self) -> list[str]:
         """Every name that `Harvest.keep` may use."""
-        return [GATEWAY_KEPT, *map(kept_name, self._sensors), *map(dose_name, self._sensors)]
+        names = [name(sensor) for name in (kept_name, dose_name, amendments_name) for sensor in self._sensors]
+        return [GATEWAY_KEPT, *names]
 
     @property
     def sensors(self) -> list[str]:
@@ -230,11 +241,13 @@ class Pipeline:
         sensor.dose = sensor.dose.serviced(kind, done_utc, at.utc)
 
     def remember(self, name: str, stored: Iterable[ReadingDocument]) -> None:
-        """Earlier readings of the journal, for the hours that they are part of."""
-        hourly = self._sensors[name].hourly
+        """Earlier readings of the journal as they were published, for the hours that they are part of."""
+        sensor = self._sensors[name]
         for document in stored:
             if (sample := sample_of_document(document)) is not None:
-                hourly.add(sample)
+                sensor.hourly.add(sample)
+        for amendment in sensor.amendments:
+            sensor.hourly.amend(amendment.from_utc, amendment.to_utc, amendment.flag, amendment.reasons)
 
     def gateway(self, facts: GatewayFacts, at: Instant) -> None:
         """What is known of the gateway itself."""
@@ -321,6 +334,7 @@ class Pipeline:
             for code, (flag, since) in backdated.items():
                 if flag is not None:
                     begun = since - since % self._interval  # the reading that it began in is not sound either
+                    sensor.amendments.add(Amendment(begun, self._span.utc, flag, (code,)))
                     sensor.hourly.amend(begun, self._span.utc, flag, (code,))
                     self._amendments.append(amend_document(sensor.setup.name, begun, self._span.utc, {code: flag}))
 
@@ -350,7 +364,8 @@ class Pipeline:
     def _memories(self) -> dict[str, str]:
         sensors = {kept_name(name): json.dumps(sensor.health.dump()) for name, sensor in self._sensors.items()}
         doses = {dose_name(name): sensor.dose.state() for name, sensor in self._sensors.items()}
-        return {**sensors, **doses, GATEWAY_KEPT: json.dumps(self._gateway.dump())}
+        amendments = {amendments_name(name): sensor.amendments.state() for name, sensor in self._sensors.items()}
+        return {**sensors, **doses, **amendments, GATEWAY_KEPT: json.dumps(self._gateway.dump())}
 
     def finish(self, at: Instant) -> None:
         """Close the span that is under way, short as it is: the end of a capture or of the daemon."""

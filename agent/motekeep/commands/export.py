@@ -14,13 +14,15 @@ import click
 
 from motekeep.config import Config
 from motekeep.edges.journal_view import JournalView
-from motekeep.errors import ConfigError
+from motekeep.errors import ConfigError, StoreError
 from motekeep.instant import from_rfc3339
+from motekeep.measure.amendment import Amendments
 from motekeep.measure.closure import mass_from_counts
 from motekeep.measure.document import CHANNELS
 from motekeep.message import cf, senml
 from motekeep.message.compose import size_key
 from motekeep.message.documents import ReadingDocument, ValueDocument
+from motekeep.pipeline import amendments_name
 
 SIZES_UM = (0.3, 0.5, 1.0, 2.5, 4.0, 5.0, 10.0)  # of all dialects; a column stays empty where a sensor has no such size
 HEAD = ("site", "gateway", "sensor", "seq", "from_seq", "start", "seconds", "clock")
@@ -53,10 +55,25 @@ def _time(text: str, option: str) -> float:
 
 
 def _stored(view: JournalView, from_utc: float, to_utc: float, sensors: tuple[str, ...]) -> Iterator[ReadingDocument]:
+    """The readings with what was found out about them later."""
     wanted = set(sensors)
+    amendments = {s.sensor: _amendments(view, s.sensor) for s in view.sensors()}
     for reading in view.readings(from_utc, to_utc):
-        if not wanted or reading.sensor in wanted:
-            yield ReadingDocument.model_validate_json(reading.body)
+        if wanted and reading.sensor not in wanted:
+            continue
+        document = ReadingDocument.model_validate_json(reading.body)
+        reasons = tuple(document.reasons)
+        flag, amended = amendments[reading.sensor].amended(reading.start, document.flag, reasons)
+        if (flag, amended) != (document.flag, reasons):
+            document = document.model_copy(update={"flag": flag, "reasons": list(amended)})
+        yield document
+
+
+def _amendments(view: JournalView, sensor: str) -> Amendments:
+    try:
+        return Amendments.restored(view.kept(amendments_name(sensor)) or "[]")
+    except ValueError as error:
+        raise StoreError(f"reading the amendments of {sensor}", str(error), "keep the file for an expert") from error
 
 
 def _ndjson(stored: Iterable[ReadingDocument], file: IO[str]) -> None:

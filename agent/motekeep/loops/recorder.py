@@ -57,7 +57,8 @@ class RecorderSettings:
 class Recorder:
     """`turn` once a second; at the end `finish`, then `close` when nobody marks rows any more.
 
-    `opener` gives the journal, or raises StoreError.
+    `opener` gives the journal, or raises StoreError. `remember` reads earlier readings again, for the hours that they
+    are part of, as soon as the clock can be trusted and they have got their times.
     """
 
     def __init__(
@@ -66,6 +67,7 @@ class Recorder:
         intake: Intake,
         opener: Callable[[], JournalWriter],
         outlet: Outlet,
+        remember: Callable[[], None],
         facts: Callable[[StoreState, Instant], tuple[GatewayFacts, LinkHealth]],
     ) -> None:
         self._settings = settings
@@ -77,6 +79,7 @@ class Recorder:
         self._trouble = Backoff(log, "journal")
         self._why_closed = ""
         self._outlet = outlet
+        self._remember = remember
         self._facts = facts
         self._facts_at = self._health_at = self._kept_at = float("-inf")
         self._ending = False
@@ -141,6 +144,7 @@ class Recorder:
             return
         if at.trusted and not self._vouched:
             self._journal.restamp(at)
+            self._remember()
             self._outlet.wake()
         self._vouched = at.trusted
         if harvest:
