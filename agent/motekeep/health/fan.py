@@ -57,7 +57,8 @@ class FanStopped(Check):
     2. Order. No larger channel with pulses enough has clearly kept more than a tenth: the false counts that may hold up
        the smallest are not in it. Smoke that ends takes the small particles and leaves the large ones; gusty smoke
        that thins takes all, but not so deep. Where pulses are few this tells little: hours of smoke over a clean site
-       (under some 300 /dL) that end within a minute can be taken for a stop, until five minutes of pulses deny it.
+       (under some 300 /dL) that end within a minute can be taken for a stop, until five minutes of pulses deny it;
+       mass alone knows no order and can be fooled so at any level, which its low confidence says.
     3. Number. The pulses missing are too many for chance, also if the air had fallen to 0.6 of that lowest level.
        How much of a printed number one pulse is comes from the scatter of the unit's own two-minute means before, and
        while there are few of them from the worst that firmware does (one second of air of which half is looked at).
