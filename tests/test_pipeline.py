@@ -120,9 +120,19 @@ def test_a_suspended_gateway_leaves_intervals_absent_and_goes_on_aligned() -> No
     pipeline.receive("north", data(1), at(1))
     pipeline.receive("north", data(2), at(86_400 + 30.0))
     pipeline.advance(at(86_400 + 60.0))
-    first, last = readings(pipeline)
+    first, *empty, last = readings(pipeline)
     assert first.start == "2026-12-01T12:00:00Z"
+    assert [r.reasons for r in empty] == [["no-frames"]] * 9
     assert (last.start, last.seconds) == ("2026-12-02T12:00:30Z", 30)
+
+
+def test_a_silence_in_a_capture_is_found_from_within_it() -> None:
+    pipeline = started()
+    for second in range(1, 301):
+        pipeline.receive("north", data(second), at(second))
+    pipeline.receive("north", data(301), at(1500))
+    [found] = [f for f in pipeline.harvest().findings if f.code == "frames-missing" and f.event == "opened"]
+    assert from_rfc3339(found.at) < NOON + 300 + 180
 
 
 def test_before_the_numbering_is_known_no_reading_is_made_but_health_is_judged() -> None:

@@ -32,7 +32,7 @@ from motekeep.wire.frame import Damage, Decoder, Dialect, Observation
 
 STEP_S = 1.0  # a jump of the wall clock beyond this is a step; time services slew smaller ones
 JUDGE_EVERY_S = 5.0  # fine enough for findings due within three minutes, coarse enough to cost nothing
-SKIP_SPANS = 10  # a longer hole (suspend, a gap in a capture) leaves intervals absent instead of empty
+SKIP_SPANS = 10  # of a longer hole (suspend, a gap in a capture) only so many intervals are empty, the rest is absent
 
 
 @dataclass(frozen=True, slots=True)
@@ -127,6 +127,7 @@ class Pipeline:
         self._gateway = GatewayHealth()
         self._begin(at)
         self._next_judge = at.boot_s + JUDGE_EVERY_S
+        self._empty_spans = 0  # closed since the clock was last told of in time
         self._readings: list[ReadingDocument] = []
         self._events: list[FindingEvent] = []
         self._amendments: list[AmendDocument] = []
@@ -261,6 +262,8 @@ class Pipeline:
         if abs(at.offset - self._span.offset) > STEP_S and at.boot_s >= self._span.boot_s:
             self._close(at.boot_s)
             self._begin(at)
+        if at.boot_s < self._end:
+            self._empty_spans = 0
         while min(self._next_judge, self._end) <= at.boot_s:
             if self._next_judge <= self._end:
                 moment = self._moment(self._next_judge, at)
@@ -268,7 +271,8 @@ class Pipeline:
                 self._judge(moment)
             else:
                 self._close(self._end)
-                skipped = at.boot_s - self._end > SKIP_SPANS * self._interval
+                self._empty_spans += 1
+                skipped = self._empty_spans >= SKIP_SPANS and at.boot_s - self._end > self._interval
                 self._begin(at if skipped else self._moment(self._end, at))
                 if skipped:
                     self._skip(at)

@@ -123,9 +123,9 @@ class Reader:
         found = self._query(SELECT, (low, high, sensor, limit))
         if len(found) < limit and (not found or found[-1][0] != high):
             found += [row for row in self._query(COVERING, (high, sensor)) if row[1] <= high]
-        rows = []
+        rows, name_of = [], self._boots.name_of
         for seq, from_seq, boot, boot_s, seconds, clock, body, crc in found:
-            row = Row(sensor, seq, from_seq, self._boots.name_of(boot), boot_s, seconds, clock, body)
+            row = Row(sensor, seq, from_seq, name_of(boot), boot_s, seconds, clock, body)
             if digest(sensor, seq, from_seq, clock, body) == crc:
                 rows.append(row)
                 continue

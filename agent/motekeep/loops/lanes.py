@@ -100,6 +100,8 @@ class Lane:
     def pick(self, page: Sequence[Row], most: int, room: int, ready: Callable[[Row], bool]) -> Pick:
         """The next late batch out of `page` (rows past `late_after`, oldest first): at most `most` rows and `room`
         bytes of document, none that is not `ready`, nor any after such a one. Moves `late_after` past what it saw."""
+        if whole := self._whole(page, most, room, ready):
+            return whole
         batch: list[Row] = []
         too_large: list[Row] = []
         struck: Row | None = None
@@ -127,6 +129,18 @@ class Lane:
         if not batch and struck is not None and not self.flying:
             batch.append(struck)  # nothing else is there to try the topic with
         return Pick(batch, too_large)
+
+    def _whole(self, page: Sequence[Row], most: int, room: int, ready: Callable[[Row], bool]) -> Pick | None:
+        """All of `page`, as nearly always: nothing of it is suspect, on its way or too young, and it fits. None
+        otherwise. The same pick as by looking at each row, for a third of the time."""
+        if self.strikes or self.alone or self.late.probing or not 0 < len(page) <= most:
+            return None
+        if not self.flying.isdisjoint([row.seq for row in page]) or not all(map(ready, page)):
+            return None
+        if EMPTY + len(page) - 1 + sum([size(row.body) for row in page]) > room:
+            return None
+        self.late_after = page[-1].seq
+        return Pick(list(page), [])
 
     def pick_again(self, page: Sequence[Row], room: int) -> tuple[Sequence[Row], int]:
         """The next message of a resend request out of `page`, and the sequence number to go on from. Rows that cannot
