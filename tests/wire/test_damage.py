@@ -103,7 +103,7 @@ def test_bytes_cut_out_of_one_frame_cost_no_other_frame(name: str, random: Rando
     end = data.draw(st.integers(begin + 1, len(units[HIT])))
     heard, damage = hear(dialect, [*units[:HIT], units[HIT][:begin] + units[HIT][end:], *units[HIT + 1 :]], random)
     whole = [*units[:HIT], *units[HIT + 1 :]]
-    # Nothing at all is lost when what was cut is made up by a neighbour: a shared flag, or a sum that ends like a start.
+    # Nothing at all is lost when a neighbour makes up what was cut: a shared flag, or a sum that ends like a start.
     assert heard in (whole, units)
     assert heard == whole or name == "stuffed" or (begin, end) == (0, 1)
     assert len(damage) <= 1
