@@ -26,7 +26,7 @@ DESERT = np.array([1_408, 850.5, 389.0, 121.3, 50.24, 23.37])
 SMOKE = np.array([76_400, 12_100, 191.3, 0.0349, 0.0, 0.0])  # aged, Reid et al. 2005, from memory
 DROPLETS = np.array([1.0, 1.0, 0.99, 0.70, 0.17, 0.008])  # fog: lognormal around 3.2 um; our own invention
 
-# Fall speed in m/s at the channels' middle sizes (Stokes with slip, METHODS), and the height of a cell.
+# Fall speed in m/s at the channels' middle sizes (Stokes with slip), and the height of a cell.
 FALL_M_S = np.array([6.8e-6, 1.9e-5, 9e-5, 4e-4, 1.6e-3, 6e-3])
 CELL_M = 0.01
 # Mass per count per 0.1 L between sizes: geometric mean diameters, 1.65 g/cm3, the open last channel left out.

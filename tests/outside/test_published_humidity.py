@@ -65,7 +65,7 @@ rh_term = { value = -0.0862, u = 0.01 }
     assert got.values[1].value == pytest.approx(17.160, abs=1e-3)
 
 
-# METHODS of this project, section 0, computed from Crilley's form at kappa 0.4: what 3 % of RH do to the factor.
+# Computed from Crilley's form at kappa 0.4: what 3 % of RH do to the factor.
 @pytest.mark.parametrize(("rh", "below", "above"), [(50.0, -2.0, 2.5), (85.0, -11.0, 17.0), (90.0, -18.0, 33.0)])
 def test_why_humidity_has_to_be_held(rh: float, below: float, above: float) -> None:
     at = mass_factor(0.4, rh)

@@ -18,7 +18,7 @@ ACL = Path(__file__).parents[2] / "systemd/mosquitto-acl.example"
 OURS = "motekeep/quarry/east-gate"
 OTHERS = "motekeep/quarry/west-gate"
 
-# DESIGN section 8: what the device writes, what comes to it, what does both.
+# The topic tree: what the device writes, what comes to it, what does both.
 MADE = ["reading/north", "late/north", "amend/north", "hourly/north", "health", "finding", "calibration/north/state"]
 MEANT = ["calibration/north/offer", "resend", "taken/north"]
 BOTH = ["service"]

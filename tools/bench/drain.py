@@ -54,7 +54,7 @@ class Run:
 
 
 def body_of(sensor: str, seq: int, start: float, boot_id: str) -> str:
-    """A reading document of ordinary size; the shape is DESIGN's, the numbers are made up."""
+    """A reading document of ordinary size; the shape is that of the schema, the numbers are made up."""
     document = {
         "schema": "motekeep/reading/1",
         "site": "quarry",

@@ -17,7 +17,7 @@ from dataclasses import dataclass, field
 
 from motekeep.edges.ports import Row
 
-LATE_MOST = 100  # DESIGN section 8: readings in one late message
+LATE_MOST = 100  # readings in one late message, as the schema of `late` says
 HOLD_FIRST_S, HOLD_CAP_S = 1.0, 300.0
 STRIKES = 3
 SUSPECTS = 4

@@ -88,7 +88,7 @@ def nowcast(newest_first: Sequence[float | None]) -> float | None:
 
     Weight w = max(1 - range / maximum, 1/2); sum of w^age c over sum of w^age, age 0 for the newest; a missing hour is
     left out of both sums while the others keep their age. None without two of the three newest hours. Hours below zero
-    count as zero first, else a single one would set the weight (METHODS leave them open: derived here).
+    count as zero first, else a single one would set the weight (the published method leaves them open: derived here).
     US EPA NowCast fact sheet.
     """
     hours = [(age, max(c, 0.0)) for age, c in enumerate(newest_first[:NOWCAST_HOURS]) if c is not None]

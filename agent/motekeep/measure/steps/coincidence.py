@@ -10,7 +10,7 @@ never taken, since the count alone cannot tell, and no number is given at or abo
 What it does to mass: the firmware makes its mass from the pulses that it saw, so the share of particles that is lost is
 taken to be the share of mass that is lost, and each mass is multiplied by N / N_observed of the smallest count channel,
 which holds all the particles that are seen. Two small particles that are read as one larger one move mass up instead
-of losing it (METHODS of counters call it oversizing); that is not undone here, so the factor is rather too large than
+of losing it (counter practice calls it oversizing); that is not undone here, so the factor is rather too large than
 too small. The counts of the reading stay as the sensor gave them.
 
 Valid below 10 % loss, N V = 0.10536 (ISO 21501-4:2007, 3.6, maximum concentration); above that the figure is suspect.
