@@ -139,7 +139,9 @@ class Site:
         )
 
     def say(self, text: str) -> None:
-        print(f"{time.monotonic() - self.began:5.0f} s  {text}", flush=True)
+        # one write a line: the subscriber's thread says its lines as well
+        sys.stdout.write(f"{time.monotonic() - self.began:5.0f} s  {text}\n")
+        sys.stdout.flush()
 
     def wait(self, what: Callable[[Seen], bool], seconds: float) -> bool:
         """Wait until `what` is true of what was seen, at most so long."""
