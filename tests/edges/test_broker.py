@@ -16,8 +16,8 @@ from hypothesis import strategies as st
 from mosquitto import Certificates, free_port
 from motekeep.edges.broker import MqttBroker, reconnect_delay
 from motekeep.edges.clock import SystemClock
-from motekeep.edges.connection import DOWN_BYTES, INLET_BYTES, Inlet
-from motekeep.edges.login import BrokerSettings, Tls, read_password, tls_context
+from motekeep.edges.connection import Inlet
+from motekeep.edges.login import DOWN_BYTES, INLET_BYTES, BrokerSettings, Tls, read_password, tls_context
 from motekeep.edges.ports import Acknowledged, BrokerEvent, Disconnected, Received, SubscriptionRefused
 from motekeep.errors import BrokerError
 
@@ -231,7 +231,7 @@ def test_nothing_is_published_nor_queued_without_a_connection() -> None:
 
 
 def test_a_flood_from_above_is_bounded_and_answers_still_come_through() -> None:
-    inlet = Inlet()
+    inlet = Inlet(INLET_BYTES)
     for _ in range(100):
         inlet.put(Received("t", b"x" * (DOWN_BYTES // 2)))
     inlet.put(Acknowledged(1, None, 0))
@@ -246,7 +246,7 @@ def test_a_flood_from_above_is_bounded_and_answers_still_come_through() -> None:
 
 
 def test_many_wakes_are_one_and_a_wake_ends_a_wait() -> None:
-    inlet = Inlet()
+    inlet = Inlet(INLET_BYTES)
     for _ in range(1000):
         inlet.wake()
     began = time.monotonic()

@@ -8,7 +8,7 @@ import hashlib
 
 import structlog
 
-from motekeep.edges.connection import INLET_BYTES, Connection, Inlet
+from motekeep.edges.connection import Connection, Inlet
 from motekeep.edges.login import BrokerSettings
 from motekeep.edges.ports import BrokerEvent, Clock, Disconnected
 from motekeep.errors import BrokerError
@@ -39,7 +39,7 @@ class MqttBroker:
     def __init__(self, settings: BrokerSettings, clock: Clock) -> None:
         self._settings = settings
         self._clock = clock
-        self._inlet = Inlet()
+        self._inlet = Inlet(settings.inlet_bytes)
         self._connection: Connection | None = None
         self._strays: list[Connection] = []
         self._number = 0
@@ -70,7 +70,7 @@ class MqttBroker:
         event = self._inlet.take(timeout_s)
         if self._inlet.lost > 2 * self._lost_down:  # the flood must not fill the log as well
             self._lost_down = self._inlet.lost
-            log.warning("link.flooded", dropped=self._lost_down, limit_bytes=INLET_BYTES)
+            log.warning("link.flooded", dropped=self._lost_down, limit_bytes=self._settings.inlet_bytes)
         return event
 
     def wake(self) -> None:

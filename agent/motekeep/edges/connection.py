@@ -26,7 +26,7 @@ from paho.mqtt.properties import Properties
 from paho.mqtt.reasoncodes import ReasonCode
 from paho.mqtt.subscribeoptions import SubscribeOptions
 
-from motekeep.edges.login import BrokerSettings, read_password, tls_context
+from motekeep.edges.login import DOWN_BYTES, BrokerSettings, read_password, tls_context
 from motekeep.edges.ports import (
     Acknowledged,
     BrokerEvent,
@@ -40,11 +40,6 @@ from motekeep.errors import BrokerError
 
 log = structlog.get_logger()
 
-# The largest message that is taken from above: a calibration document of 64 KiB, escaped as JSON, with its signature.
-DOWN_BYTES = 256 * 1024
-# What may lie here unread. A gateway expects a handful of retained documents at once; a flood beyond that is dropped
-# and counted, and retained messages come again with the next connection.
-INLET_BYTES = 4 * DOWN_BYTES
 NO_LIMIT = 65_535  # MQTT 5 section 3.2.2.3.3: what an absent Receive Maximum means
 
 P = ParamSpec("P")
@@ -53,10 +48,11 @@ P = ParamSpec("P")
 class Inlet:
     """Events on their way from the network thread to the publisher's.
 
-    Acknowledgements are bounded by the publisher's window, the rest by INLET_BYTES.
+    Acknowledgements are bounded by the publisher's window, the rest by `limit_bytes`.
     """
 
-    def __init__(self) -> None:
+    def __init__(self, limit_bytes: int) -> None:
+        self._limit_bytes = limit_bytes
         self._queue: SimpleQueue[BrokerEvent | None] = SimpleQueue()
         self._bytes_in = 0  # written by the network thread only
         self._bytes_out = 0  # written by the publisher's only
@@ -66,7 +62,7 @@ class Inlet:
     def put(self, event: BrokerEvent) -> None:
         if isinstance(event, Received):
             size = len(event.topic) + len(event.payload)
-            if self._bytes_in - self._bytes_out + size > INLET_BYTES:
+            if self._bytes_in - self._bytes_out + size > self._limit_bytes:
                 self.lost += 1
                 return
             self._bytes_in += size
@@ -122,7 +118,7 @@ class Connection:
             settings.host,
             settings.port,
             keepalive=settings.keepalive_s,
-            clean_start=False,
+            clean_start=settings.will is None,
             properties=self._connect_properties(),
         )
         self._client.loop_start()  # never an own thread around loop_forever: then two threads would write the socket
@@ -199,8 +195,9 @@ class Connection:
             client.username_pw_set(settings.username, read_password(settings.password_file))
         if settings.tls is not None:
             client.tls_set_context(tls_context(settings.tls))
-        will = _properties(PacketTypes.WILLMESSAGE, WillDelayInterval=settings.will_delay_s)
-        client.will_set(*settings.will, qos=1, retain=True, properties=will)
+        if settings.will is not None:
+            will = _properties(PacketTypes.WILLMESSAGE, WillDelayInterval=settings.will_delay_s)
+            client.will_set(*settings.will, qos=1, retain=True, properties=will)
         client.on_log = _safely(self._logged)
         client.on_socket_open = _safely(self._opened)
         client.on_connect = _safely(self._connected)
@@ -214,7 +211,7 @@ class Connection:
     def _connect_properties(self) -> Properties:
         """The session outlives the link only for this: a broker sends the will when its session ends, so a link that is
         back within the delay causes no `offline`. Nothing else is kept in it; rows are sent again from the journal."""
-        expiry_s = self._settings.will_delay_s + 30
+        expiry_s = 0 if self._settings.will is None else self._settings.will_delay_s + 30
         return _properties(PacketTypes.CONNECT, SessionExpiryInterval=expiry_s, MaximumPacketSize=DOWN_BYTES)
 
     # -- callbacks ----------------------------------------------------------------------------------------------
@@ -225,7 +222,8 @@ class Connection:
             return
         sock.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
         # Unacknowledged bytes end the connection as soon as paho's keepalive ends an idle one (tcp(7)).
-        sock.setsockopt(socket.IPPROTO_TCP, socket.TCP_USER_TIMEOUT, 2000 * self._settings.keepalive_s)
+        if hasattr(socket, "TCP_USER_TIMEOUT"):  # Linux; this file also serves the operator's workstation
+            sock.setsockopt(socket.IPPROTO_TCP, socket.TCP_USER_TIMEOUT, 2000 * self._settings.keepalive_s)
 
     def _logged(self, _client: mqtt.Client, _userdata: Any, level: int, text: str) -> None:
         if level == mqtt.MQTT_LOG_ERR:
@@ -243,7 +241,7 @@ class Connection:
             self.tell(_refused_connection(reason), refused=True)
             return
         if self._settings.filters:
-            options = SubscribeOptions(qos=1)
+            options = SubscribeOptions(qos=self._settings.filter_qos)
             _, mid = client.subscribe([(name, options) for name in self._settings.filters])
             if mid is not None:
                 self._subscribed[mid] = self._settings.filters

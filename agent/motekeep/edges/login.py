@@ -10,6 +10,12 @@ from pathlib import Path
 
 from motekeep.errors import BrokerError
 
+# The largest message that is taken from above: a calibration document of 64 KiB, escaped as JSON, with its signature.
+DOWN_BYTES = 256 * 1024
+# What may lie here unread. A gateway expects a handful of retained documents at once; a flood beyond that is dropped
+# and counted, and retained messages come again with the next connection.
+INLET_BYTES = 4 * DOWN_BYTES
+
 PASSWORD_BYTES = 4096  # more is not a password but the wrong file
 
 
@@ -26,6 +32,10 @@ class Tls:
 class BrokerSettings:
     """`will` and what is given to `stop` are (topic, body), retained. `filters` are subscribed at each connection.
 
+    Without a will nothing outlives a link. With `filter_qos` 0 retained messages come past the queue that a broker
+    keeps for each client (mosquitto: 1,000 messages, the rest is dropped), which who listens to a fleet needs.
+    `inlet_bytes` is how much may have come in and lie unread.
+
     A broken link is forgiven for `will_delay_s` before the will is sent. A link that held for `steady_s` starts the
     backoff, which runs from the first to the second of `backoff_s`, from its beginning again.
     """
@@ -33,8 +43,10 @@ class BrokerSettings:
     host: str
     port: int
     client_id: str
-    will: tuple[str, str]
+    will: tuple[str, str] | None = None
     filters: tuple[str, ...] = ()
+    filter_qos: int = 1
+    inlet_bytes: int = INLET_BYTES
     username: str | None = None
     password_file: Path | None = None
     tls: Tls | None = None
