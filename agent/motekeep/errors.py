@@ -49,6 +49,10 @@ class ClimateError(MotekeepError):
     retry = True
 
 
+class ServiceError(MotekeepError):
+    """A service record cannot be used."""
+
+
 class CaptureError(MotekeepError):
     """A capture file has a line that is not of the capture format."""
 
@@ -59,3 +63,17 @@ class DocumentError(MotekeepError):
     def __init__(self, path: str, why: str, mend: str) -> None:
         self.path = path
         super().__init__(f"calibration document, {path}", why, mend)
+
+
+class OfferRefusedError(MotekeepError):
+    """A calibration document is refused. `reason` is its name on the state topic; nothing has changed."""
+
+    def __init__(self, reason: str, why: str, mend: str) -> None:
+        self.reason = reason
+        super().__init__(f"calibration refused, {reason}", why, mend)
+
+
+class SignersError(MotekeepError):
+    """A signature could not be looked at: no ssh-keygen, no time, no memory. Says nothing about the signature."""
+
+    retry = True
