@@ -29,6 +29,12 @@ class Topics:
     def taken(self, sensor: str) -> str:
         return self._of("taken", sensor)
 
+    def calibration_offer(self, sensor: str) -> str:
+        return self._of("calibration", sensor, "offer")
+
+    def calibration_state(self, sensor: str) -> str:
+        return self._of("calibration", sensor, "state")
+
     @property
     def health(self) -> str:
         return self._of("health")
@@ -36,6 +42,10 @@ class Topics:
     @property
     def finding(self) -> str:
         return self._of("finding")
+
+    @property
+    def service(self) -> str:
+        return self._of("service")
 
     @property
     def resend(self) -> str:
