@@ -24,6 +24,7 @@ from motekeep.edges.journal import Journal, JournalSettings
 from motekeep.edges.login import BrokerSettings, Tls
 from motekeep.edges.ports import Clock, JournalWriter, Line
 from motekeep.edges.serial_line import open_line
+from motekeep.edges.service_spool import ServiceSpool
 from motekeep.edges.shelf import Shelf
 from motekeep.edges.systemd import ServiceManager, secret_file
 from motekeep.errors import ConfigError
@@ -39,6 +40,7 @@ from motekeep.loops.publisher import Publisher, PublisherSettings
 from motekeep.loops.reader import Reader, ReaderSettings
 from motekeep.loops.recorder import Recorder, RecorderSettings
 from motekeep.loops.rows import RowSettings
+from motekeep.loops.service import ServiceFeed, ServiceFeedSettings
 from motekeep.loops.supervisor import Hand, Supervisor
 from motekeep.measure.climate import FIXED, from_message
 from motekeep.measure.hourly import HOUR_S, WINDOW_HOURS
@@ -130,6 +132,8 @@ class Daemon:
         )
         shelf = Shelf(config.calibration.folder, config.site, config.gateway)
         self._calibration = CalibrationFeed(shelf, names, intake)
+        spool = ServiceSpool(config.store.path)
+        self._service = ServiceFeed(ServiceFeedSettings(place, names), spool, intake, self._recorder.has_service)
         self._climate = _climate_feed(config, intake, now)
         self._housekeeping = Housekeeping({"prune": (PRUNE_EVERY_S, self._recorder.prune_soon)})
         readers = [Hand(f"reader-{s.name}", _reader(s, intake, clock, stop)) for s in config.sensor]
@@ -146,6 +150,7 @@ class Daemon:
     def _turn(self, at: Instant) -> None:
         self._climate.turn(at)
         self._calibration.turn(at)
+        self._service.turn(at)
         self._housekeeping.watch(at)
         self._recorder.turn(at)
 

@@ -94,6 +94,41 @@ def status(config_path: Path, as_json: bool) -> None:
     sys.exit(0 if run_status(load(config_path), as_json) else 1)
 
 
+@main.group()
+def service() -> None:
+    """What people did at the sensors: enter it, look it up."""
+
+
+@service.command("add")
+@with_config
+@click.option("--at", "done_at", help="When it was done, RFC 3339, like 2026-12-01T09:15:00Z; without it: now.")
+@click.option("--note", default="", help="A line for whoever reads the record later.")
+@click.argument("sensor")
+@click.argument("kind")
+def service_add(config_path: Path, done_at: str | None, note: str, sensor: str, kind: str) -> None:
+    """Enter what was done at SENSOR. KIND: cleaned, fan-replaced, unit-replaced, moved or note.
+
+    The running daemon takes it up within seconds; without one it waits. Readings from ten minutes before it to twenty
+    after it (of a note: none) are marked as made with somebody at the case.
+    """
+    from motekeep.commands.service import add  # noqa: PLC0415
+    from motekeep.config import load  # noqa: PLC0415
+
+    add(load(config_path), config_path, sensor, kind, (done_at, note))
+
+
+@service.command("list")
+@with_config
+@click.option("--sensor", help="Only of this sensor.")
+@click.option("--json", "as_json", is_flag=True, help="One JSON document a line, as published.")
+def service_list(config_path: Path, sensor: str | None, as_json: bool) -> None:
+    """The service records, those that wait for the daemon at the end."""
+    from motekeep.commands.service import show  # noqa: PLC0415
+    from motekeep.config import load  # noqa: PLC0415
+
+    show(load(config_path), config_path, sensor, as_json)
+
+
 @main.command()
 @with_config
 @click.option("--seconds", type=float, required=True, help="How long to record.")

@@ -15,7 +15,7 @@ from motekeep.health.check import LineState
 from motekeep.health.finding import Finding, FindingEvent
 from motekeep.health.gateway import GatewayFacts, GatewayHealth
 from motekeep.health.sensor import SensorHealth
-from motekeep.instant import Instant
+from motekeep.instant import Instant, from_rfc3339
 from motekeep.measure.amendment import Amendment, Amendments
 from motekeep.measure.climate import FIXED
 from motekeep.measure.correction import compile_document
@@ -25,7 +25,13 @@ from motekeep.measure.hourly import Hourly, sample_of
 from motekeep.measure.interval import Accumulator, Cadence, Climate, frame_climate
 from motekeep.measure.reading import Correction, make_reading, refused, uncorrected
 from motekeep.message.compose import Place, amend_document, finding_document, reading_document
-from motekeep.message.documents import AmendDocument, FindingDocument, HourlyDocument, ReadingDocument
+from motekeep.message.documents import (
+    AmendDocument,
+    FindingDocument,
+    HourlyDocument,
+    ReadingDocument,
+    ServiceDocument,
+)
 from motekeep.message.health import SensorAccount
 from motekeep.message.hourly import hourly_document, sample_of_document
 from motekeep.wire.frame import Damage, Decoder, Dialect, Observation
@@ -51,16 +57,19 @@ class SensorSetup:
 
 @dataclass(frozen=True, slots=True)
 class Harvest:
-    """Everything finished since the last harvest, in order, and what changed of the state to keep."""
+    """Everything finished since the last harvest, in order, and what changed of the state to keep: `keep` changes all
+    the time and may be left out now and then, `notes` are given once an hour and must not be."""
 
     readings: tuple[ReadingDocument, ...] = ()
     hours: tuple[HourlyDocument, ...] = ()
     findings: tuple[FindingDocument, ...] = ()
     amendments: tuple[AmendDocument, ...] = ()
+    services: tuple[ServiceDocument, ...] = ()
     keep: Mapping[str, str] = field(default_factory=dict)
+    notes: Mapping[str, str] = field(default_factory=dict)
 
     def __bool__(self) -> bool:
-        return bool(self.readings or self.findings or self.amendments)
+        return bool(self.readings or self.findings or self.amendments or self.services)
 
 
 GATEWAY_KEPT = "health"
@@ -69,6 +78,11 @@ GATEWAY_KEPT = "health"
 def kept_name(sensor: str) -> str:
     """The name under which a sensor's health memory is kept between lives."""
     return f"health/{sensor}"
+
+
+def notes_name(sensor: str) -> str:
+    """The name under which what was learnt of a sensor is kept."""
+    return f"learnt/{sensor}"
 
 
 def amendments_name(sensor: str) -> str:
@@ -131,6 +145,7 @@ class Pipeline:
         self._readings: list[ReadingDocument] = []
         self._events: list[FindingEvent] = []
         self._amendments: list[AmendDocument] = []
+        self._services: list[ServiceDocument] = []
 
     @staticmethod
     def _sensor(setup: SensorSetup, at: Instant) -> _Sensor:
@@ -153,6 +168,8 @@ class Pipeline:
             sensor.seq = seqs[name]
             if isinstance(memory := _recalled(kept.get(kept_name(name))), dict):
                 sensor.health.restore(memory, at)
+            if isinstance(notes := _recalled(kept.get(notes_name(name))), dict):
+                sensor.health.restore_notes(notes, at)
             if dose := kept.get(dose_name(name)):
                 with suppress(ValueError):
                     sensor.dose = Dose.restored(dose)
@@ -165,7 +182,8 @@ class Pipeline:
     @property
     def kept_names(self) -> list[str]:
         """Every name that `Harvest.keep` may use."""
-        names = [name(sensor) for name in (kept_name, dose_name, amendments_name) for sensor in self._sensors]
+        kinds = (kept_name, notes_name, dose_name, amendments_name)
+        names = [name(sensor) for name in kinds for sensor in self._sensors]
         return [GATEWAY_KEPT, *names]
 
     @property
@@ -240,6 +258,12 @@ class Pipeline:
         self.advance(at)
         sensor = self._sensors[name]
         sensor.dose = sensor.dose.serviced(kind, done_utc, at.utc)
+        sensor.health.service(kind, done_utc, at)
+
+    def record_service(self, record: ServiceDocument, at: Instant) -> None:
+        """A service record to be kept and published: it leaves with the next harvest, together with what it changed."""
+        self.service(record.sensor, ServiceKind(record.kind), from_rfc3339(record.at), at)
+        self._services.append(record)
 
     def remember(self, name: str, stored: Iterable[ReadingDocument]) -> None:
         """Earlier readings of the journal as they were published, for the hours that they are part of."""
@@ -305,6 +329,8 @@ class Pipeline:
             sensor.accumulator = Accumulator()
             sensor.asleep_s = 0.0
             sensor.health.interval(interval)
+            if sensor.twin_health is not None:
+                sensor.twin_health.twin_interval(interval, sound=sensor.health.sound)
             if seconds < 1.0 or sensor.seq is None:
                 continue  # a sliver before a clock step holds no figure
             flags = sensor.health.flags_between(span.boot_s, end_s)
@@ -330,27 +356,34 @@ class Pipeline:
         for sensor in self._sensors.values():
             events = sensor.health.judge(at)
             self._events += events
-            backdated = {
-                e.finding.code: (e.finding.flag, e.finding.since)
-                for e in events
-                if e.opened and e.finding.flag is not None and e.finding.since < self._span.utc
-            }
-            for code, (flag, since) in backdated.items():
-                if flag is not None:
-                    begun = since - since % self._interval  # the reading that it began in is not sound either
-                    sensor.amendments.add(Amendment(begun, self._span.utc, flag, (code,)))
-                    sensor.hourly.amend(begun, self._span.utc, flag, (code,))
-                    self._amendments.append(amend_document(sensor.setup.name, begun, self._span.utc, {code: flag}))
+            for event in events:
+                if event.opened and event.finding.flag is not None:
+                    self._backdate(sensor, event, event.finding.flag)
+
+    def _backdate(self, sensor: _Sensor, event: FindingEvent, flag: int) -> None:
+        """Readings of earlier spans in which a finding that has just opened held already get its flag."""
+        code, since = event.finding.code, event.finding.since
+        begun = since - since % self._interval  # the reading that it began in is not sound either
+        ended = self._span.utc
+        if event.until is not None:
+            ended = min(ended, event.until + -event.until % self._interval)
+        if begun >= ended:
+            return
+        sensor.amendments.add(Amendment(begun, ended, flag, (code,)))
+        sensor.hourly.amend(begun, ended, flag, (code,))
+        self._amendments.append(amend_document(sensor.setup.name, begun, ended, {code: flag}))
 
     # -- what goes out ------------------------------------------------------------------------------------------
 
     def harvest(self) -> Harvest:
         """Everything finished since the last harvest."""
         readings, findings = tuple(self._readings), tuple([finding_document(e) for e in self._events])
-        keep = self._memories() if readings or findings else {}
+        services = tuple(self._services)
+        keep = self._memories() if readings or findings or services else {}
+        notes = self._notes() if readings or services else {}
         hours = self._hours() if readings or self._amendments else ()
-        harvest = Harvest(readings, hours, findings, tuple(self._amendments), keep)
-        self._readings, self._events, self._amendments = [], [], []
+        harvest = Harvest(readings, hours, findings, tuple(self._amendments), services, keep, notes)
+        self._readings, self._events, self._amendments, self._services = [], [], [], []
         return harvest
 
     def _hours(self) -> tuple[HourlyDocument, ...]:
@@ -370,6 +403,13 @@ class Pipeline:
         doses = {dose_name(name): sensor.dose.state() for name, sensor in self._sensors.items()}
         amendments = {amendments_name(name): sensor.amendments.state() for name, sensor in self._sensors.items()}
         return {**sensors, **doses, **amendments, GATEWAY_KEPT: json.dumps(self._gateway.dump())}
+
+    def _notes(self) -> dict[str, str]:
+        return {
+            notes_name(name): json.dumps(notes)
+            for name, sensor in self._sensors.items()
+            if (notes := sensor.health.notes()) is not None
+        }
 
     def finish(self, at: Instant) -> None:
         """Close the span that is under way, short as it is: the end of a capture or of the daemon."""

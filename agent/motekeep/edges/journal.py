@@ -36,7 +36,7 @@ from motekeep.edges.journal_schema import (
     transaction,
 )
 from motekeep.edges.journal_shapes import Changes, Held
-from motekeep.edges.ports import Batch, Clock, NewReading, Notice, StoreState
+from motekeep.edges.ports import Batch, Clock, NewReading, NewService, Notice, StoreState
 from motekeep.errors import StoreError, StoreFullError
 from motekeep.instant import Instant
 from motekeep.message.topics import Topics
@@ -47,6 +47,8 @@ log = structlog.get_logger()
 MAX_NOTICES = 5000
 # What was held back is stored in transactions of this size, or an eighth of a small journal: each has to find room.
 HELD_BYTES = 1 << 18
+# Service records: a visit a day for 25 years. Only a script that went wrong gets there; then the oldest go.
+MAX_SERVICES = 10_000
 PRUNE_BATCHES = 10
 # With less than this left on the disk and half of the ballast given, the file stops growing and its log is emptied at
 # every commit: within the room that they have, both go on beside others that keep the disk full. The other half of the
@@ -112,12 +114,17 @@ class Journal:
         row = self._one("SELECT value FROM kept WHERE name = ?", (name,))
         return None if row is None else str(row[0])
 
+    def has_service(self, id_: str) -> bool:
+        """Whether this service record is in the file; False also while that cannot be read."""
+        return self._one("SELECT 1 FROM services WHERE id = ?", (id_,)) is not None
+
     def commit(self, batch: Batch, at: Instant) -> None:
         """Durable when this returns, or held in memory when the store cannot take it. Raises ValueError for a number
         out of turn, which is a bug of the caller; never for the store."""
         self._ledger.expect(batch.readings)
         self._ledger.keep(batch.keep)
-        held = Held(tuple(batch.readings), self._ledger.number_notices((n.topic, n.body) for n in batch.notices))
+        notices = self._ledger.number_notices((n.topic, n.body) for n in batch.notices)
+        held = Held(tuple(batch.readings), notices, tuple(batch.services))
         self._boots.trust(at)
         self._restamper.due |= any(r.clock == "unsynced" for r in held.readings)
         self._save(held, at)
@@ -222,7 +229,7 @@ class Journal:
         return False
 
     def _hold(self, held: Held) -> None:
-        if held.readings or held.notices:
+        if held.readings or held.notices or held.services:
             self._ledger.hold(held)
         if held.readings:
             self._file.note_numbers(exact=True)
@@ -231,10 +238,11 @@ class Journal:
         """One transaction: readings, notices, kept values, marks, losses, boots."""
         readings = [r for held in adding for r in held.readings]
         notices = [n for held in adding for n in held.notices]
-        if (readings or notices) and not self._make_room(db, sum(held.bytes for held in adding)):
+        services = [s for held in adding for s in held.services]
+        if (readings or notices or services) and not self._make_room(db, sum(held.bytes for held in adding)):
             raise StoreFullError("storing readings", "the journal is at its limit", "bring the uplink back")
         changes = self._ledger.changes(adding)
-        if not (readings or notices or changes or self._boots.unsaved):
+        if not (readings or notices or services or changes or self._boots.unsaved):
             return
         growth = len(notices) - len(changes.notices_done)
         with transaction(db):
@@ -249,10 +257,12 @@ class Journal:
                 "INSERT OR IGNORE INTO notices (id, topic, body) VALUES (?, ?, ?)",
                 [(n.id, n.topic, n.body) for n in notices],
             )
+            forgotten = _write_services(db, services)
             _write_changes(db, changes)
             shed = _limit_notices(db, self._file.notices + growth - MAX_NOTICES)
         self._ledger.settle(changes, adding)
         self._ledger.counted_lost("notices", shed)
+        self._ledger.counted_lost("services", forgotten)
         self._boots.saved()
         self._file.notices += growth - shed
         self._file.stored({r.sensor for r in readings})
@@ -367,6 +377,21 @@ def _write_changes(db: sqlite3.Connection, changes: Changes) -> None:
     for kind, number in changes.lost.items():
         count_lost(db, kind, number)
     db.executemany("DELETE FROM notices WHERE id = ?", [(id_,) for id_ in changes.notices_done])
+
+
+def _write_services(db: sqlite3.Connection, services: Sequence[NewService]) -> int:
+    """Inside a transaction; how many had to go for them. OR IGNORE: a record that is told twice is one."""
+    if not services:
+        return 0
+    db.executemany(
+        "INSERT OR IGNORE INTO services (id, sensor, at, kind, body) VALUES (?, ?, ?, ?, ?)",
+        [(s.id, s.sensor, s.at, s.kind, s.body) for s in services],
+    )
+    over = max(int(db.execute("SELECT count(*) FROM services").fetchone()[0]) - MAX_SERVICES, 0)
+    if over:
+        db.execute("DELETE FROM services WHERE id IN (SELECT id FROM services ORDER BY at LIMIT ?)", (over,))
+        count_lost(db, "services", over)
+    return over
 
 
 def _limit_notices(db: sqlite3.Connection, over: int) -> int:

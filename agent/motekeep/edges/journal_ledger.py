@@ -102,7 +102,7 @@ class Ledger:
                 state.used = reading.seq
                 state.waiting.add(reading.seq, reading.seq)
                 state.changes += 1
-            if batch.readings or batch.notices:
+            if batch.readings or batch.notices or batch.services:
                 self._held.append(batch)
             while self._too_much():
                 self._forget(self._held.popleft())

@@ -51,6 +51,7 @@ SHAPES: dict[str, tuple[type | tuple[type, ...], ...]] = {
     "notices": (type(None), str, str),
     "kept": (str, str),
     "lost": (str, int),
+    "services": (str, str, NUMBER, str, str),
 }
 INSERT = {
     name: f"INSERT OR REPLACE INTO {name} VALUES ({', '.join('?' * len(shape))})"  # noqa: S608 (names from above)

@@ -45,6 +45,11 @@ LADDER: tuple[tuple[str, ...], ...] = (
         """CREATE TABLE boots (
              number INTEGER PRIMARY KEY, boot_id TEXT NOT NULL, seconds REAL NOT NULL, clock_offset REAL)""",
     ),
+    (
+        # service records: kept for ever, a few a year
+        """CREATE TABLE services (
+             id TEXT PRIMARY KEY, sensor TEXT NOT NULL, at REAL NOT NULL, kind TEXT NOT NULL, body TEXT NOT NULL)""",
+    ),
 )
 VERSION = len(LADDER)
 # A user_version further ahead than this was not written by a newer version: the header is damaged.

@@ -6,7 +6,7 @@ Owns shapes, no behaviour.
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 
-from motekeep.edges.ports import NewReading, NoticeRow, Row
+from motekeep.edges.ports import NewReading, NewService, NoticeRow, Row
 from motekeep.edges.spans import Spans
 
 # What a row takes beside its body: its other columns, its entry in the index.
@@ -59,11 +59,13 @@ class Held:
 
     readings: tuple[NewReading, ...]
     notices: tuple[NoticeRow, ...]
+    services: tuple[NewService, ...] = ()
 
     @property
     def bytes(self) -> int:
         """About what it takes in the file."""
-        return sum(len(r.body) + ROW_BYTES for r in self.readings) + sum(len(n.body) + ROW_BYTES for n in self.notices)
+        bodies = [r.body for r in self.readings] + [n.body for n in self.notices] + [s.body for s in self.services]
+        return sum(map(len, bodies)) + ROW_BYTES * len(bodies)
 
 
 @dataclass(frozen=True, slots=True)

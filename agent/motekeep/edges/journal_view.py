@@ -153,6 +153,14 @@ class JournalView:
         """Findings and amendments that wait for the broker."""
         return next(int(str(row["n"])) for row in self._rows("SELECT count(*) AS n FROM notices", {}))
 
+    def services(self, sensor: str | None = None) -> list[str]:
+        """The service records as published, by the time of what was done; none in a journal from before them."""
+        if not list(self._rows("SELECT 1 FROM sqlite_master WHERE name = 'services'", {})):
+            return []
+        where = "" if sensor is None else "WHERE sensor = :sensor"
+        sql = f"SELECT body FROM services {where} ORDER BY at, id"  # noqa: S608 (the text above)
+        return [str(row["body"]) for row in self._rows(sql, {"sensor": sensor} if sensor else {})]
+
     def life(self) -> int:
         """How many times the daemon has started with this journal."""
         return int(self.kept(LIFE) or 0)

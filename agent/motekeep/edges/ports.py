@@ -61,12 +61,25 @@ class Notice:
 
 
 @dataclass(frozen=True, slots=True)
+class NewService:
+    """A service record on its way into the journal; `at` is Unix seconds, `body` its document. One whose `id` is there
+    already is the same one."""
+
+    id: str
+    sensor: str
+    at: float
+    kind: str
+    body: str
+
+
+@dataclass(frozen=True, slots=True)
 class Batch:
     """All that one interval adds, for every sensor: one transaction."""
 
     readings: Sequence[NewReading] = ()
     notices: Sequence[Notice] = ()
     keep: Mapping[str, str] = field(default_factory=dict)
+    services: Sequence[NewService] = ()
 
 
 class Row(NamedTuple):
@@ -118,6 +131,10 @@ class JournalWriter(Protocol):
 
     def kept(self, name: str) -> str | None:
         """What was last committed under this name in `Batch.keep`."""
+        ...
+
+    def has_service(self, id_: str) -> bool:
+        """Whether the service record with this id is durable."""
         ...
 
     def commit(self, batch: Batch, at: Instant) -> None:

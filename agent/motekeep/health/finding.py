@@ -27,6 +27,7 @@ PRIORITY = (
 
 # Usual cautions of the trade; each stands behind the remedies in which it can hurt.
 OPENING = "Disconnect power before opening the unit: the laser inside is only eye-safe while its case is closed."
+SOLVENT = "Isopropanol is flammable: use little of it, with good air and no flame near, and let it dry before power."
 SUPPLY = "Check voltage and polarity before connecting: a wrong or reversed supply destroys the unit."
 
 
@@ -34,7 +35,8 @@ SUPPLY = "Check voltage and polarity before connecting: a wrong or reversed supp
 class Kind:
     """What is fixed about a code: category, the flag that readings get while it holds (None: none), the remedy.
 
-    `explains` lists the codes that this one accounts for: while it is open they are not raised beside it.
+    `explains` lists the codes that this one accounts for, those of them included: while it is open they are not raised
+    beside it.
     """
 
     category: Category
@@ -52,7 +54,50 @@ KINDS: dict[str, Kind] = {
         F,
         4,
         f"Take a spare unit, listen for the fan, clear its inlet, and replace the unit if it stays still. {OPENING}",
-        explains=("output-frozen", "channels-inconsistent"),
+        explains=(
+            "output-frozen",
+            "channels-inconsistent",
+            "sensor-error",  # of a unit that watches its own fan
+            "fan-weak",
+            "fan-surging",
+            "optics-fouled",
+            "twin-disagrees",
+        ),
+    ),
+    "fan-weak": Kind(
+        M,
+        3,
+        f"Take a spare unit; check the unit's 5 V under load and clear its inlet, then replace it. {OPENING} {SUPPLY}",
+        explains=("optics-fouled", "twin-disagrees"),
+    ),
+    "fan-surging": Kind(
+        M,
+        3,
+        f"Take a spare unit; check the unit's 5 V for ripple, then replace the unit: its fan is near its end. {SUPPLY}",
+        explains=("twin-disagrees",),
+    ),
+    "optics-fouled": Kind(
+        M,
+        3,
+        f"Clean the unit as its maker says, or replace it, and tell `motekeep service add`. {OPENING} {SOLVENT}",
+        explains=("twin-disagrees",),
+    ),
+    "floor-raised": Kind(
+        M,
+        3,
+        f"Clean the unit with dry air, look for an insect or fibre in its inlet, else replace it. {OPENING} {SOLVENT}",
+        explains=("twin-disagrees",),
+    ),
+    "light-leak": Kind(
+        M,
+        3,
+        f"Shade inlet and case from daylight, and check that the case is whole and closed. {OPENING}",
+        explains=("floor-raised", "twin-disagrees"),
+    ),
+    "twin-disagrees": Kind(
+        M,
+        3,
+        "Park a third unit beside both for a day: it tells which of the two is wrong, and that one is to be replaced.",
     ),
     "counts-saturated": Kind(
         S,
@@ -113,6 +158,11 @@ KINDS: dict[str, Kind] = {
 }
 
 
+def casts_doubt(code: str) -> bool:
+    """Whether the sensor's own numbers are in doubt while this is open, so that nothing may be learnt from them."""
+    return KINDS[code].flag is not None and not code.startswith("calibration-")
+
+
 @dataclass(frozen=True, slots=True)
 class Finding:
     """One diagnosed condition. `sensor` is None for the gateway itself; `since` is Unix seconds, when it began.
@@ -141,11 +191,13 @@ class Finding:
 
 @dataclass(frozen=True, slots=True)
 class FindingEvent:
-    """A finding opened or closed at `at` (Unix seconds)."""
+    """A finding opened or closed at `at` (Unix seconds). `until`: one that opened is known to have ended then; None
+    while it goes on."""
 
     finding: Finding
     opened: bool
     at: float
+    until: float | None = None
 
 
 @dataclass(frozen=True, slots=True)

@@ -91,7 +91,8 @@ class Ledger:
             return []
         since = min(suspicion.since, at.boot_s)
         self._open[code] = _Entry(since, until, deadline, suspicion.confidence, evidence)
-        return [FindingEvent(self._finding(code), opened=True, at=at.utc)]
+        ended = None if suspicion.until is None else suspicion.until + self._offset
+        return [FindingEvent(self._finding(code), opened=True, at=at.utc, until=ended)]
 
     def _close(self, code: str, at: Instant, why: str | None) -> FindingEvent:
         finding = self._finding(code)

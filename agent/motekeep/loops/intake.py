@@ -13,7 +13,7 @@ from motekeep.health.gateway import GatewayFacts
 from motekeep.instant import Instant
 from motekeep.measure.document import CalibrationDocument
 from motekeep.measure.interval import Climate
-from motekeep.message.documents import ReadingDocument
+from motekeep.message.documents import ReadingDocument, ServiceDocument
 from motekeep.message.health import SensorAccount
 from motekeep.pipeline import Harvest, Pipeline
 
@@ -34,6 +34,10 @@ class Intake:
     def climate(self, sensor: str, climate: Climate, at: Instant) -> None:
         with self._lock:
             self._pipeline.climate(sensor, climate, at)
+
+    def service(self, record: ServiceDocument, at: Instant) -> None:
+        with self._lock:
+            self._pipeline.record_service(record, at)
 
     def resume(self, next_seq: Callable[[str], int], kept: Callable[[str], str | None], at: Instant) -> None:
         """Go on where the journal says that the last life ended."""

@@ -14,7 +14,7 @@ from typing import Protocol
 
 import structlog
 
-from motekeep.edges.ports import Batch, JournalWriter, NewReading, Notice, StoreState
+from motekeep.edges.ports import Batch, JournalWriter, NewReading, NewService, Notice, StoreState
 from motekeep.errors import StoreError
 from motekeep.health.finding import Finding
 from motekeep.health.gateway import GatewayFacts
@@ -22,7 +22,7 @@ from motekeep.instant import Instant, from_rfc3339, rfc3339
 from motekeep.loops.backoff import Backoff
 from motekeep.loops.intake import Intake
 from motekeep.message.compose import Place
-from motekeep.message.documents import LinkHealth, ReadingDocument, StoreHealth
+from motekeep.message.documents import LinkHealth, ReadingDocument, ServiceDocument, StoreHealth
 from motekeep.message.health import Life, health_document
 from motekeep.message.topics import Topics
 from motekeep.pipeline import Harvest
@@ -109,6 +109,10 @@ class Recorder:
         """Prune at the next turn; from any thread."""
         self._prune_due.set()
 
+    def has_service(self, id_: str) -> bool | None:
+        """Whether the journal has this service record; None while there is no journal."""
+        return None if self._journal is None else self._journal.has_service(id_)
+
     def _open(self, at: Instant) -> None:
         try:
             journal = self._opener()
@@ -149,7 +153,8 @@ class Recorder:
         self._vouched = at.trusted
         if harvest:
             readings = [_row(r) for r in harvest.readings]
-            self._journal.commit(Batch(readings, self._notices(harvest), self._kept(harvest, at)), at)
+            services = [_service_row(s) for s in harvest.services]
+            self._journal.commit(Batch(readings, self._notices(harvest), self._kept(harvest, at), services), at)
             self._post_hours(harvest)
             self._outlet.wake()
         elif self._journal.pending_marks() > FLUSH_MARKS:
@@ -168,15 +173,18 @@ class Recorder:
         Written when something opened or closed, at the end, and every ten minutes: with each minute's transaction these
         few kilobytes would be a fifth of all that wears the card, for sums that change by a thousandth.
         """
-        if not harvest.findings and not self._ending and at.boot_s - self._kept_at < KEEP_EVERY_S:
-            return {}
+        pressing = harvest.findings or harvest.services or self._ending
+        if not pressing and at.boot_s - self._kept_at < KEEP_EVERY_S:
+            return harvest.notes
         self._kept_at = at.boot_s
-        return {**harvest.keep, HEALTH: self._health} if self._health else harvest.keep
+        keep = {**harvest.keep, **harvest.notes}
+        return {**keep, HEALTH: self._health} if self._health else keep
 
     def _notices(self, harvest: Harvest) -> list[Notice]:
         topics = self._settings.topics
+        done = [Notice(topics.service, s.json_text()) for s in harvest.services]
         found = [Notice(topics.finding, f.json_text()) for f in harvest.findings]
-        return found + [Notice(topics.amend(a.sensor), a.json_text()) for a in harvest.amendments]
+        return done + found + [Notice(topics.amend(a.sensor), a.json_text()) for a in harvest.amendments]
 
     def _tell_health(self, at: Instant) -> None:
         """A health document when what is open changed, or when the next one is due."""
@@ -209,6 +217,10 @@ class Recorder:
 
 def _gist(findings: Mapping[str | None, Sequence[Finding]]) -> frozenset[tuple[str | None, str]]:
     return frozenset((sensor, f.code) for sensor, open_ in findings.items() for f in open_)
+
+
+def _service_row(record: ServiceDocument) -> NewService:
+    return NewService(record.id, record.sensor, from_rfc3339(record.at), record.kind, record.json_text())
 
 
 def _row(reading: ReadingDocument) -> NewReading:

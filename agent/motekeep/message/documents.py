@@ -160,6 +160,28 @@ class FindingDocument(Document):
     remedy: str
 
 
+class ServiceDocument(Document):
+    """What a person did at a sensor. `id` is unique for ever: a record that comes twice is one.
+
+    `clock` says how far to trust `at`: `synced` and `unsynced` are the gateway's own clock when it was entered,
+    `corrected` is stamped afterwards from this boot's offset, `stated` is what the person said. `entered` is when the
+    record was made, `boot` and `boot_s` the same moment on the clock that never steps.
+    """
+
+    schema_: Literal["motekeep/service/1"] = Field(alias="schema")
+    site: str
+    gateway: str
+    sensor: str
+    id: Annotated[str, Field(pattern=r"^[0-9a-f-]{8,64}$")]
+    kind: Literal["cleaned", "fan-replaced", "unit-replaced", "moved", "note"]
+    at: Time
+    clock: Literal["synced", "corrected", "unsynced", "stated"]
+    entered: Time
+    boot: str
+    boot_s: float = Field(allow_inf_nan=False)
+    note: str = Field(default="", max_length=500)
+
+
 class OpenFinding(Document):
     code: str
     category: Status

@@ -16,6 +16,7 @@ from motekeep.message.documents import (
     LateDocument,
     ReadingDocument,
     ResendRequest,
+    ServiceDocument,
     TakenReceipt,
 )
 
@@ -38,6 +39,7 @@ CHANNELS = (
     Channel("amend/{sensor}", AmendDocument, False, False, "a flag or a time stamp of earlier readings changed"),
     Channel("health", HealthDocument, True, False, "the health status; also the will, with status offline"),
     Channel("finding", FindingDocument, False, False, "a finding opened or closed"),
+    Channel("service", ServiceDocument, False, False, "what a person did at a sensor"),
     Channel("resend", ResendRequest, False, True, "send this range of readings again; answered on late"),
     Channel("taken/{sensor}", TakenReceipt, True, True, "an archive has stored all readings up to this one"),
 )
