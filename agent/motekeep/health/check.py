@@ -5,12 +5,15 @@ open and close: that is the ledger's.
 """
 
 from abc import ABC, abstractmethod
+from collections.abc import Mapping
 from enum import StrEnum
-from typing import ClassVar
+from typing import Any, ClassVar
 
 from motekeep.health.finding import Suspicion
+from motekeep.health.hour import Hour
 from motekeep.health.memory import Memory
 from motekeep.instant import Instant
+from motekeep.measure.dose import ServiceKind
 from motekeep.measure.interval import Interval
 from motekeep.wire.frame import Damage, Observation
 
@@ -31,13 +34,17 @@ class Check(ABC):
     the condition must be absent before the finding closes. `again_s`: how long the check may need, after a restart of
     the daemon, to raise a condition that still holds. A check with `settled` set sees no frame that came in warm-up.
 
-    All times are boot seconds of one boot and do not run backwards.
+    A `slow` check judges by days: what it remembers is kept always, not only while its condition holds, and is written
+    once an hour; its times must be Unix seconds, as it outlives boots.
+
+    All other times are boot seconds of one boot and do not run backwards.
     """
 
     code: ClassVar[str]
     clear_s: ClassVar[float]
     again_s: ClassVar[float] = 300.0
     settled: ClassVar[bool] = False
+    slow: ClassVar[bool] = False
 
     # The empty hooks are meant to be empty: a check says by overriding which ones it needs.
     def observe(self, observation: Observation) -> None:  # noqa: B027
@@ -58,12 +65,21 @@ class Check(ABC):
     def interval(self, interval: Interval) -> None:  # noqa: B027
         """An interval was closed."""
 
+    def hour(self, hour: Hour) -> None:  # noqa: B027
+        """An hour is over: told with the first interval of the next one, trusted clock or not."""
+
+    def learnt(self, parts: Mapping[str, Any]) -> None:  # noqa: B027
+        """What is known of this unit, by lesson, has changed (see `baseline`). Any: each lesson has its own part."""
+
+    def service(self, kind: ServiceKind, done_utc: float, at: Instant) -> None:  # noqa: B027
+        """A person did something at the sensor at `done_utc` (Unix seconds), and it is told now."""
+
     @abstractmethod
     def judge(self, at: Instant) -> Suspicion | None:
         """Whether the condition holds now. Asked every few seconds and at each interval's end."""
 
     def memory(self) -> Memory | None:
-        """What must survive a restart while the condition holds; None for nothing."""
+        """What must survive a restart (of a quick check: while the condition holds); None for nothing."""
         return None
 
     def recall(self, memory: Memory, at: Instant) -> None:  # noqa: B027

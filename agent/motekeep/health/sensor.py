@@ -1,21 +1,24 @@
 """The health of one sensor: its checks, fed and judged together.
 
-Owns which checks a sensor has and what each of them hears. Must not know any check's physics.
+Owns which checks a sensor has, what is learnt of it, and what each of them hears. Must not know any check's physics.
 """
 
 from collections.abc import Callable, Mapping
 from typing import Any
 
+from motekeep.health.baseline import Baseline, hears
 from motekeep.health.check import Check, LineState, listens
 from motekeep.health.fan import FanStopped
 from motekeep.health.fan_twin import FanStoppedBesideTwin
-from motekeep.health.finding import Finding, FindingEvent, Suspicion
+from motekeep.health.finding import Finding, FindingEvent, Suspicion, casts_doubt
 from motekeep.health.frozen import OutputFrozen
+from motekeep.health.hour import Hour, HourBuilder
 from motekeep.health.ledger import Ledger, Terms
 from motekeep.health.line import FramesCorrupt, FramesMissing
 from motekeep.health.range import ChannelsInconsistent, CountsSaturated, MassClipped
 from motekeep.health.unit import SensorError, WarmingUp
 from motekeep.instant import Instant
+from motekeep.measure.dose import ServiceKind
 from motekeep.measure.interval import Interval
 from motekeep.wire.frame import Damage, Dialect, Observation
 
@@ -53,6 +56,9 @@ class SensorHealth:
             FanStopped(flow_l_min, period_s),
             *([FanStoppedBesideTwin(flow_l_min, period_s)] if twinned else []),
         )
+        self.baseline = Baseline(())
+        self._hours = HourBuilder()
+        self._notes_due = False
         terms = {check.code: Terms(check.clear_s, check.again_s) for check in self._checks}
         self._ledger = Ledger(sensor, terms)
         self._events: list[FindingEvent] = []  # those of an interval's end, until the next judge; a few
@@ -68,13 +74,23 @@ class SensorHealth:
         self._heard = tuple([c.heard for c in checks if listens(c, "heard")])
         self._line = tuple([c.line for c in checks if listens(c, "line")])
         self._interval = tuple([c.interval for c in checks if listens(c, "interval")])
+        self._hour = tuple([c.hour for c in checks if listens(c, "hour")])
+        self._learnt = tuple([c.learnt for c in checks if listens(c, "learnt")])
+        self._service = tuple([c.service for c in checks if listens(c, "service")])
         self._judge = tuple([(c.code, c.judge) for c in checks])
+        lessons = self.baseline.lessons
+        self._lesson_observe: tuple[Observe, ...] = tuple([x.observe for x in lessons if hears(x, "observe")])
+        self._lesson_line = tuple([x.line for x in lessons if hears(x, "line")])
+        self._lesson_interval = tuple([x.interval for x in lessons if hears(x, "interval")])
+        self._lesson_hour = tuple([x.hour for x in lessons if hears(x, "hour")])
 
     # -- what comes in ------------------------------------------------------------------------------------------
 
     def observe(self, observation: Observation) -> None:
         """A good frame came."""
         for hook in self._observe_all:
+            hook(observation)
+        for hook in self._lesson_observe:
             hook(observation)
         if observation.at.boot_s >= self._warm_up.until:
             for hook in self._observe_settled:
@@ -99,6 +115,8 @@ class SensorHealth:
         """The line was opened or lost (`why` in words), the sensor put to sleep or woken."""
         for hook in self._line:
             hook(state, at, why)
+        for told in self._lesson_line:
+            told(state, at)
 
     def interval(self, interval: Interval) -> None:
         """An interval was closed. Judged at once, so that `flags_between` of its span is complete; the events come out
@@ -108,6 +126,39 @@ class SensorHealth:
         start, seconds = interval.start, interval.seconds
         end = Instant(start.utc + seconds, start.boot_s + seconds, start.boot_id, start.trusted)
         self._events += self._update(end)
+        sound = self.sound
+        if sound:
+            for lesson in self._lesson_interval:
+                lesson(interval)
+        hour = self._hours.add(interval, sound=sound)
+        if hour is not None:
+            self._hear(hour, end)
+
+    def twin_interval(self, interval: Interval, *, sound: bool) -> None:
+        """An interval of the twin was closed; `sound` says that nothing is wrong with the twin."""
+        self._hours.add_twin(interval, sound=sound)
+
+    def _hear(self, hour: Hour, at: Instant) -> None:
+        """An hour is over: lessons first, as what they teach is what the checks compare it with."""
+        for lesson in self._lesson_hour:
+            lesson(hour)
+        if self.baseline.review(at):
+            self._teach()
+        for hook in self._hour:
+            hook(hour)
+        self._notes_due = True
+
+    def _teach(self) -> None:
+        for hook in self._learnt:
+            hook(self.baseline.parts)
+
+    def service(self, kind: ServiceKind, done_utc: float, at: Instant) -> None:
+        """A person did something at the sensor: what it changed is learnt anew."""
+        if self.baseline.service(kind, at):
+            self._teach()
+        for hook in self._service:
+            hook(kind, done_utc, at)
+        self._notes_due = True
 
     # -- what comes out -----------------------------------------------------------------------------------------
 
@@ -132,6 +183,11 @@ class SensorHealth:
                 raised[code] = suspicion
         return self._ledger.update(raised, at)
 
+    @property
+    def sound(self) -> bool:
+        """Whether nothing that is open casts doubt on the sensor's numbers."""
+        return not any(casts_doubt(finding.code) for finding in self._ledger.open())
+
     def open(self) -> list[Finding]:
         """All open findings."""
         return self._ledger.open()
@@ -144,7 +200,7 @@ class SensorHealth:
 
     def dump(self) -> dict[str, Any]:
         """What `restore` needs in the daemon's next life, as plain values fit for JSON. Any: JSON."""
-        memories = {type(check).__name__: check.memory() for check in self._checks}
+        memories = {type(check).__name__: check.memory() for check in self._checks if not check.slow}
         return {"findings": self._ledger.dump(), "checks": {k: dict(m) for k, m in memories.items() if m is not None}}
 
     def restore(self, kept: Mapping[str, Any], at: Instant) -> None:
@@ -156,8 +212,28 @@ class SensorHealth:
         findings = kept.get("findings")
         if isinstance(findings, list):
             self._ledger.restore([f for f in findings if isinstance(f, dict)], at)
-        memories = kept.get("checks")
+        self._recall(kept.get("checks"), at, slow=False)
+
+    def notes(self) -> dict[str, Any] | None:
+        """What `restore_notes` needs: the baseline and what slow checks remember. None when nothing of it has changed
+        since this was last asked: it is written once an hour, to spare the card."""
+        if not self._notes_due:
+            return None
+        self._notes_due = False
+        memories = {type(check).__name__: check.memory() for check in self._checks if check.slow}
+        checks = {name: dict(memory) for name, memory in memories.items() if memory is not None}
+        return {"baseline": self.baseline.dump(), "checks": checks}
+
+    def restore_notes(self, kept: Mapping[str, Any], at: Instant) -> None:
+        """Take up what `notes` gave, before anything else is heard. What cannot be used is learnt anew."""
+        baseline = kept.get("baseline")
+        if isinstance(baseline, dict):
+            self.baseline.restore(baseline, at)
+            self._teach()
+        self._recall(kept.get("checks"), at, slow=True)
+
+    def _recall(self, memories: object, at: Instant, *, slow: bool) -> None:
         for check in self._checks:
             memory = memories.get(type(check).__name__) if isinstance(memories, dict) else None
-            if isinstance(memory, dict):
+            if isinstance(memory, dict) and check.slow is slow:
                 check.recall(memory, at)
