@@ -238,6 +238,55 @@ class HealthDocument(Document):
     findings: list[OpenFinding] | None = None
 
 
+class CalibrationOfferRequest(Document):
+    """To the device: a calibration document and its detached SSH signature, namespace `calibration@motekeep`, both as
+    the exact text of their files."""
+
+    model_config = ConfigDict(extra="ignore", frozen=True)
+    document: str
+    signature: str = ""
+
+
+class CalibrationInForce(Document):
+    """The document that readings are made with. `signer` and `key` are null for one that was put there by hand on a
+    gateway without signers; `by` says how it came into force."""
+
+    issue: int
+    digest: str
+    signer: str | None
+    key: str | None = Field(description="fingerprint of the signing key")
+    valid_until: Time
+    since: Time
+    by: Literal["offer", "install", "restore", "withdrawal", "by-hand"]
+
+
+class CalibrationRefused(Document):
+    """What was refused last, or withdrawn after it had been in force. `issue` is null where the text was not read: what
+    carries no accepted signature is not."""
+
+    at: Time
+    issue: int | None
+    digest: str
+    reason: str
+    why: str
+    withdrawn: bool
+
+
+class CalibrationStateDocument(Document):
+    """How a sensor is calibrated. `highest_issue` is what the next issue must exceed. `soak_until` is when a new
+    document has proven itself, if measuring goes on; null once it has."""
+
+    schema_: Literal["motekeep/calibration/1"] = Field(alias="schema")
+    site: str
+    gateway: str
+    sensor: str
+    at: Time
+    in_force: CalibrationInForce | None
+    highest_issue: int | None
+    soak_until: Time | None
+    refused: CalibrationRefused | None
+
+
 class ResendRequest(Document):
     """To the device: send this range again; answered on `late`."""
 

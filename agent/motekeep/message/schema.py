@@ -9,6 +9,8 @@ from pydantic.json_schema import models_json_schema
 
 from motekeep.message.documents import (
     AmendDocument,
+    CalibrationOfferRequest,
+    CalibrationStateDocument,
     Document,
     FindingDocument,
     HealthDocument,
@@ -40,6 +42,10 @@ CHANNELS = (
     Channel("health", HealthDocument, True, False, "the health status; also the will, with status offline"),
     Channel("finding", FindingDocument, False, False, "a finding opened or closed"),
     Channel("service", ServiceDocument, False, False, "what a person did at a sensor"),
+    Channel(
+        "calibration/{sensor}/state", CalibrationStateDocument, True, False, "what is in force, what was refused and why"
+    ),
+    Channel("calibration/{sensor}/offer", CalibrationOfferRequest, True, True, "a signed calibration document"),
     Channel("resend", ResendRequest, False, True, "send this range of readings again; answered on late"),
     Channel("taken/{sensor}", TakenReceipt, True, True, "an archive has stored all readings up to this one"),
 )
