@@ -1,11 +1,14 @@
 """The command `moteferry`: words in, exit codes out.
 
-Owns arguments and the translation of named errors: 0 done, 1 what was asked about is not well, 2 usage or input error in
-one line. Each command is imported when it is called: fitting needs numpy and scipy, signing nothing.
+Owns arguments and the translation of named errors: 0 done, 1 what was asked about is not well, 2 usage or input error
+in one line. Each command is imported when it is called: fitting needs numpy and scipy, signing nothing.
 """
+
+from pathlib import Path
 
 import click
 
+from moteferry.duration import Duration
 from motekeep import __version__
 from motekeep.errors import MotekeepError
 
@@ -31,3 +34,117 @@ def main() -> None:
 
     Readings are indicative: not a regulatory instrument, not a smoke alarm, not a life-safety device.
     """
+
+
+FILE = click.Path(exists=True, dir_okay=False, path_type=Path)
+REGISTER = Path(click.get_app_dir("moteferry")) / "register.db"
+register_option = click.option(
+    "--register",
+    type=click.Path(dir_okay=False, path_type=Path),
+    default=REGISTER,
+    show_default=True,
+    envvar="MOTEFERRY_REGISTER",
+    help="The SQLite file that knows every roll.",
+)
+json_option = click.option("--json", "as_json", is_flag=True, help="For scripts: one JSON document on standard output.")
+
+
+@main.command()
+@click.argument("documents", nargs=-1, type=FILE)
+@click.option("--broker", default="localhost", show_default=True, metavar="HOST[:PORT]", help="Port 8883 with TLS.")
+@click.option("--root", default="motekeep", show_default=True, help="The first level of all topics.")
+@click.option("--waves", default="1,10%,rest", show_default=True, help="Numbers, shares of all, and `rest`.")
+@click.option("--hold", type=Duration(), default="30m", show_default=True, help="How long each wave is watched.")
+@click.option("--patience", type=Duration(), default="10m", show_default=True, help="How long to wait for an answer.")
+@click.option("--yes", is_flag=True, help="Roll; without it only the plan is shown.")
+@click.option("--go-on", is_flag=True, help="Go past those that stopped the roll before.")
+@click.option("--undo", is_flag=True, help="Take the documents back, or without any those of the last roll.")
+@click.option(
+    "--key", type=click.Path(path_type=Path), help="With --undo: what to sign with; .pub of a key in an agent."
+)
+@click.option("--out", type=click.Path(file_okay=False, path_type=Path), default="undo", show_default=True)
+@click.option("--known", type=FILE, multiple=True, help="An earlier document that the register does not have.")
+@click.option("--tls", is_flag=True, help="TLS with the authorities of this system.")
+@click.option("--tls-ca", type=FILE, help="PEM; turns TLS on.")
+@click.option("--tls-cert", type=FILE, help="PEM; turns TLS on.")
+@click.option("--tls-key", type=FILE)
+@click.option("--username")
+@click.option("--password-file", type=FILE, help="Its first line; never the password itself.")
+@register_option
+@json_option
+def roll(  # noqa: PLR0913, PLR0917 (an option each)
+    documents: tuple[Path, ...],
+    broker: str,
+    root: str,
+    waves: str,
+    hold: float,
+    patience: float,
+    yes: bool,
+    go_on: bool,
+    undo: bool,
+    key: Path | None,
+    out: Path,
+    known: tuple[Path, ...],
+    tls: bool,
+    tls_ca: Path | None,
+    tls_cert: Path | None,
+    tls_key: Path | None,
+    username: str | None,
+    password_file: Path | None,
+    register: Path,
+    as_json: bool,
+) -> None:
+    """Carry signed DOCUMENTS (x.toml with x.toml.sig beside it) to their gateways, in waves.
+
+    Shows the plan; with --yes acts on it. A wave goes on to the next when every device has accepted, held its document
+    for --hold and is no worse than before. Anything else stops the roll. The same command again goes on where it was.
+    """
+    from moteferry.roll import command  # noqa: PLC0415 (see above)
+    from moteferry.roll.gate import Rule  # noqa: PLC0415
+    from motekeep.edges.login import BrokerSettings, Tls  # noqa: PLC0415
+
+    if not documents and not undo:
+        raise click.UsageError("name the documents to roll")
+    secure = Tls(tls_ca, tls_cert, tls_key) if tls or tls_ca or tls_cert else None
+    host, port = _address(broker, 1883 if secure is None else 8883)
+    settings = BrokerSettings(host, port, "", username=username, password_file=password_file, tls=secure)
+    wish = command.Wish(settings, root, register, waves, Rule(hold, patience), yes, go_on, as_json)
+    if undo:
+        well = command.undo(wish, documents, known, command.UndoWish(key, out))
+    else:
+        well = command.roll(wish, documents, known)
+    _exit(well)
+
+
+@main.command()
+@register_option
+@click.option("--site")
+@click.option("--gateway")
+@click.option("--sensor")
+@click.option("--at", metavar="TIME", help="Only what was in force then, like 2026-12-01T09:15:00Z.")
+@json_option
+def history(
+    register: Path, site: str | None, gateway: str | None, sensor: str | None, at: str | None, as_json: bool
+) -> None:
+    """Who had which calibration when, as far as the register saw it."""
+    from moteferry.roll import command  # noqa: PLC0415 (see above)
+
+    try:
+        _exit(command.history(register, (site, gateway, sensor), at, as_json=as_json))
+    except ValueError as error:
+        raise click.BadParameter(str(error), param_hint="--at") from error
+
+
+def _address(text: str, port: int) -> tuple[str, int]:
+    """`host`, `host:port`, `[::1]:port`."""
+    host, colon, number = text.rpartition(":")
+    if not colon or text.endswith("]"):
+        return text.strip("[]"), port
+    if not number.isdigit():
+        raise click.BadParameter(f"{text!r} is no HOST[:PORT]", param_hint="--broker")
+    return host.strip("[]"), int(number)
+
+
+def _exit(well: bool) -> None:
+    if not well:
+        click.get_current_context().exit(1)
