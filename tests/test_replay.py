@@ -229,12 +229,28 @@ def test_the_same_captures_give_the_same_bytes(tmp_path: Path) -> None:
     assert [len(text) > 0 for text in first.texts()] == [True, True, False, True]
 
 
+def test_a_sensor_that_sleeps_between_is_missing_nothing_and_its_first_half_minutes_are_left_out(
+    tmp_path: Path,
+) -> None:
+    turns = [[at(600.0 * n + 0.1, "north line awake"), at(600.0 * n + 90.1, "north line asleep")] for n in range(6)]
+    awake = [frames(90.0, start=600.0 * n) for n in range(6)]
+    asleep = run(tmp_path / "told", capture(tmp_path / "a.capture", *awake, *turns))
+    codes = {finding["code"] for finding in asleep.lines("findings.ndjson")}
+    assert "frames-missing" not in codes
+    minutes = [reading for reading in asleep.readings if reading.frames.good]
+    assert [reading.frames.good for reading in minutes[1:4]] == [5, 5, 5]
+    assert all(reading.reasons == ["asleep"] for reading in asleep.readings if not reading.frames.good)
+    silent = run(tmp_path / "untold", capture(tmp_path / "b.capture", *awake))
+    assert "frames-missing" in {finding["code"] for finding in silent.lines("findings.ndjson")}
+
+
 BAD_LINES = [
     ("1796126460.0 north frame 424", "not a capture line"),
     ("1796126460.0 north frame", "not a capture line"),
     ("noon north frame 42", "not a capture line"),
     ("1796126460.0 north climate wet 3.0", "not a capture line"),
     ("1796126460.0 north service polished", "not a capture line"),
+    ("1796126460.0 north line dozing", "not a capture line"),
     ("1796126460.0 north photo 42", "unknown kind 'photo'"),
     ("1796126400.5 north frame 42", "time runs backwards"),
 ]

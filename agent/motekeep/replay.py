@@ -13,7 +13,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import IO
 
-from motekeep.capture import ClimateRecord, FrameRecord, Record, ServiceRecord, parse_line
+from motekeep.capture import ClimateRecord, FrameRecord, LineRecord, Record, ServiceRecord, parse_line
 from motekeep.errors import CaptureError
 from motekeep.instant import Instant, rfc3339
 from motekeep.measure.document import CalibrationDocument
@@ -119,11 +119,7 @@ def replay(
                 summary.first, harvest_at = record.t, at
             if isinstance(record, FrameRecord):
                 summary.frames[record.sensor] += 1
-                pipeline.receive(record.sensor, record.data, at)
-            elif isinstance(record, ClimateRecord):
-                pipeline.climate(record.sensor, Climate(record.rh_pct, record.temperature_c, "capture"), at)
-            elif isinstance(record, ServiceRecord):
-                pipeline.service(record.sensor, ServiceKind(record.kind), record.t, at)
+            _tell(pipeline, record, at)
             if at.boot_s - harvest_at.boot_s >= HARVEST_EVERY_S:
                 harvest_at = at
                 results.write(pipeline.harvest())
@@ -134,6 +130,18 @@ def replay(
         results.write_hours(out / "hourly.ndjson")
     (out / "summary.json").write_text(json.dumps(summary.as_dict(), indent=1) + "\n", encoding="utf-8")
     return summary
+
+
+def _tell(pipeline: Pipeline, record: Record, at: Instant) -> None:
+    match record:
+        case FrameRecord(data=data):
+            pipeline.receive(record.sensor, data, at)
+        case ClimateRecord(rh_pct=rh_pct, temperature_c=temperature_c):
+            pipeline.climate(record.sensor, Climate(rh_pct, temperature_c, "capture"), at)
+        case ServiceRecord(kind=kind):
+            pipeline.service(record.sensor, ServiceKind(kind), record.t, at)
+        case LineRecord(state=state):
+            pipeline.line(record.sensor, state, at)
 
 
 def _instant(t: float) -> Instant:

@@ -8,14 +8,14 @@ import numpy as np
 import pytest
 from click.testing import CliRunner
 
-from motekeep.capture import ClimateRecord, FrameRecord, ServiceRecord, parse_line
+from motekeep.capture import ClimateRecord, FrameRecord, LineRecord, ServiceRecord, parse_line
 from motekeep.instant import from_rfc3339
 from motekeep.wire.dialects import DIALECTS
 from motekeep.wire.frame import Damage, Frame
 from motesim.capture import capture_lines, emulated_capture, write_capture
 from motesim.cli import main
 from motesim.faults import Fault
-from motesim.plan import Probe, SensorPlan, Service, SitePlan
+from motesim.plan import Duty, Probe, SensorPlan, Service, SitePlan
 from motesim.site import Site
 
 START = 1_796_083_200.0
@@ -75,6 +75,24 @@ def test_climate_and_service_lines_stand_beside_the_frames() -> None:
     assert [(r.t, r.kind) for r in records if isinstance(r, ServiceRecord)] == [(START + 30.0, "cleaned")]
     (block,) = Site(SitePlan("here", 1, START, 300.0, (sensor,))).observed("north")
     assert climate[0].rh_pct == pytest.approx(block.state.rh[0] + 2.0, abs=0.06)
+
+
+def test_sleep_and_wake_stand_between_the_frames_that_they_part() -> None:
+    # two sensors of different phase over the border of two stretches of air, six hours after the start
+    sensors = tuple(SensorPlan(name, seed=n, period_s=6.0, duty=Duty(600.0, 90.0)) for n, name in enumerate("ab", 5))
+    plan = SitePlan("here", 1, START, 7 * 3600.0, sensors)
+    records = [record for line in capture_lines(plan) if (record := parse_line(line))]
+    assert [r.t for r in records] == sorted(r.t for r in records)
+    for sensor in "ab":
+        own = [record for record in records if record.sensor == sensor]
+        turned = [record for record in own if isinstance(record, LineRecord)]
+        assert [record.asleep for record in turned] == [n % 2 == 0 for n in range(84)]
+        for record in turned:
+            last, first = own[own.index(record) - 1], own[(own.index(record) + 1) % len(own)]
+            if record.asleep:
+                assert record.t - last.t < 0.05
+            elif record.t < plan.start + plan.seconds - 6.0:
+                assert 5.9 < first.t - record.t < 6.1
 
 
 def test_damage_is_what_it_says(tmp_path: Path) -> None:

@@ -1,11 +1,13 @@
 """Captures of an emulated site: raw frames as text, with the truth and a reference instrument beside them.
 
 Owns the files that a scenario becomes. Must not know ports. The capture format is the one that `motekeep replay` reads:
-`T SENSOR frame HEX`, `T SENSOR climate RH TEMP`, `T SENSOR service KIND`, `#` before a comment; T is Unix seconds.
+`T SENSOR frame HEX`, `T SENSOR climate RH TEMP`, `T SENSOR service KIND`, `T SENSOR line asleep|awake`, `#` before a
+comment; T is Unix seconds.
 """
 
 import gzip
 import json
+from bisect import bisect_left
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import ExitStack, contextmanager
 from dataclasses import asdict, dataclass, replace
@@ -21,7 +23,7 @@ from motesim.events import Event
 from motesim.faults import Fault
 from motesim.plan import Probe, SensorPlan, SitePlan
 from motesim.relaxation import generators
-from motesim.site import Block, SensorCourse, Site, truths
+from motesim.site import Block, SensorCourse, Site, truths, turns
 
 # zlib level 1 costs a quarter of the time of the default and a tenth more bytes on these lines
 _GZIP_LEVEL = 1
@@ -62,33 +64,34 @@ def write_capture(
     """
     site = Site(plan)
     courses = site.courses()
-    frames = 0
     with ExitStack() as stack:
         text = stack.enter_context(_opened(out))
         true = stack.enter_context(_opened(truth)) if truth else None
         text.write(f"# emulated: {plan.name}, seed {plan.seed}, from {rfc3339(plan.start)}, {plan.seconds:.0f} s\n")
-        hours = _Hours()
+        hours, lines = _Hours(), _Lines()
         for air in site.air():
             blocks = [(course, block) for course in courses if (block := course.block(air)) is not None]
-            lines, spoken = _lines(blocks)
-            text.writelines(lines)
-            frames += spoken
+            text.writelines(lines.until(float(air.times[-1]), blocks))
             hours.add(air.times[:-1], air.dry_masses()[1, :-1])
             if true is not None:
                 true.writelines(_truth_line(course, block) for course, block in blocks)
             if told is not None:
-                told(min((float(air.times[-1]) - plan.start) / plan.seconds, 1.0), frames)
+                told(min((float(air.times[-1]) - plan.start) / plan.seconds, 1.0), lines.frames)
+        text.writelines(lines.rest())
         if reference is not None:
             stack.enter_context(_opened(reference)).writelines(hours.csv(plan, Reference()))
-    return frames
+    return lines.frames
 
 
 def capture_lines(plan: SitePlan) -> Iterator[str]:
     """The lines of a capture without a file, each with its line end."""
     site = Site(plan)
     courses = site.courses()
+    lines = _Lines()
     for air in site.air():
-        yield from _lines([(course, block) for course in courses if (block := course.block(air)) is not None])[0]
+        blocks = [(course, block) for course in courses if (block := course.block(air)) is not None]
+        yield from lines.until(float(air.times[-1]), blocks)
+    yield from lines.rest()
 
 
 def emulated_capture(  # noqa: PLR0913 # each is one keyword of a test; a record of them would be SitePlan
@@ -119,22 +122,33 @@ def emulated_capture(  # noqa: PLR0913 # each is one keyword of a test; a record
     return write_capture(site, out, truth=truth)
 
 
-def _lines(blocks: list[tuple[SensorCourse, Block]]) -> tuple[list[str], int]:
-    """Lines of one stretch of all sensors in order of time, and how many of them are frames."""
-    entries: list[tuple[float, str]] = []
-    for course, block in blocks:
-        name = course.plan.name
-        head = f" {name} frame "
-        entries += [(at, f"{at:.3f}{head}{data.hex()}\n") for at, data in course.line.speak(block.printed)]
-    frames = len(entries)
-    for course, block in blocks:
-        entries += _beside(course, block)
-    entries.sort()
-    return [line for _, line in entries], frames
+class _Lines:
+    """The lines of all sensors in order of time. What falls just behind a stretch waits for the next one."""
+
+    def __init__(self) -> None:
+        self.frames = 0
+        self._waiting: list[tuple[float, str]] = []  # a few of each sensor
+
+    def until(self, end: float, blocks: list[tuple[SensorCourse, Block]]) -> list[str]:
+        """The lines before `end`, with one more stretch."""
+        entries = self._waiting
+        for course, block in blocks:
+            head = f" {course.plan.name} frame "
+            spoken = course.line.speak(block.printed)
+            self.frames += len(spoken)
+            entries += [(at, f"{at:.3f}{head}{data.hex()}\n") for at, data in spoken]
+            entries += _beside(course, block)
+        entries.sort()
+        split = bisect_left(entries, (end, ""))
+        self._waiting = entries[split:]
+        return [line for _, line in entries[:split]]
+
+    def rest(self) -> list[str]:
+        return [line for _, line in self._waiting]
 
 
 def _beside(course: SensorCourse, block: Block) -> Iterator[tuple[float, str]]:
-    """What stands in the capture beside the frames: the probe and the service records."""
+    """What stands in the capture beside the frames: the probe, the service records, sleep and wake."""
     name, probe, state = course.plan.name, course.plan.probe, block.state
     first, last = float(state.times[0]), float(state.times[-1])
     if probe is not None:
@@ -147,6 +161,8 @@ def _beside(course: SensorCourse, block: Block) -> Iterator[tuple[float, str]]:
     for service in course.plan.services:
         if first <= service.at < last + course.plan.period_s:
             yield service.at, f"{service.at:.3f} {name} service {service.kind}\n"
+    for at, turned in turns(block):
+        yield at, f"{at:.3f} {name} line {turned}\n"
 
 
 def _truth_line(course: SensorCourse, block: Block) -> str:

@@ -9,6 +9,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from motekeep.health.check import LineState
 from motesim.aerosol import Floats
 from motesim.air import Air, AirCourse
 from motesim.emulator import Emulator, Printed, State
@@ -16,6 +17,9 @@ from motesim.faults import FaultSet
 from motesim.line import Line, Spoken
 from motesim.plan import SensorPlan, SitePlan
 from motesim.relaxation import generators
+
+# A turn falls between two frames; so long after the earlier one that its jitter cannot bring it behind the turn.
+_BEHIND_FRAME_S = 0.02
 
 
 @dataclass(frozen=True, slots=True)
@@ -45,13 +49,14 @@ class Truth:
 
 @dataclass(frozen=True, slots=True)
 class Block:
-    """One stretch of one sensor."""
+    """One stretch of one sensor. `awake` is so at each time of `state`, `stays` whether it is a period later."""
 
     sensor: str
     air: Air
     printed: Printed
     state: State
     awake: NDArray[np.bool_]
+    stays: bool = True
 
 
 class SensorCourse:
@@ -78,9 +83,9 @@ class SensorCourse:
             return None
         times = self._start + self._phase + self._true_period * np.arange(self._done, last, dtype=np.float64)
         self._done = last
-        awake = self._awake(times)
-        printed, state = self.emulator.advance(air, times, awake)
-        return Block(self.plan.name, air, printed, state, awake)
+        awake = self._awake(np.append(times, times[-1] + self._true_period))
+        printed, state = self.emulator.advance(air, times, awake[:-1])
+        return Block(self.plan.name, air, printed, state, awake[:-1], bool(awake[-1]))
 
     def _awake(self, times: Floats) -> NDArray[np.bool_]:
         duty = self.plan.duty
@@ -175,6 +180,19 @@ def truths(block: Block, faults: FaultSet, seconds: float = 60.0) -> list[Truth]
             )
         )
     return out
+
+
+def turns(block: Block) -> list[tuple[float, LineState]]:
+    """When the sensor was put to sleep and woken in this block, in order of time: what a host would tell its pipeline.
+
+    A sensor sleeps from its last frame on, and its first frame comes a period after the wake. The last turn may lie a
+    moment behind the block's last frame.
+    """
+    changed = np.flatnonzero(np.diff(block.awake, append=block.stays))
+    return [
+        (float(block.state.times[i]) + _BEHIND_FRAME_S, LineState.ASLEEP if block.awake[i] else LineState.AWAKE)
+        for i in changed.tolist()
+    ]
 
 
 def _groups(times: Floats, seconds: float) -> tuple[NDArray[np.int64], Floats]:
