@@ -6,6 +6,13 @@ Owns which checks a sensor has, what is learnt of it, and what each of them hear
 from collections.abc import Callable, Mapping
 from typing import Any
 
+from motekeep.health.account import (
+    CalibrationExpired,
+    CalibrationMissing,
+    CalibrationOutOfRange,
+    DoseDue,
+    HoursDue,
+)
 from motekeep.health.baseline import Baseline, hears
 from motekeep.health.check import Check, LineState, listens
 from motekeep.health.fan import FanStopped
@@ -17,10 +24,14 @@ from motekeep.health.ledger import Ledger, Terms
 from motekeep.health.line import FramesCorrupt, FramesMissing
 from motekeep.health.range import ChannelsInconsistent, CountsSaturated, MassClipped
 from motekeep.health.unit import SensorError, WarmingUp
+from motekeep.health.visit import ServiceVisit, UnitSwapped
 from motekeep.instant import Instant
+from motekeep.measure.account import Account, Limits
 from motekeep.measure.dose import ServiceKind
 from motekeep.measure.interval import Interval
 from motekeep.wire.frame import Damage, Dialect, Observation
+
+DEFAULT_LIMITS = Limits()
 
 Observe = Callable[[Observation], None]
 
@@ -42,6 +53,7 @@ class SensorHealth:
         *,
         flow_l_min: float = 0.1,
         twinned: bool = False,
+        limits: Limits = DEFAULT_LIMITS,
     ) -> None:
         self._warm_up = WarmingUp(dialect.warm_up_s, period_s, at)
         self._checks: tuple[Check, ...] = (
@@ -55,6 +67,13 @@ class SensorHealth:
             SensorError(dialect.error_bits),
             FanStopped(flow_l_min, period_s),
             *([FanStoppedBesideTwin(flow_l_min, period_s)] if twinned else []),
+            ServiceVisit(),
+            UnitSwapped(),
+            DoseDue(limits),
+            HoursDue(limits),
+            *([CalibrationMissing()] if limits.calibration_required else []),
+            CalibrationExpired(),
+            CalibrationOutOfRange(),
         )
         self.baseline = Baseline(())
         self._hours = HourBuilder()
@@ -76,8 +95,11 @@ class SensorHealth:
         self._interval = tuple([c.interval for c in checks if listens(c, "interval")])
         self._hour = tuple([c.hour for c in checks if listens(c, "hour")])
         self._learnt = tuple([c.learnt for c in checks if listens(c, "learnt")])
+        self._account = tuple([c.account for c in checks if listens(c, "account")])
         self._service = tuple([c.service for c in checks if listens(c, "service")])
-        self._judge = tuple([(c.code, c.judge) for c in checks])
+        self._judge_quick = tuple([(c.code, c.judge) for c in checks if not c.slow])
+        self._judge_slow = tuple([(c.code, c.judge) for c in checks if c.slow])
+        self._slow: list[tuple[str, Suspicion | None]] = []  # as of the last interval's end
         lessons = self.baseline.lessons
         self._lesson_observe: tuple[Observe, ...] = tuple([x.observe for x in lessons if hears(x, "observe")])
         self._lesson_line = tuple([x.line for x in lessons if hears(x, "line")])
@@ -125,6 +147,7 @@ class SensorHealth:
             hook(interval)
         start, seconds = interval.start, interval.seconds
         end = Instant(start.utc + seconds, start.boot_s + seconds, start.boot_id, start.trusted)
+        self._slow = [(code, judge(end)) for code, judge in self._judge_slow]
         self._events += self._update(end)
         sound = self.sound
         if sound:
@@ -152,6 +175,11 @@ class SensorHealth:
         for hook in self._learnt:
             hook(self.baseline.parts)
 
+    def account(self, account: Account) -> None:
+        """A reading was made of the interval that was closed last."""
+        for hook in self._account:
+            hook(account)
+
     def service(self, kind: ServiceKind, done_utc: float, at: Instant) -> None:
         """A person did something at the sensor: what it changed is learnt anew."""
         if self.baseline.service(kind, at):
@@ -174,8 +202,7 @@ class SensorHealth:
 
     def _update(self, at: Instant) -> list[FindingEvent]:
         raised: dict[str, Suspicion] = {}
-        for code, judge in self._judge:
-            suspicion = judge(at)
+        for code, suspicion in [*[(code, judge(at)) for code, judge in self._judge_quick], *self._slow]:
             if suspicion is None:
                 continue
             known = raised.get(code)
