@@ -42,6 +42,7 @@ from motekeep.loops.recorder import Recorder, RecorderSettings
 from motekeep.loops.rows import RowSettings
 from motekeep.loops.service import ServiceFeed, ServiceFeedSettings
 from motekeep.loops.supervisor import Hand, Supervisor
+from motekeep.measure.account import Limits
 from motekeep.measure.climate import FIXED, from_message
 from motekeep.measure.hourly import HOUR_S, WINDOW_HOURS
 from motekeep.measure.interval import Climate
@@ -72,9 +73,21 @@ def sensor_setups(config: Config) -> list[SensorSetup]:
             flow_l_min=sensor.flow,
             frame_climate=isinstance(sensor.climate, FrameClimate),
             climate_max_age_s=_climate_max_age_s(sensor),
+            limits=_limits(sensor, config),
         )
         for sensor in config.sensor
     ]
+
+
+def _limits(sensor: Sensor, config: Config) -> Limits:
+    """Dust settles on a detector that looks up: common practice, no source, is to clean it twice as often."""
+    halved = sensor.mounting == "optics-up"
+    return Limits(
+        dose_ug=sensor.limits.dose_ug / 2 if halved else sensor.limits.dose_ug,
+        laser_hours=sensor.limits.laser_hours,
+        calibration_required=config.calibration.required,
+        halved=halved,
+    )
 
 
 def _climate_max_age_s(sensor: Sensor) -> float:

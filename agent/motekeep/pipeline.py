@@ -14,8 +14,9 @@ from typing import Any
 from motekeep.health.check import LineState
 from motekeep.health.finding import Finding, FindingEvent
 from motekeep.health.gateway import GatewayFacts, GatewayHealth
-from motekeep.health.sensor import SensorHealth
+from motekeep.health.sensor import DEFAULT_LIMITS, SensorHealth
 from motekeep.instant import Instant, from_rfc3339
+from motekeep.measure.account import Account, Limits
 from motekeep.measure.amendment import Amendment, Amendments
 from motekeep.measure.climate import FIXED
 from motekeep.measure.correction import compile_document
@@ -53,6 +54,7 @@ class SensorSetup:
     flow_l_min: float = 0.1
     frame_climate: bool = False
     climate_max_age_s: float = 900.0
+    limits: Limits = DEFAULT_LIMITS
 
 
 @dataclass(frozen=True, slots=True)
@@ -156,6 +158,7 @@ class Pipeline:
             at,
             flow_l_min=setup.flow_l_min,
             twinned=setup.twin is not None,
+            limits=setup.limits,
         )
         return _Sensor(setup, health, Cadence(setup.period_s, at.boot_s), setup.dialect.decoder())
 
@@ -338,6 +341,8 @@ class Pipeline:
             self._readings.append(reading_document(reading, self._place, sensor.seq))
             sensor.seq += 1
             sensor.dose = sensor.dose.after(reading, sensor.setup.flow_l_min)
+            ended = Instant(end_s + span.offset, end_s, span.boot_id, span.trusted)
+            sensor.health.account(Account(ended, sensor.dose, sensor.calibration, reading))
             if span.trusted:
                 sensor.hourly.add(sample_of(reading))
 

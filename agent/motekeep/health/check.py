@@ -13,6 +13,7 @@ from motekeep.health.finding import Suspicion
 from motekeep.health.hour import Hour
 from motekeep.health.memory import Memory
 from motekeep.instant import Instant
+from motekeep.measure.account import Account
 from motekeep.measure.dose import ServiceKind
 from motekeep.measure.interval import Interval
 from motekeep.wire.frame import Damage, Observation
@@ -70,6 +71,9 @@ class Check(ABC):
 
     def learnt(self, parts: Mapping[str, Any]) -> None:  # noqa: B027
         """What is known of this unit, by lesson, has changed (see `baseline`). Any: each lesson has its own part."""
+
+    def account(self, account: Account) -> None:  # noqa: B027
+        """A reading was made: what the sensor has been through, and what it was corrected with."""
 
     def service(self, kind: ServiceKind, done_utc: float, at: Instant) -> None:  # noqa: B027
         """A person did something at the sensor at `done_utc` (Unix seconds), and it is told now."""

@@ -130,6 +130,33 @@ KINDS: dict[str, Kind] = {
         f"Switch the sensor's supply off and on, and replace the unit if it reports the fault again. {OPENING}",
     ),
     "warming-up": Kind(C, None, "Nothing to do: the sensor has just started, and its first half minute is left out."),
+    "service-visit": Kind(
+        C, 3, "Nothing to do: somebody is at the case, or was, and what was measured meanwhile is not the air's alone."
+    ),
+    "unit-swapped": Kind(
+        C,
+        3,
+        "Enter `motekeep service add SENSOR unit-replaced` if it was, and check that its calibration is of this unit.",
+    ),
+    "dose-due": Kind(
+        M,
+        None,
+        f"Clean the unit as its maker says, or replace it, and tell `motekeep service add`. {OPENING} {SOLVENT}",
+    ),
+    "hours-due": Kind(
+        M, None, f"Take a new unit on the next visit, and tell `motekeep service add SENSOR unit-replaced`. {SUPPLY}"
+    ),
+    "calibration-missing": Kind(
+        S, 3, "Put a calibration document of this sensor in place, or set `required = false` under [calibration]."
+    ),
+    "calibration-expired": Kind(
+        S, None, "Park a reference beside the sensor and renew its calibration: what it says now is not vouched for."
+    ),
+    "calibration-out-of-range": Kind(
+        S,
+        None,
+        "Nothing to repair: the air is unlike that of the calibration; if it stays so, calibrate again in such air.",
+    ),
     "clock-unsynced": Kind(
         M,
         None,

@@ -1,7 +1,7 @@
 """Numbers outside what the field, the declared range or plain physics allows, judged on whole intervals.
 
-Owns the limits that a frame's own layout states. Must not know corrections: raw numbers only. Loss by coincidence is
-left to the correction step of that name, as no layout states a sensing volume.
+Owns the limits that a frame's own layout states. Must not know corrections: raw numbers only, but for the loss by
+coincidence. No layout states a sensing volume, so that loss is known only where a calibration document does.
 """
 
 from math import pi
@@ -10,6 +10,7 @@ from typing import ClassVar
 from motekeep.health.check import Check
 from motekeep.health.finding import Suspicion
 from motekeep.instant import Instant
+from motekeep.measure.account import Account
 from motekeep.measure.interval import Interval
 from motekeep.wire.frame import Layout
 
@@ -36,7 +37,11 @@ def _end(interval: Interval) -> float:
 
 class CountsSaturated(_IntervalCheck):
     """counts-saturated: a count at the top of its field, where it is censored. One frame is enough: its interval has
-    no mean. Ten minutes without one close it: a plume that swells around the top is one event."""
+    no mean. Ten minutes without one close it: a plume that swells around the top is one event.
+
+    Or more than a tenth of the particles lost by coincidence (ISO 21501-4:2007, 3.6, maximum concentration), as the
+    step `coincidence` of the calibration document finds it; without such a step nobody knows, and nothing is found.
+    """
 
     code: ClassVar[str] = "counts-saturated"
     clear_s: ClassVar[float] = 600.0
@@ -51,6 +56,14 @@ class CountsSaturated(_IntervalCheck):
             return None
         evidence = f"count at its top of {layout.count_top:g} /dL in {', '.join(full)}"
         return Suspicion(interval.start.boot_s, 1.0, evidence, until=_end(interval))
+
+    def account(self, account: Account) -> None:
+        interval = account.reading.interval
+        lossy = [reason for reason in ("coincidence-high", "coincidence-censored") if reason in account.reading.reasons]
+        if self._held is None and lossy and interval.counts:
+            count = f"{interval.counts[0].mean:.0f} /dL in the smallest channel"
+            evidence = f"{count}: over 10 % lost by coincidence, by the sensing volume of the calibration document"
+            self._held = Suspicion(interval.start.boot_s, 0.9, evidence, until=_end(interval))
 
 
 class MassClipped(_IntervalCheck):
