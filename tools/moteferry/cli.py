@@ -49,6 +49,77 @@ register_option = click.option(
 json_option = click.option("--json", "as_json", is_flag=True, help="For scripts: one JSON document on standard output.")
 
 
+# Listed here and not asked of the fit: to show the help must not import numpy.
+MODELS = ("scale", "linear", "linear-rh", "growth", "linear-rh-t", "piecewise")
+
+
+@main.command()
+@click.option("--device", type=FILE, required=True, help="Readings: ndjson, or csv as `motekeep export` writes it.")
+@click.option("--reference", type=FILE, required=True, help="CSV: start,seconds,pm2_5 and optionally u; UTC.")
+@click.option("--out", type=click.Path(file_okay=False, path_type=Path), required=True, help="Folder for the results.")
+@click.option("--sensor", help="Which, where the readings are of several.")
+@click.option("--channel", type=click.Choice(["pm1", "pm2_5", "pm4", "pm10"]), default="pm2_5", show_default=True)
+@click.option("--issue", type=click.IntRange(1, 2**53), default=1, show_default=True, help="Must rise with each.")
+@click.option("--valid-from", metavar="TIME", help="Like 2026-12-01T09:15:00Z; now without it.")
+@click.option("--valid-days", type=click.FloatRange(0.0, 3660.0, min_open=True), default=365.0, show_default=True)
+@click.option("--fits-revision", type=click.IntRange(0, 65535), help="The revision byte of the sensor it is for.")
+@click.option("--reference-words", default="reference record beside the sensor", help="What the reference is.")
+@click.option("--model", type=click.Choice(MODELS), help="This form, and not the simplest that is good enough.")
+@click.option("--robust", is_flag=True, help="Hours that stick out weigh less (Huber).")
+@click.option(
+    "--limit-value",
+    type=click.FloatRange(1.0, 1000.0),
+    default=30.0,
+    show_default=True,
+    help="ug/m3 at which the expanded uncertainty is stated.",
+)
+@click.option(
+    "--reference-random",
+    type=click.FloatRange(0.0, 1.0),
+    default=0.5,
+    show_default=True,
+    help="Share of the variance u^2 of the reference that is drawn anew each time; the rest is the same all along.",
+)
+@click.option(
+    "--u-rh",
+    type=click.FloatRange(0.0, 50.0),
+    default=1.0,
+    show_default=True,
+    help="What the humidity sensor may be off by since the fit, %.",
+)
+@json_option
+def fit(  # noqa: PLR0913, PLR0917 (an option each)
+    device: Path,
+    reference: Path,
+    out: Path,
+    sensor: str | None,
+    channel: str,
+    issue: int,
+    valid_from: str | None,
+    valid_days: float,
+    fits_revision: int | None,
+    reference_words: str,
+    model: str | None,
+    robust: bool,
+    limit_value: float,
+    reference_random: float,
+    u_rh: float,
+    as_json: bool,
+) -> None:
+    """Fit a calibration document to readings of a sensor that stood beside a reference.
+
+    Writes <sensor>.toml, metrics.json and page.html into --out. Look at the page, rehearse the document, then sign it.
+    """
+    from dataclasses import replace  # noqa: PLC0415 (see above)
+
+    from moteferry.fit import command  # noqa: PLC0415
+    from moteferry.fit.folder import Sources  # noqa: PLC0415
+
+    request = command.request_of(issue, valid_from, valid_days, reference_words, u_rh, fits_revision)
+    request = replace(request, model=model, robust=robust, limit_value=limit_value)
+    command.run(Sources(device, reference, channel, sensor, reference_random), request, out, as_json=as_json)
+
+
 @main.command()
 @click.argument("documents", nargs=-1, type=FILE)
 @click.option("--broker", default="localhost", show_default=True, metavar="HOST[:PORT]", help="Port 8883 with TLS.")
