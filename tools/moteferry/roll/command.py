@@ -30,6 +30,7 @@ from motekeep.instant import from_rfc3339, rfc3339
 
 # Nothing says that all retained messages have come: they have when nothing came for this long, at most after LISTEN_S.
 QUIET_S = 1.5
+SETTLED_S = 0.3  # when health and state of every target have come
 LISTEN_S = 20.0
 
 
@@ -152,7 +153,7 @@ def _listening(wish: Wish, fleet: Fleet) -> Iterator[Link]:
                     case Came(topic, payload, retained):
                         if fleet.hear(topic, payload, retained=retained, now=time.time()) and retained:
                             quiet_since = time.monotonic()
-            if up and time.monotonic() - quiet_since > QUIET_S:
+            if up and time.monotonic() - quiet_since > (SETTLED_S if fleet.complete else QUIET_S):
                 break
         if not up:
             raise RollError(f"connecting to {broker.host}:{broker.port}", "no answer", "look at --broker")
@@ -169,7 +170,7 @@ def _roll(
 ) -> tuple[bool, dict[str, Any]]:
     """Whether all is well, and the same as JSON."""
     now = time.time()
-    plan = make_plan(offers, fleet, now)
+    plan = make_plan(offers, fleet, now, unwell_too=kind == "undo")
     where = f"{wish.broker.host}:{wish.broker.port}"
     _note_found(register, offers, fleet, now)
     if not wish.yes:

@@ -169,6 +169,11 @@ class Fleet:
             self.not_understood += 1
         return ()
 
+    @property
+    def complete(self) -> bool:
+        """Whether everything that can be known of the targets has been heard."""
+        return len(self.states) == len(self.targets) and len(self.reports) == len(self._of_gateway)
+
     def report(self, target: Target) -> Report | None:
         return self.reports.get(target[:2])
 

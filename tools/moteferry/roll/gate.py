@@ -114,10 +114,13 @@ def judge(case: Case, sight: Sight, rule: Rule) -> Judgement:
 
 
 def _unanswered(case: Case, sight: Sight, rule: Rule) -> Judgement:
-    refusal = sight.state.refusal_of(case.offer.digest) if sight.state is not None else None
+    state, digest = sight.state, case.offer.digest
+    refusal = state.refusal_of(digest) if state is not None else None
     # what the device said before we offered is no answer to it
-    if refusal is not None and (refusal.at is None or refusal.at != case.before.refused_at):
-        return Judgement(Step.WITHDRAWN if refusal.withdrawn else Step.REFUSED, refusal.words)
+    if state is not None and refusal is not None and (refusal.at is None or refusal.at != case.before.refused_at):
+        if refusal.withdrawn:
+            return Judgement(Step.WITHDRAWN, _gone(state, digest))
+        return Judgement(Step.REFUSED, refusal.words)
     if min(sight.now - case.offered_at, sight.listening_s) > rule.patience_s:
         return Judgement(Step.SILENT, f"no answer in {told(rule.patience_s)}")
     return Judgement(Step.OFFERED)

@@ -59,9 +59,15 @@ class Plan:
         return [entry for entry in self.entries if entry.standing not in fine and entry.target not in rolled]
 
 
-def make_plan(offers: Iterable[Offer], fleet: Fleet, now: float) -> Plan:
-    """In the order of the offers, those of gateways that are wholly normal first: they make the better canaries."""
-    entries = [_entry(offer, fleet.states.get(offer.target), fleet.report(offer.target), now) for offer in offers]
+def make_plan(offers: Iterable[Offer], fleet: Fleet, now: float, *, unwell_too: bool = False) -> Plan:
+    """In the order of the offers, those of gateways that are wholly normal first: they make the better canaries.
+
+    `unwell_too`: the way back is also for those that the way there has made ill.
+    """
+    entries = [
+        _entry(offer, fleet.states.get(offer.target), fleet.report(offer.target), now, unwell_too=unwell_too)
+        for offer in offers
+    ]
     return Plan(sorted(entries, key=lambda e: not _normal(fleet.report(e.target))))
 
 
@@ -69,9 +75,13 @@ def _normal(report: Report | None) -> bool:
     return report is not None and report.health.status == "normal"
 
 
-def _entry(offer: Offer, state: CalibrationState | None, report: Report | None, now: float) -> Entry:
+def _entry(
+    offer: Offer, state: CalibrationState | None, report: Report | None, now: float, *, unwell_too: bool
+) -> Entry:
     in_force = state.in_force if state is not None else None
     standing, why = _standing(offer, state, report, now)
+    if standing is Standing.NOT_WELL and unwell_too:
+        standing = Standing.OFFER
     return Entry(offer, standing, why, in_force.issue if in_force is not None else None)
 
 
