@@ -4,8 +4,9 @@
 
 Each fault of the graded set runs at several strengths, on units drawn at random, at ten kinds of sites, at a cadence of
 6 s and of 1 s, with and without a twin; then the ordinary weather set runs with nothing wrong. Printed are, per fault:
-cases, how many were found within the bar, how long it took (median, 90 %, worst), and how many opened a wrong finding of
-fan or optics kind instead or beside; then false findings per sensor-year, each with its evidence.
+cases, how many were found within the bar, how long it took (median, 90 %, worst), and how many opened a wrong finding
+of fan or optics kind instead or beside; then false findings per sensor-year, each with its evidence; then how often
+findings were true at each confidence that they opened with.
 
 Seeds of the two sets are apart. The judging set is run once, for the record: whoever tunes a check uses the other one.
 `--scale 0.2` runs a fifth of the cases. Results depend on nothing but code and seed. Exits 1 when a bar is missed.
@@ -51,7 +52,8 @@ class Stretch(NamedTuple):
 
 @dataclass(frozen=True, slots=True)
 class Outcome:
-    """What became of one case. `took_s` is None when it was not found at all; `wrong` are other physical findings."""
+    """What became of one case. `took_s` is None when it was not found at all; `wrong` are other physical findings, and
+    `early` those before the fault began. `opened` has the confidence of each such finding and whether it was true."""
 
     kind: str
     label: str
@@ -62,6 +64,7 @@ class Outcome:
     wrong: tuple[str, ...]
     early: tuple[str, ...]
     told: str
+    opened: tuple[tuple[float, bool], ...]
 
     @property
     def found(self) -> bool:
@@ -82,8 +85,10 @@ def run_case(kind: str, number: int, period_s: float, seed: int) -> Outcome:
     took = right[0].at - onset if right else None
     if took is None and any(f.code == case.code for f in late):
         took = 0.0  # found while it was still below its limit
+    judged = [f for f in events if f.code in (*PHYSICAL, case.code)]
+    opened = tuple([(f.confidence, f in late and f.code == case.code) for f in judged])
     told = right[0].evidence if right else "; ".join(f"{f.code} {f.evidence}" for f in late)
-    return Outcome(kind, case.label, period_s, number, took, bar, tuple(wrong), tuple(early), told[:300])
+    return Outcome(kind, case.label, period_s, number, took, bar, tuple(wrong), tuple(early), told[:300], opened)
 
 
 def _begins(plan: SitePlan, onset: float) -> float:
@@ -144,6 +149,7 @@ def main() -> int:
     print(file=sys.stderr)
     good = report(outcomes)
     good = report_weather(weather) and good
+    report_confidence(outcomes, weather)
     if options.json:
         rows = [asdict(o) for o in outcomes]
         false = [[name, period, asdict(f)] for name, period, _, found in weather for f in found]
@@ -212,6 +218,19 @@ def report_weather(rows: list[Stretch]) -> bool:
     if others:
         print("  others: " + ", ".join(f"{code} {n}" for code, n in others.most_common()))
     return len(physical) / years < BAR_FALSE and not failures
+
+
+def report_confidence(outcomes: list[Outcome], weather: list[Stretch]) -> None:
+    """A finding opened at 0.9 should be true nine times in ten, over faults and ordinary weather together."""
+    opened = [item for o in outcomes for item in o.opened]
+    opened += [(f.confidence, False) for stretch in weather for f in stretch.found if f.code in PHYSICAL]
+    if not opened:
+        return
+    print("\nconfidence at opening: how many, and the share that was true")
+    for low, high in ((0.0, 0.6), (0.6, 0.75), (0.75, 0.85), (0.85, 0.95), (0.95, 1.01)):
+        inside = [true for confidence, true in opened if low <= confidence < high]
+        if inside:
+            print(f"  {low:.2f} to {min(high, 1.0):.2f}: {len(inside):5}, {sum(inside) / len(inside):.1%} true")
 
 
 if __name__ == "__main__":
