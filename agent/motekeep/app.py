@@ -8,6 +8,7 @@ import os
 import signal
 import sys
 from collections.abc import Callable, Iterator
+from functools import partial
 from pathlib import Path
 from threading import Event
 from typing import Any
@@ -17,6 +18,8 @@ import structlog
 from motekeep import __version__
 from motekeep.config import Config, FileClimate, FixedClimate, FrameClimate, Sensor, TopicClimate, load
 from motekeep.edges.broker import MqttBroker
+from motekeep.edges.calibration_spool import CalibrationSpool
+from motekeep.edges.capture_folder import CaptureFolder
 from motekeep.edges.climate import SysfsClimate
 from motekeep.edges.clock import SystemClock
 from motekeep.edges.host import Host
@@ -26,14 +29,18 @@ from motekeep.edges.ports import Clock, JournalWriter, Line
 from motekeep.edges.serial_line import open_line
 from motekeep.edges.service_spool import ServiceSpool
 from motekeep.edges.shelf import Shelf
+from motekeep.edges.signers import Signers
 from motekeep.edges.systemd import ServiceManager, secret_file
-from motekeep.errors import ConfigError
+from motekeep.errors import ConfigError, StoreError
 from motekeep.instant import Instant
 from motekeep.loops.backoff import Backoff
-from motekeep.loops.calibration import CalibrationFeed
+from motekeep.loops.calibration import CalibrationFeed, Desk
 from motekeep.loops.climate import ClimateFeed
+from motekeep.loops.examination import Examination
+from motekeep.loops.examiner import Examiner
 from motekeep.loops.facts import Facts
 from motekeep.loops.housekeeping import Housekeeping
+from motekeep.loops.inbox import Other, Standing, down_filters
 from motekeep.loops.intake import Intake
 from motekeep.loops.late_journal import LateJournal
 from motekeep.loops.publisher import Publisher, PublisherSettings
@@ -42,6 +49,7 @@ from motekeep.loops.recorder import Recorder, RecorderSettings
 from motekeep.loops.rows import RowSettings
 from motekeep.loops.service import ServiceFeed, ServiceFeedSettings
 from motekeep.loops.supervisor import Hand, Supervisor
+from motekeep.loops.switch import SoakRule, Switch
 from motekeep.measure.account import Limits
 from motekeep.measure.climate import FIXED, from_message
 from motekeep.measure.hourly import HOUR_S, WINDOW_HOURS
@@ -59,6 +67,9 @@ PRUNE_EVERY_S = 3600.0
 ROWS_A_PAGE = 200  # some 100 kB at a time
 BUSY_S = 60.0  # checking a journal goes on in steps of less than a second; a minute more is asked for with each
 CONFIG_LOOK_S = 10.0
+# A rehearsal reads every reading of a day of minutes; of more, every second, third ... one is as good.
+MOST_REHEARSED = 1440
+DAY_S = 86400
 WILL_DELAY_S = 10  # forgives a link that is back at once; from afar ten seconds more are nothing
 
 
@@ -120,8 +131,13 @@ class Daemon:
         self._config = config
         self._clock = clock
         self._busy = busy
+        self._store: Journal | None = None
         self._intake = intake = Intake(Pipeline(place, config.interval, sensor_setups(config), now))
         self._journal = LateJournal(str(config.store.path))
+        shelf = Shelf(config.calibration.folder, config.site, config.gateway)
+        signers = Signers(config.calibration.signers, config.calibration.revoked)
+        examination = Examination(place, signers, self._last_day, config.calibration.max_shift)
+        examiner = Examiner(examination, lambda sensor: switch.record(sensor), clock, stop)  # noqa: PLW0108 (comes later)
         client_id = f"motekeep-{config.site}-{config.gateway}"
         offline = health_offline(config.site, config.gateway, now.boot_id).json_text()
         self._publisher = Publisher(
@@ -133,7 +149,7 @@ class Daemon:
             clock=clock,
             stop=stop,
             farewell=lambda at: health_offline(config.site, config.gateway, at.boot_id).json_text(),
-            others=_climate_topics(config, intake, clock),
+            others={**_climate_topics(config, intake, clock), **_offer_topics(topics, names, examiner)},
         )
         self._recorder = Recorder(
             RecorderSettings(place, topics, config.health.every, Life(0, now.boot_s, __version__)),
@@ -142,15 +158,19 @@ class Daemon:
             self._publisher,
             self._remember,
             Facts(Host(), config.store.path, self._publisher.facts),
+            CaptureFolder(config.store.path.parent),
         )
-        shelf = Shelf(config.calibration.folder, config.site, config.gateway)
-        self._calibration = CalibrationFeed(shelf, names, intake)
+        rule = SoakRule(config.calibration.max_shift, config.calibration.soak)
+        switch = Switch(shelf, intake, self._recorder, rule)
+        asked = CalibrationSpool(config.calibration.folder)
+        desk = Desk(place, topics, signers, switch, self._recorder, examiner, asked, self._publisher.post)
+        self._calibration = CalibrationFeed(shelf, names, intake, desk)
         spool = ServiceSpool(config.store.path)
         self._service = ServiceFeed(ServiceFeedSettings(place, names), spool, intake, self._recorder.has_service)
         self._climate = _climate_feed(config, intake, now)
         self._housekeeping = Housekeeping({"prune": (PRUNE_EVERY_S, self._recorder.prune_soon)})
         readers = [Hand(f"reader-{s.name}", _reader(s, intake, clock, stop)) for s in config.sensor]
-        hands = [Hand("publisher", self._publisher), *readers]
+        hands = [Hand("publisher", self._publisher), Hand("examiner", examiner), *readers]
         self._supervisor = Supervisor(hands, self._turn, alive, clock, stop)
 
     def run(self) -> int:
@@ -162,10 +182,10 @@ class Daemon:
 
     def _turn(self, at: Instant) -> None:
         self._climate.turn(at)
-        self._calibration.turn(at)
         self._service.turn(at)
         self._housekeeping.watch(at)
-        self._recorder.turn(at)
+        made = self._recorder.turn(at)
+        self._calibration.turn(at, made)
 
     def _stopping(self) -> None:
         self._recorder.finish(self._clock.now())
@@ -179,21 +199,38 @@ class Daemon:
         self._journal.attach(journal.reader())
         return journal
 
+    def _last_day(self, sensor: str) -> Iterator[ReadingDocument]:
+        """A sensor's readings of its last day of measuring, in any thread. Raises StoreError without a journal."""
+        if self._store is None:
+            raise StoreError("rehearsing", "the journal is not open yet", "it is tried again")
+        end = self._store.next_seq(sensor)
+        count = DAY_S // self._config.interval
+        every = -(-count // MOST_REHEARSED)
+        return _readings(self._store, sensor, max(end - count, 1), end, every)
+
     def _remember(self) -> None:
         for sensor in self._config.sensor:
+            assert self._store is not None  # noqa: S101 (called once the journal is open)
             self._intake.remember(sensor.name, _last_readings(self._store, sensor.name, self._config.interval))
 
 
 def _last_readings(journal: Journal, sensor: str, interval_s: int) -> Iterator[ReadingDocument]:
     """The readings that hourly values may still be made of, from the journal."""
-    reader = journal.reader()
     end = journal.next_seq(sensor)
-    first = max(end - int(WINDOW_HOURS * HOUR_S / interval_s), 1)
-    while rows := reader.stored(sensor, first, end, ROWS_A_PAGE):
-        for row in rows:
-            yield ReadingDocument.model_validate_json(row.body)
-        first = rows[-1].seq + 1
-    reader.close()
+    return _readings(journal, sensor, max(end - int(WINDOW_HOURS * HOUR_S / interval_s), 1), end)
+
+
+def _readings(journal: Journal, sensor: str, first: int, end: int, every: int = 1) -> Iterator[ReadingDocument]:
+    """Every so many of the stored readings of a range of numbers."""
+    reader = journal.reader()
+    try:
+        while rows := reader.stored(sensor, first, end, ROWS_A_PAGE):
+            for row in rows:
+                if row.seq % every == 0:
+                    yield ReadingDocument.model_validate_json(row.body)
+            first = rows[-1].seq + 1
+    finally:
+        reader.close()
 
 
 def run(config_path: Path, log_style: str) -> int:
@@ -274,7 +311,7 @@ def broker_settings(config: Config, client_id: str, will: tuple[str, str]) -> Br
         port=broker.port,
         client_id=client_id,
         will=will,
-        filters=(topics.resend, topics.taken("+"), *_climate_sensors(config)),
+        filters=(*down_filters(topics), *_climate_sensors(config)),
         username=broker.username,
         password_file=None if broker.password_file is None else secret_file(broker.password_file),
         tls=None if tls is None else Tls(tls.ca, tls.cert, None if tls.key is None else secret_file(tls.key)),
@@ -312,6 +349,10 @@ def _climate_topics(config: Config, intake: Intake, clock: Clock) -> dict[str, C
         return take
 
     return {topic: taker(names) for topic, names in _climate_sensors(config).items()}
+
+
+def _offer_topics(topics: Topics, sensors: list[str], examiner: Examiner) -> dict[str, Other]:
+    return {topics.calibration_offer(s): Standing(partial(examiner.offer, s)) for s in sensors}
 
 
 def _climate_feed(config: Config, intake: Intake, now: Instant) -> ClimateFeed:

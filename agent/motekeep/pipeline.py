@@ -12,10 +12,10 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from motekeep.health.check import LineState
-from motekeep.health.finding import Finding, FindingEvent
+from motekeep.health.finding import Category, Finding, FindingEvent
 from motekeep.health.gateway import GatewayFacts, GatewayHealth
 from motekeep.health.sensor import DEFAULT_LIMITS, SensorHealth
-from motekeep.instant import Instant, from_rfc3339
+from motekeep.instant import Instant, from_rfc3339, rfc3339
 from motekeep.measure.account import Account, Limits
 from motekeep.measure.amendment import Amendment, Amendments
 from motekeep.measure.climate import FIXED
@@ -35,6 +35,7 @@ from motekeep.message.documents import (
 )
 from motekeep.message.health import SensorAccount
 from motekeep.message.hourly import hourly_document, sample_of_document
+from motekeep.ring import Ring
 from motekeep.wire.frame import Damage, Decoder, Dialect, Observation
 
 STEP_S = 1.0  # a jump of the wall clock beyond this is a step; time services slew smaller ones
@@ -58,6 +59,14 @@ class SensorSetup:
 
 
 @dataclass(frozen=True, slots=True)
+class Capture:
+    """What a sensor said in the two minutes before a failure was found: the name of its file, and its lines."""
+
+    name: str
+    text: str
+
+
+@dataclass(frozen=True, slots=True)
 class Harvest:
     """Everything finished since the last harvest, in order, and what changed of the state to keep: `keep` changes all
     the time and may be left out now and then, `notes` are given once an hour and must not be."""
@@ -67,6 +76,7 @@ class Harvest:
     findings: tuple[FindingDocument, ...] = ()
     amendments: tuple[AmendDocument, ...] = ()
     services: tuple[ServiceDocument, ...] = ()
+    captures: tuple[Capture, ...] = ()
     keep: Mapping[str, str] = field(default_factory=dict)
     notes: Mapping[str, str] = field(default_factory=dict)
 
@@ -113,6 +123,7 @@ class _Sensor:
     health: SensorHealth
     cadence: Cadence
     decoder: Decoder
+    ring: Ring = field(default_factory=Ring)
     twin_health: SensorHealth | None = None
     seq: int | None = None
     accumulator: Accumulator = field(default_factory=Accumulator)
@@ -148,6 +159,7 @@ class Pipeline:
         self._events: list[FindingEvent] = []
         self._amendments: list[AmendDocument] = []
         self._services: list[ServiceDocument] = []
+        self._captures: dict[FindingEvent, Capture] = {}
 
     @staticmethod
     def _sensor(setup: SensorSetup, at: Instant) -> _Sensor:
@@ -200,6 +212,7 @@ class Pipeline:
         self.advance(at)
         sensor = self._sensors[name]
         health = sensor.health
+        sensor.ring.add(data, at)
         health.heard(data, at)
         events = sensor.decoder.feed(data)
         if not events:
@@ -225,6 +238,7 @@ class Pipeline:
         self.advance(at)
         sensor = self._sensors[name]
         sensor.health.line(state, at, why)
+        sensor.ring.line(state, at)
         if state is LineState.OPENED:
             sensor.decoder.reset()
         elif state is LineState.ASLEEP:
@@ -364,6 +378,16 @@ class Pipeline:
             for event in events:
                 if event.opened and event.finding.flag is not None:
                     self._backdate(sensor, event, event.finding.flag)
+                if event.opened and event.finding.category is Category.FAILURE:
+                    self._capture(sensor, event, at)
+
+    def _capture(self, sensor: _Sensor, event: FindingEvent, at: Instant) -> None:
+        """Keep what the line said in the two minutes before a failure was found."""
+        name, finding = sensor.setup.name, event.finding
+        text = sensor.ring.text(name, f"{finding.code} of {name} found at {rfc3339(event.at)}: {finding.evidence}", at)
+        if text is not None:
+            stamp = rfc3339(int(event.at)).replace("-", "").replace(":", "")
+            self._captures[event] = Capture(f"{stamp}-{name}-{finding.code}.txt.gz", text)
 
     def _backdate(self, sensor: _Sensor, event: FindingEvent, flag: int) -> None:
         """Readings of earlier spans in which a finding that has just opened held already get its flag."""
@@ -382,13 +406,16 @@ class Pipeline:
 
     def harvest(self) -> Harvest:
         """Everything finished since the last harvest."""
-        readings, findings = tuple(self._readings), tuple([finding_document(e) for e in self._events])
+        readings, captures = tuple(self._readings), self._captures
+        findings = tuple([finding_document(e, captures[e].name if e in captures else None) for e in self._events])
         services = tuple(self._services)
         keep = self._memories() if readings or findings or services else {}
         notes = self._notes() if readings or services else {}
         hours = self._hours() if readings or self._amendments else ()
-        harvest = Harvest(readings, hours, findings, tuple(self._amendments), services, keep, notes)
-        self._readings, self._events, self._amendments, self._services = [], [], [], []
+        harvest = Harvest(
+            readings, hours, findings, tuple(self._amendments), services, tuple(captures.values()), keep, notes
+        )
+        self._readings, self._events, self._amendments, self._services, self._captures = [], [], [], [], {}
         return harvest
 
     def _hours(self) -> tuple[HourlyDocument, ...]:

@@ -14,6 +14,7 @@ from pathlib import Path
 from typing import IO
 
 from motekeep.capture import ClimateRecord, FrameRecord, LineRecord, Record, ServiceRecord, parse_line
+from motekeep.edges.capture_folder import CaptureFolder
 from motekeep.errors import CaptureError
 from motekeep.instant import Instant, rfc3339
 from motekeep.measure.document import CalibrationDocument
@@ -55,10 +56,11 @@ class Summary:
 class Results:
     """The result files while they grow. Hours are kept until the end: an amendment may still change one."""
 
-    def __init__(self, readings: IO[str], findings: IO[str], summary: Summary) -> None:
+    def __init__(self, readings: IO[str], findings: IO[str], summary: Summary, captures: CaptureFolder) -> None:
         self._readings = readings
         self._findings = findings
         self._summary = summary
+        self._captures = captures
         self._hours: dict[tuple[str, str], str] = {}  # start and sensor to the line; 9,000 a sensor and year
 
     def write(self, harvest: Harvest) -> None:
@@ -66,10 +68,12 @@ class Results:
             self._readings.write(reading.json_text() + "\n")
             self._summary.readings[reading.sensor] += 1
         for finding in harvest.findings:
-            line = finding.model_dump(mode="json", exclude={"schema_", "remedy"})
+            line = finding.model_dump(mode="json", exclude={"schema_", "remedy", "capture"})
             self._findings.write(json.dumps(line) + "\n")
             if finding.event == "opened":
                 self._summary.findings[finding.code] += 1
+        for capture in harvest.captures:
+            self._captures.keep(capture.name, capture.text)
         for hour in harvest.hours:
             self._hours[hour.start, hour.sensor] = hour.json_text()
 
@@ -101,7 +105,7 @@ def replay(
     with ExitStack() as stack:
         readings = stack.enter_context((out / "readings.ndjson").open("w", encoding="utf-8"))
         findings = stack.enter_context((out / "findings.ndjson").open("w", encoding="utf-8"))
-        results = Results(readings, findings, summary)
+        results = Results(readings, findings, summary, CaptureFolder(out))
         streams = [_records(stack, path, progress) for path in captures]
         merged = streams[0] if len(streams) == 1 else heapq.merge(*streams, key=lambda r: r.t)
         pipeline: Pipeline | None = None

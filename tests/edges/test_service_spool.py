@@ -2,6 +2,7 @@
 
 import os
 import stat
+from contextlib import suppress
 from pathlib import Path
 
 import pytest
@@ -95,9 +96,7 @@ def test_a_link_a_pipe_and_a_folder_are_refused_and_none_hangs(spool: ServiceSpo
         (record("00000000-ffffffff").json_text(), "named unlike its id"),
     ],
 )
-def test_what_is_no_record_is_refused_by_file_and_key_and_kept_aside(
-    spool: ServiceSpool, text: str, said: str
-) -> None:
+def test_what_is_no_record_is_refused_by_file_and_key_and_kept_aside(spool: ServiceSpool, text: str, said: str) -> None:
     spool.put(record())
     [name] = spool.waiting()
     (spool.folder / name).write_text(text)
@@ -125,7 +124,5 @@ def test_bytes_of_any_kind_give_a_record_or_a_named_error(data: bytes) -> None:
         spool.put(record())
         [name] = spool.waiting()
         (spool.folder / name).write_bytes(data)
-        try:
+        with suppress(ServiceError):
             assert isinstance(spool.read(name), ServiceDocument)
-        except ServiceError:
-            pass

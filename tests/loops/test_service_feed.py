@@ -7,6 +7,7 @@ from structlog.testing import capture_logs
 
 from clocks import MORNING, FakeClock
 from journal_site import TOPICS
+from motekeep.edges.capture_folder import CaptureFolder
 from motekeep.edges.journal import Journal, JournalSettings
 from motekeep.edges.journal_view import JournalView
 from motekeep.edges.ports import JournalWriter, StoreState
@@ -50,7 +51,9 @@ class Gateway:
         self.pipeline = Pipeline(PLACE, 60, [SensorSetup(name, BM) for name in ("north", "south")], now)
         intake = Intake(self.pipeline)
         settings = RecorderSettings(PLACE, TOPICS, 60.0, Life(0, now.boot_s, "0"))
-        self.recorder = Recorder(settings, intake, self._open, Outlet(), lambda: None, self._facts)
+        self.recorder = Recorder(
+            settings, intake, self._open, Outlet(), lambda: None, self._facts, CaptureFolder(folder)
+        )
         feed_settings = ServiceFeedSettings(PLACE, ("north", "south"))
         self.feed = ServiceFeed(feed_settings, self.spool, intake, self.recorder.has_service)
         self._slot = 0

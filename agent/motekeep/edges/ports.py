@@ -193,6 +193,14 @@ class JournalReader(Protocol):
     def mark_notices(self, rows: Sequence[NoticeRow]) -> None: ...
 
 
+class CaptureStore(Protocol):
+    """Where what a failing sensor said is kept for whoever looks into it."""
+
+    def keep(self, name: str, text: str) -> None:
+        """Write a capture under this file name; the oldest go beyond a limit. Raises StoreError."""
+        ...
+
+
 @dataclass(frozen=True, slots=True)
 class Connected:
     """The broker accepted us; its limits (`receive_maximum` messages in flight, `maximum_packet` bytes)."""

@@ -14,7 +14,7 @@ from typing import Protocol
 
 import structlog
 
-from motekeep.edges.ports import Batch, JournalWriter, NewReading, NewService, Notice, StoreState
+from motekeep.edges.ports import Batch, CaptureStore, JournalWriter, NewReading, NewService, Notice, StoreState
 from motekeep.errors import StoreError
 from motekeep.health.finding import Finding
 from motekeep.health.gateway import GatewayFacts
@@ -61,7 +61,7 @@ class Recorder:
     are part of, as soon as the clock can be trusted and they have got their times.
     """
 
-    def __init__(
+    def __init__(  # noqa: PLR0913 (its neighbours, each of which it talks to)
         self,
         settings: RecorderSettings,
         intake: Intake,
@@ -69,6 +69,7 @@ class Recorder:
         outlet: Outlet,
         remember: Callable[[], None],
         facts: Callable[[StoreState, Instant], tuple[GatewayFacts, LinkHealth]],
+        captures: CaptureStore,
     ) -> None:
         self._settings = settings
         self._life = settings.life
@@ -81,6 +82,7 @@ class Recorder:
         self._outlet = outlet
         self._remember = remember
         self._facts = facts
+        self._captures = captures
         self._facts_at = self._health_at = self._kept_at = float("-inf")
         self._ending = False
         self._told: object = None
@@ -89,7 +91,8 @@ class Recorder:
         self._prune_due = Event()
         self._posted_hours: dict[str, str] = {}  # by sensor, RFC 3339: these sort by time
 
-    def turn(self, at: Instant) -> None:
+    def turn(self, at: Instant) -> tuple[ReadingDocument, ...]:
+        """The readings that were recorded."""
         if self._journal is None and at.boot_s >= self._open_at:
             self._open(at)
         facts = None
@@ -104,6 +107,7 @@ class Recorder:
         if self._journal is not None and self._prune_due.is_set():
             self._prune_due.clear()
             self._journal.prune(at)
+        return harvest.readings
 
     def prune_soon(self) -> None:
         """Prune at the next turn; from any thread."""
@@ -112,6 +116,21 @@ class Recorder:
     def has_service(self, id_: str) -> bool | None:
         """Whether the journal has this service record; None while there is no journal."""
         return None if self._journal is None else self._journal.has_service(id_)
+
+    @property
+    def opened(self) -> bool:
+        """Whether there is a journal."""
+        return self._journal is not None
+
+    def recall(self, name: str) -> str | None:
+        """What the journal keeps under a name; None also without one."""
+        return None if self._journal is None else self._journal.kept(name)
+
+    def keep(self, values: Mapping[str, str], at: Instant) -> None:
+        """A transaction of its own, durable when this returns; only once there is a journal."""
+        if self._journal is None:
+            raise StoreError("keeping " + ", ".join(values), "the journal is not open", "check disk and [store] path")
+        self._journal.commit(Batch(keep=values), at)
 
     def _open(self, at: Instant) -> None:
         try:
@@ -144,6 +163,14 @@ class Recorder:
             self._journal = None
 
     def _record(self, harvest: Harvest, at: Instant) -> None:
+        self._commit(harvest, at)
+        for capture in harvest.captures:
+            try:
+                self._captures.keep(capture.name, capture.text)
+            except StoreError as error:  # it only helps to understand a finding that is durable already
+                log.warning("capture.not_kept", error=str(error))
+
+    def _commit(self, harvest: Harvest, at: Instant) -> None:
         if self._journal is None:
             return
         if at.trusted and not self._vouched:

@@ -74,7 +74,8 @@ def size_key(size_um: float) -> str:
     return f"{size_um:g}" if size_um >= 10 else f"{size_um:.1f}"
 
 
-def finding_document(event: FindingEvent) -> FindingDocument:
+def finding_document(event: FindingEvent, capture: str | None = None) -> FindingDocument:
+    """A finding as it opens or closes; `capture` names the file of what the sensor said before."""
     finding = event.finding
     document: dict[str, object] = {
         "schema": "motekeep/finding/1",
@@ -89,6 +90,8 @@ def finding_document(event: FindingEvent) -> FindingDocument:
     }
     if finding.sensor is not None:
         document["sensor"] = finding.sensor
+    if capture is not None:
+        document["capture"] = capture
     return FindingDocument.model_validate(document)
 
 

@@ -158,6 +158,9 @@ class FindingDocument(Document):
     confidence: float
     evidence: str
     remedy: str
+    capture: str | None = Field(
+        default=None, description="file on the gateway with what the sensor said in the two minutes before a failure"
+    )
 
 
 class ServiceDocument(Document):
@@ -273,8 +276,8 @@ class CalibrationRefused(Document):
 
 
 class CalibrationStateDocument(Document):
-    """How a sensor is calibrated. `highest_issue` is what the next issue must exceed. `soak_until` is when a new
-    document has proven itself, if measuring goes on; null once it has."""
+    """How a sensor is calibrated. `highest_issue` is the highest ever accepted: the next one must exceed it, while its
+    signer is trusted. `soak_until` is when a new document has proven itself, if measuring goes on; null once it has."""
 
     schema_: Literal["motekeep/calibration/1"] = Field(alias="schema")
     site: str
