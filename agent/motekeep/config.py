@@ -154,6 +154,7 @@ class Store(Section):
 class Calibration(Section):
     folder: Path = Path("/var/lib/motekeep/calibration")
     signers: Path = Path("/etc/motekeep/signers")
+    revoked: Path | None = None
     max_shift: float = Field(default=0.5, gt=0, le=10)
     soak: float = Field(default=3600.0, ge=0)
     required: bool = False

@@ -19,6 +19,18 @@ log = structlog.get_logger()
 
 # An archive that has lost a disk asks once for each sensor and hole; whoever asks more often waits and asks again.
 RESENDS_MOST = 16
+
+
+@dataclass(frozen=True, slots=True)
+class Standing:
+    """Reads a topic whose retained message stands until it is replaced: its age says nothing against it."""
+
+    read: Callable[[bytes], None]
+
+
+# What reads a topic that this inbox does not read itself; the plain kind is for news only.
+Other = Callable[[bytes], None] | Standing
+
 SEQ_MOST = 2**63 - 1  # what the journal can look up
 
 
@@ -34,7 +46,7 @@ class Resend:
 class Inbox:
     """`taken` is called with sensor and sequence number for every receipt; it says what is wrong with it, if so.
 
-    `others` are topics outside of our own tree with what reads them; such a reader raises ValueError for a bad payload.
+    `others` are further topics with what reads them; such a reader raises ValueError for a bad payload.
     """
 
     def __init__(
@@ -42,7 +54,7 @@ class Inbox:
         topics: Topics,
         sensors: Sequence[str],
         taken: Callable[[str, int], str | None],
-        others: Mapping[str, Callable[[bytes], None]] | None = None,
+        others: Mapping[str, Other] | None = None,
     ) -> None:
         self.resends: deque[Resend] = deque()
         self.bad = 0
@@ -51,7 +63,7 @@ class Inbox:
         self._readers: Mapping[str, Callable[[Received], str | None]] = {
             topics.resend: self._read_resend,
             **{topics.taken(sensor): self._reader_of_taken(sensor) for sensor in sensors},
-            **{topic: self._reader_of_present(read) for topic, read in (others or {}).items()},
+            **{topic: self._reader_of_other(read) for topic, read in (others or {}).items()},
         }
 
     def receive(self, message: Received) -> bool:
@@ -76,11 +88,12 @@ class Inbox:
         self.resends.clear()
 
     @staticmethod
-    def _reader_of_present(read: Callable[[bytes], None]) -> Callable[[Received], str | None]:
-        """For what only counts while it is news: a retained message may be of any age, and is passed over."""
+    def _reader_of_other(other: Other) -> Callable[[Received], str | None]:
+        """What only counts while it is news is passed over when it was retained: it may be of any age."""
+        standing, read = (True, other.read) if isinstance(other, Standing) else (False, other)
 
         def reader(message: Received) -> str | None:
-            if not message.retained:
+            if standing or not message.retained:
                 read(message.payload)
             return None
 
@@ -121,4 +134,4 @@ class Inbox:
 
 def down_filters(topics: Topics) -> tuple[str, ...]:
     """What the broker edge subscribes to for this inbox."""
-    return topics.resend, topics.taken("+")
+    return topics.resend, topics.taken("+"), topics.calibration_offer("+")

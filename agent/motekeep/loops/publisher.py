@@ -26,6 +26,7 @@ from motekeep.edges.ports import (
 from motekeep.errors import BrokerError, StoreError
 from motekeep.instant import Instant
 from motekeep.loops.backoff import Backoff
+from motekeep.loops.inbox import Other
 from motekeep.loops.link import LinkFacts, LinkLedger
 from motekeep.loops.outbox import Outbox
 from motekeep.loops.papers import Papers
@@ -55,7 +56,7 @@ class Publisher:
     """`run` returns within 2 s of `stop` being set and `wake` called.
 
     Whoever commits to the journal calls `wake`; whoever has a new retained document calls `post`. `farewell` makes the
-    last health document. `others` are topics outside of our own tree, with what takes their payloads.
+    last health document. `others` are further topics, with what takes their payloads.
     """
 
     def __init__(  # noqa: PLR0913 (the ports that it joins, each injected)
@@ -69,7 +70,7 @@ class Publisher:
         clock: Clock,
         stop: Event,
         farewell: Callable[[Instant], str],
-        others: Mapping[str, Callable[[bytes], None]] | None = None,
+        others: Mapping[str, Other] | None = None,
     ) -> None:
         now = clock.now()
         self._settings = settings

@@ -11,7 +11,7 @@ import structlog
 
 from motekeep.edges.ports import JournalReader, Row
 from motekeep.instant import Instant
-from motekeep.loops.inbox import Inbox, Resend
+from motekeep.loops.inbox import Inbox, Other, Resend
 from motekeep.loops.lanes import Lane, late_body, size
 from motekeep.loops.outbox import TOO_LARGE, Outbox
 from motekeep.loops.window import Allowance, Flight, Way
@@ -45,7 +45,7 @@ class Rows:
         sensors: Sequence[str],
         outbox: Outbox,
         journal: JournalReader,
-        others: Mapping[str, Callable[[bytes], None]] | None = None,
+        others: Mapping[str, Other] | None = None,
     ) -> None:
         self.inbox = Inbox(topics, sensors, self._taken, others)
         self._settings = settings

@@ -98,12 +98,14 @@ class Move:
     """How far readings of one channel move: `typical`, the median over readings of |value - raw| against raw, and
     `mean`, the same of the mean value against the mean raw, in which peaks weigh by their mass. `readings` were judged.
 
-    Raw below 5 ug/m3 counts as 5. A value that the document cannot state moves without end.
+    Raw below 5 ug/m3 counts as 5. A value that the document cannot state moves without end. `ratio` is the mean value
+    over the mean raw, 1 where either is nothing.
     """
 
     typical: float
     mean: float
     readings: int
+    ratio: float = 1.0
 
     @property
     def most(self) -> float:
@@ -154,11 +156,12 @@ def relative_move(raw: float, value: float) -> float:
 
 
 def _move(pairs: list[tuple[float, float]]) -> Move:
+    typical = median(relative_move(raw, value) for raw, value in pairs)
     finite = [(raw, value) for raw, value in pairs if isfinite(value)]
-    mean = 0.0
-    if finite:
-        mean = relative_move(sum(r for r, _ in finite) / len(finite), sum(v for _, v in finite) / len(finite))
-    return Move(median(relative_move(raw, value) for raw, value in pairs), mean, len(pairs))
+    if not finite:
+        return Move(typical, 0.0, len(pairs))
+    raw, value = sum(r for r, _ in finite) / len(finite), sum(v for _, v in finite) / len(finite)
+    return Move(typical, relative_move(raw, value), len(pairs), value / raw if raw > 0.0 else 1.0)
 
 
 def _flag(reason: str, given: int) -> int:

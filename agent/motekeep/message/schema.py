@@ -43,7 +43,11 @@ CHANNELS = (
     Channel("finding", FindingDocument, False, False, "a finding opened or closed"),
     Channel("service", ServiceDocument, False, False, "what a person did at a sensor"),
     Channel(
-        "calibration/{sensor}/state", CalibrationStateDocument, True, False, "what is in force, what was refused and why"
+        "calibration/{sensor}/state",
+        CalibrationStateDocument,
+        True,
+        False,
+        "what is in force, what was refused and why",
     ),
     Channel("calibration/{sensor}/offer", CalibrationOfferRequest, True, True, "a signed calibration document"),
     Channel("resend", ResendRequest, False, True, "send this range of readings again; answered on late"),
