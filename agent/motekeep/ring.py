@@ -26,6 +26,8 @@ class Ring:
         self._bytes = 0
 
     def add(self, data: bytes, at: Instant) -> None:
+        if not data:
+            return
         data = data[-MOST_BYTES:]
         self._items.append((at.boot_s, data))
         self._bytes += len(data)

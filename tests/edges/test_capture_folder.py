@@ -31,7 +31,7 @@ def test_the_newest_twenty_stay(tmp_path: Path) -> None:
 def test_together_they_stay_within_two_mebibytes(tmp_path: Path) -> None:
     folder = CaptureFolder(tmp_path)
     for n in range(12):
-        folder.keep(name(n), os.urandom(150_000).hex())
+        folder.keep(name(n), os.urandom(220_000).hex())
     left = sorted(f.name for f in folder.folder.iterdir())
     assert sum(f.stat().st_size for f in folder.folder.iterdir()) <= MOST_BYTES
     assert left[-1] == name(11)

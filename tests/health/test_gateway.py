@@ -103,6 +103,34 @@ def test_a_disk_that_hovers_at_the_limit_does_not_flap() -> None:
     assert gateway.live(replace(WELL, disk_free_bytes=2_400 * MB), 120.0).codes() == []
 
 
+def warm(temperature_c: float) -> GatewayFacts:
+    return replace(WELL, temperature_c=temperature_c)
+
+
+def test_a_processor_that_is_hot_for_five_minutes_is_a_finding_and_a_burst_of_work_is_none() -> None:
+    gateway = Gateway().live(warm(84.0), 240.0).live(warm(60.0), 600.0)
+    assert gateway.events == []
+    gateway.live(warm(81.0), 200.0).live(warm(78.5), 100.0)  # slowed down, it hovers about its limit
+    assert gateway.codes() == []
+    gateway.live(warm(83.0), 10.0)
+    assert gateway.codes() == ["gateway-hot"]
+    assert gateway.evidence().startswith("processor at 83 Cel, 83 at the most, for 5 min")
+    assert gateway.health.open()[0].since == gateway.events[0].at - 300.0
+
+
+def test_one_touch_of_the_limit_opens_nothing_however_warm_it_stays_below() -> None:
+    assert Gateway().live(warm(80.5), 10.0).live(warm(75.0), 3600.0).events == []
+
+
+def test_a_hot_gateway_is_well_again_after_a_quarter_of_an_hour() -> None:
+    gateway = Gateway().live(warm(82.0), 400.0).live(warm(74.0), 3600.0)
+    assert gateway.codes() == ["gateway-hot"]
+    for _ in range(3):
+        gateway.live(warm(65.0), 300.0).live(warm(83.0), 320.0)
+    assert [event.opened for event in gateway.events] == [True]
+    assert gateway.live(warm(65.0), 920.0).codes() == []
+
+
 def test_one_sag_of_the_supply_is_no_finding_a_lasting_one_is() -> None:
     gateway = Gateway().live(replace(WELL, supply_alarm=True), 30.0).live(WELL, 3600.0)
     assert gateway.events == []

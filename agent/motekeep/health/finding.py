@@ -171,6 +171,9 @@ KINDS: dict[str, Kind] = {
         M, None, "Bring the uplink back or raise `max_bytes` under [store]: old minutes are being merged into hours."
     ),
     "disk-low": Kind(M, None, "Free space on the gateway's disk, or put in a larger card."),
+    "gateway-hot": Kind(
+        M, None, "Shade the gateway's case or give it air: it slows itself down, and its warmth reaches its sensors."
+    ),
     "supply-low": Kind(
         M, None, f"Replace the gateway's power supply or its cable: a weak 5 V slows the fans of its sensors. {SUPPLY}"
     ),

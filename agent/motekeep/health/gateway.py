@@ -21,6 +21,11 @@ DISK_BACK = 1.5
 SUPPLY_S = 60.0
 SUPPLY_TIMES = 3
 SUPPLY_WINDOW_S = 3600.0
+# Raspberry-class boards slow themselves down at 80 to 85 degC (common practice, no source). A minute of work on a warm day
+# is no finding, five are; a board that slows itself down hovers about its limit, so a little less counts on until then. It
+# closes well below.
+HOT_C, HOVERS_C, COOL_C = 80.0, 77.0, 72.0
+HOT_S = 300.0
 # A half-open link is noticed after twice the keep-alive (two minutes at 60 s), reconnecting backs off to about a
 # minute; five minutes without progress are neither.
 UPLINK_S = 300.0
@@ -64,6 +69,8 @@ TERMS: Mapping[str, Terms] = {
     "store-full": Terms(clear_s=1800.0),
     "disk-low": Terms(clear_s=60.0),
     # a weak supply sags under load and recovers in between
+    # ten minutes of rest, and the five that a new proof takes
+    "gateway-hot": Terms(clear_s=600.0 + HOT_S, again_s=HOT_S + 60.0),
     "supply-low": Terms(clear_s=SUPPLY_WINDOW_S, again_s=SUPPLY_WINDOW_S),
     # a link that flaps is not back before it has held for two minutes
     "uplink-lost": Terms(clear_s=120.0, again_s=UPLINK_S + 60.0),
@@ -81,12 +88,15 @@ class GatewayHealth:
             "store-degraded": self._degraded,
             "store-full": self._full,
             "disk-low": self._disk,
+            "gateway-hot": self._hot,
             "supply-low": self._supply,
             "uplink-lost": self._lost,
             "uplink-refused": self._not_taken,
         }
         self._since: dict[str, float] = {}  # when each condition that needs persistence was last not there
         self._disk_low = False
+        self._warm = False
+        self._hottest_c = 0.0
         self._supply_alarm = False
         self._sags: list[float] = []  # beginnings of the last SUPPLY_TIMES alarms
         self._refused = 0
@@ -152,6 +162,19 @@ class GatewayHealth:
             return None
         of = f" of {total / 1e6:.0f}" if total else ""
         return Suspicion(since, 1.0, f"{free / 1e6:.0f}{of} MB free; the limit is {limit / 1e6:.0f} MB")
+
+    def _hot(self, facts: GatewayFacts, now: float) -> Suspicion | None:
+        warm_c = facts.temperature_c
+        if warm_c is None:
+            return None
+        lasting = self._warm and now - self._held("gateway-hot", True, now) >= HOT_S
+        self._warm = warm_c >= (COOL_C if lasting else HOVERS_C if self._warm else HOT_C)
+        since = self._held("gateway-hot", self._warm, now)
+        self._hottest_c = max(warm_c, self._hottest_c) if self._warm else 0.0
+        if not self._warm or now - since < HOT_S:
+            return None
+        evidence = f"processor at {warm_c:.0f} Cel, {self._hottest_c:.0f} at the most, for {_span(now - since)}"
+        return Suspicion(since, 0.95, f"{evidence}; boards slow down from {HOT_C:.0f} on")
 
     def _supply(self, facts: GatewayFacts, now: float) -> Suspicion | None:
         alarm = facts.supply_alarm is True
