@@ -1,0 +1,1 @@
+"""The lessons: what is learnt of a unit in its first days, one file each."""
