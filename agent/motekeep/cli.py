@@ -129,6 +129,52 @@ def service_list(config_path: Path, sensor: str | None, as_json: bool) -> None:
     show(load(config_path), config_path, sensor, as_json)
 
 
+@main.group()
+def calibration() -> None:
+    """Signed calibration documents at the gateway: put into force, listed, gone back from. Needs no network."""
+
+
+@calibration.command("install")
+@with_config
+@click.argument("file", type=existing)
+def calibration_install(config_path: Path, file: Path) -> None:
+    """Put the document FILE into force; its signature lies beside it as FILE.sig. Exit 1 when it is refused.
+
+    The same checks as for an offer from afar. Without a running daemon it waits for the next start.
+    """
+    from motekeep.commands.calibration import install  # noqa: PLC0415
+    from motekeep.config import load  # noqa: PLC0415
+
+    sys.exit(0 if install(load(config_path), file) else 1)
+
+
+@calibration.command("list")
+@with_config
+@click.option("--sensor", help="Only of this sensor.")
+@click.option("--json", "as_json", is_flag=True, help="One JSON object a sensor, as the journal keeps it.")
+def calibration_list(config_path: Path, sensor: str | None, as_json: bool) -> None:
+    """The last documents of each sensor: in force, kept or withdrawn, and by whom they are signed."""
+    from motekeep.commands.calibration import show  # noqa: PLC0415
+    from motekeep.config import load  # noqa: PLC0415
+
+    show(load(config_path), sensor, as_json)
+
+
+@calibration.command("restore")
+@with_config
+@click.option("--issue", type=int, help="Which of the kept ones; without it the one before that in force.")
+@click.argument("sensor")
+def calibration_restore(config_path: Path, issue: int | None, sensor: str) -> None:
+    """Put an earlier accepted document of SENSOR into force again.
+
+    Recorded, and told on the state topic. The numbers stay: the next offer must still exceed the highest issue.
+    """
+    from motekeep.commands.calibration import restore  # noqa: PLC0415
+    from motekeep.config import load  # noqa: PLC0415
+
+    sys.exit(0 if restore(load(config_path), sensor, issue) else 1)
+
+
 @main.command()
 @with_config
 @click.option("--seconds", type=float, required=True, help="How long to record.")

@@ -62,17 +62,17 @@ class Shelf:
 
     def shown(self, sensor: str) -> tuple[bytes, bytes] | None:
         """Text and signature of the pair in front, unjudged; None without a document, empty without a signature."""
-        return _pair(self._path(sensor))
+        return read_pair(self._path(sensor))
 
     def kept(self, sensor: str, wanted: str) -> tuple[bytes, bytes] | None:
         """Text and signature of an accepted document by its digest; None when it is not there, or not whole."""
-        pair = _pair(self._kept_path(sensor, wanted))
+        pair = read_pair(self._kept_path(sensor, wanted))
         return pair if pair is not None and digest(pair[0]) == wanted else None
 
     def all_kept(self, sensor: str) -> list[tuple[bytes, bytes]]:
         """Every whole pair that is kept for a sensor."""
         paths = sorted((self._folder / KEPT / sensor).glob("*.toml"))[:MOST_LISTED]
-        pairs = [(path, _pair(path)) for path in paths]
+        pairs = [(path, read_pair(path)) for path in paths]
         return [pair for path, pair in pairs if pair is not None and path == self._kept_path(sensor, digest(pair[0]))]
 
     def keep(self, sensor: str, text: bytes, signature: bytes) -> None:
@@ -141,7 +141,9 @@ def _signature_of(path: Path) -> Path:
     return path.with_name(path.name + ".sig")
 
 
-def _pair(path: Path) -> tuple[bytes, bytes] | None:
+def read_pair(path: Path) -> tuple[bytes, bytes] | None:
+    """A document and what lies beside it as its signature, at most a byte more than either may have; None without a
+    readable document, an empty signature without one."""
     try:
         text = _read(path, LARGEST_BYTES)
     except OSError:
