@@ -130,6 +130,9 @@ KINDS: dict[str, Kind] = {
         f"Switch the sensor's supply off and on, and replace the unit if it reports the fault again. {OPENING}",
     ),
     "warming-up": Kind(C, None, "Nothing to do: the sensor has just started, and its first half minute is left out."),
+    "humidity-high": Kind(
+        S, 3, "Nothing to repair: in fog a counter weighs water, and no correction holds; read these hours as too high."
+    ),
     "service-visit": Kind(
         C, 3, "Nothing to do: somebody is at the case, or was, and what was measured meanwhile is not the air's alone."
     ),

@@ -18,6 +18,7 @@ from motekeep.health.check import Check, LineState, listens
 from motekeep.health.fan import FanStopped
 from motekeep.health.fan_twin import FanStoppedBesideTwin
 from motekeep.health.finding import Finding, FindingEvent, Suspicion, casts_doubt
+from motekeep.health.fog import HumidityHigh
 from motekeep.health.frozen import OutputFrozen
 from motekeep.health.hour import Hour, HourBuilder
 from motekeep.health.ledger import Ledger, Terms
@@ -44,7 +45,7 @@ class SensorHealth:
     called with its frames.
     """
 
-    def __init__(
+    def __init__(  # noqa: PLR0913 (what is known of a sensor, by name)
         self,
         sensor: str,
         dialect: Dialect,
@@ -67,6 +68,7 @@ class SensorHealth:
             SensorError(dialect.error_bits),
             FanStopped(flow_l_min, period_s),
             *([FanStoppedBesideTwin(flow_l_min, period_s)] if twinned else []),
+            HumidityHigh(),
             ServiceVisit(),
             UnitSwapped(),
             DoseDue(limits),
