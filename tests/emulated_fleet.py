@@ -157,8 +157,8 @@ class EmulatedFleet:
 
     def _offered(self, _client: mqtt.Client, _userdata: object, message: mqtt.MQTTMessage) -> None:
         _, site, gateway_name, _, sensor, _ = message.topic.split("/")
-        gateway = self.gateways[Target(site, gateway_name, sensor)]
-        if not message.payload:
+        gateway = self.gateways.get(Target(site, gateway_name, sensor))
+        if gateway is None or not message.payload:
             return
         with self.lock:
             gateway.take(json.loads(message.payload)["document"].encode())

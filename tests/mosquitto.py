@@ -27,6 +27,7 @@ class Mosquitto:
     """A broker that can be stopped (SIGTERM), killed (SIGKILL) and started again on the same port.
 
     `lines` are added to its configuration; `acl` and `users` (name to password) turn access rules and passwords on.
+    With `defaults` it keeps mosquitto's own limit of messages queued for a client.
     """
 
     def __init__(
@@ -37,6 +38,7 @@ class Mosquitto:
         acl: str | None = None,
         users: dict[str, str] | None = None,
         tls: "Certificates | None" = None,
+        defaults: bool = False,
     ) -> None:
         self.folder = folder
         self.port = free_port()
@@ -44,7 +46,7 @@ class Mosquitto:
         self._process: subprocess.Popen[bytes] | None = None
         # started as root it would change to its own user and could not read the folder any more
         config = [f"listener {self.port} 127.0.0.1", f"allow_anonymous {'false' if users else 'true'}", "user root"]
-        config += ["max_queued_messages 0", *lines]
+        config += lines if defaults else ["max_queued_messages 0", *lines]
         if acl is not None:
             (folder / "acl").write_text(acl)
             config.append(f"acl_file {folder / 'acl'}")

@@ -12,11 +12,12 @@ from pathlib import Path
 
 import pytest
 from click.testing import CliRunner, Result
+
 from emulated_fleet import EmulatedFleet, Gateway, document_text, make_key, write_signed
+from mosquitto import Mosquitto, running
 from moteferry.cli import main
 from moteferry.roll.offer import Target
 from moteferry.roll.register import Register
-from mosquitto import Mosquitto, running
 from motekeep.measure.document import digest
 
 pytestmark = pytest.mark.whole

@@ -121,6 +121,23 @@ def fit(  # noqa: PLR0913, PLR0917 (an option each)
 
 
 @main.command()
+@click.argument("document", type=FILE)
+@click.option("--device", type=FILE, required=True, help="Recorded readings, readings.ndjson.")
+@click.option("--out", type=click.Path(dir_okay=False, path_type=Path), required=True, help="Where the new ones go.")
+@click.option("--sensor", help="Which one, where the readings are of several.")
+@click.option("--max-shift", type=float, default=0.5, show_default=True, help="As the device's config has it.")
+@json_option
+def rehearse(document: Path, device: Path, out: Path, sensor: str | None, max_shift: float, as_json: bool) -> None:  # noqa: PLR0913, PLR0917 (an option each)
+    """What DOCUMENT would have made of recorded readings: readings of the same schema, and how far they moved.
+
+    Exit code 1 when a device would refuse it for that.
+    """
+    from moteferry import rehearsal  # noqa: PLC0415 (see above)
+
+    _exit(rehearsal.rehearsal(document, device, out, sensor, max_shift, as_json=as_json))
+
+
+@main.command()
 @click.argument("documents", nargs=-1, type=FILE)
 @click.option("--broker", default="localhost", show_default=True, metavar="HOST[:PORT]", help="Port 8883 with TLS.")
 @click.option("--root", default="motekeep", show_default=True, help="The first level of all topics.")
