@@ -21,9 +21,9 @@ DISK_BACK = 1.5
 SUPPLY_S = 60.0
 SUPPLY_TIMES = 3
 SUPPLY_WINDOW_S = 3600.0
-# Raspberry-class boards slow themselves down at 80 to 85 degC (common practice, no source). A minute of work on a warm day
-# is no finding, five are; a board that slows itself down hovers about its limit, so a little less counts on until then. It
-# closes well below.
+# Raspberry-class boards slow themselves down at 80 to 85 degC (common practice, no source). A minute of work on a warm
+# day is no finding, five are; a board that slows itself down hovers about its limit, so a little less counts on until
+# then. It closes well below.
 HOT_C, HOVERS_C, COOL_C = 80.0, 77.0, 72.0
 HOT_S = 300.0
 # A half-open link is noticed after twice the keep-alive (two minutes at 60 s), reconnecting backs off to about a

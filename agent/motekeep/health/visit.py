@@ -4,6 +4,7 @@ Owns both checks that compare the record with what people entered. Must not know
 """
 
 from collections.abc import Sequence
+from dataclasses import dataclass
 from typing import ClassVar
 
 from motekeep.health.check import Check
@@ -12,6 +13,17 @@ from motekeep.health.memory import Memory, is_number
 from motekeep.instant import Instant, rfc3339
 from motekeep.measure.dose import ServiceKind
 from motekeep.wire.frame import Observation
+
+LAST_UTC = 253_402_300_800.0  # the year 10000, which no text of a time can name
+
+
+@dataclass(slots=True)
+class _Visit:
+    """When it was done (boot seconds), what it was, and whether it has been told of."""
+
+    done_s: float
+    said: str
+    told: bool = False
 
 
 class ServiceVisit(Check):
@@ -32,32 +44,47 @@ class ServiceVisit(Check):
     MOST = 16  # visits not yet told: more than a day of anybody's work; beyond that the oldest are dropped
 
     def __init__(self) -> None:
-        self._visits: list[tuple[float, str]] = []  # when each was done (boot seconds), and in words
-        self._told_past = False
+        self._visits: list[_Visit] = []
+        self._pause = False  # between two findings of past visits
         self._offset = 0.0
 
     def service(self, kind: ServiceKind, done_utc: float, at: Instant) -> None:
         if kind is not ServiceKind.NOTE:
-            self._offset = at.offset
-            self._visits = [*self._visits, (done_utc - at.offset, f"{kind.value} at {rfc3339(done_utc)}")][-self.MOST :]
+            self._add(done_utc, f"{kind.value} at {rfc3339(done_utc)}", at)
+
+    def _add(self, done_utc: float, said: str, at: Instant) -> None:
+        self._offset = at.offset
+        self._visits = [*self._visits, _Visit(done_utc - at.offset, said)][-self.MOST :]
 
     def judge(self, at: Instant) -> Suspicion | None:
         if not self._visits:
             return None
-        self._offset = at.offset
-        now = [visit for visit in self._visits if -self.BEFORE_S <= at.boot_s - visit[0] < self.AFTER_S]
-        if now:
-            since = min(done_s for done_s, _ in now) - self.BEFORE_S
-            return Suspicion(since, 1.0, self._evidence([said for _, said in now]))
+        self._offset, now_s = at.offset, at.boot_s
+        self._visits = [v for v in self._visits if not v.told or now_s < v.done_s + self.AFTER_S]
+        under_way = [v for v in self._visits if -self.BEFORE_S <= now_s - v.done_s < self.AFTER_S]
+        if under_way:
+            for visit in under_way:
+                visit.told = True
+            since = min([v.done_s for v in under_way]) - self.BEFORE_S
+            return Suspicion(since, 1.0, self._evidence([v.said for v in under_way]))
         # one past visit at a time, with a judgement between two of them in which nothing holds: each is a finding
-        over = [visit for visit in self._visits if at.boot_s - visit[0] >= self.AFTER_S]
-        if not over or self._told_past:
-            self._told_past = False
+        self._pause = not self._pause
+        over = next((v for v in self._visits if not v.told and now_s >= v.done_s + self.AFTER_S), None)
+        if over is None or not self._pause:
             return None
-        done_s, said = over[0]
-        self._visits.remove(over[0])
-        self._told_past = True
-        return Suspicion(done_s - self.BEFORE_S, 1.0, self._evidence([said]), until=done_s + self.AFTER_S)
+        over.told = True
+        return Suspicion(
+            over.done_s - self.BEFORE_S, 1.0, self._evidence([over.said]), until=over.done_s + self.AFTER_S
+        )
+
+    def memory(self) -> Memory | None:
+        return {"done": [v.done_s + self._offset for v in self._visits]} if self._visits else None
+
+    def recall(self, memory: Memory, at: Instant) -> None:
+        done = memory.get("done")
+        for done_utc in done if isinstance(done, list) else ():
+            if is_number(done_utc) and 0.0 <= done_utc < LAST_UTC:
+                self._add(done_utc, f"a visit at {rfc3339(done_utc)}, entered before a restart", at)
 
     def _evidence(self, said: Sequence[str]) -> str:
         span = f"{self.BEFORE_S / 60:.0f} min before to {self.AFTER_S / 60:.0f} min after"
@@ -68,10 +95,11 @@ class UnitSwapped(Check):
     """unit-swapped: the unit calls itself another one than before, and nobody has said that it was replaced.
 
     Judged by the revision byte, or in `aa` the two id bytes, of its frames; a dialect without any is not judged. The
-    weakest checksum lets one altered frame in some hundreds through, so a revision counts after five frames in a row that agree: half a minute at a
-    frame each six seconds, after the warm-up that a new unit begins with. The last revision is remembered always, so
-    that a swap while the gateway was off is seen too. It closes when `unit-replaced` is entered for it, or when the
-    old unit is back. A record from up to a day before the swap speaks for it: people enter it when they pack the unit.
+    weakest checksum lets one altered frame in some hundreds through, so a revision counts after five frames in a row
+    that agree: half a minute at a frame each six seconds, after the warm-up that a new unit begins with. The last
+    revision is remembered always, so that a swap while the gateway was off is seen too. It closes when `unit-replaced`
+    is entered for it, or when the old unit is back. A record from up to a day before the swap speaks for it: people
+    enter it when they pack the unit.
     """
 
     code: ClassVar[str] = "unit-swapped"
