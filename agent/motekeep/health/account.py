@@ -201,9 +201,10 @@ class CalibrationOutOfRange(Check):
         rows, issue, holds = memory.get("blocks"), memory.get("issue"), memory.get("holds")
         if not isinstance(rows, list) or not is_number(issue) or not all(is_number(v) and v >= 0.0 for v in rows):
             return
-        self._issue, self._holds = int(issue), holds == 1.0
+        self._issue = int(issue)
         for i in range(0, len(rows) - 2, 3):
             self._blocks.append(_Block(at.boot_s - rows[i], rows[i + 1], min(rows[i + 2], rows[i + 1])))
+        self._holds = holds == 1.0 and any(block.out_s for block in self._blocks)
 
 
 def _since(moment: float | None) -> str:
