@@ -4,6 +4,7 @@ Owns the file names, the reading and the durable writing. Knows no correction an
 may say is `measure/document_text.py`'s.
 
     <sensor>.toml, <sensor>.toml.sig           in force, for people to see, and to put a document by hand
+    <sensor>.toml.refused                      put there by hand, examined and refused
     kept/<sensor>/<digest>.toml and .toml.sig  accepted ones, named by what is in them: never changed, only added
 
 Every file is written beside its place, synced, renamed, and its folder synced, so that a cut at any moment leaves the
@@ -107,6 +108,14 @@ class Shelf:
                 sync_folder(path)
         except OSError as error:
             raise _unwritable(path, error) from error
+        self._stamps[sensor] = self._stamp(sensor)
+
+    def set_aside(self, sensor: str) -> None:
+        """Move what a person has put in front, and must not be used, to `.refused`: they find it there."""
+        path = self._path(sensor)
+        for one in (path, _signature_of(path)):
+            with suppress(OSError):
+                one.replace(one.with_name(f"{one.name}.refused"))
         self._stamps[sensor] = self._stamp(sensor)
 
     def prune(self, sensor: str, digests: Collection[str]) -> None:

@@ -247,7 +247,10 @@ class CalibrationFeed:
             log.error("calibration.refused", sensor=sensor, reason=reason, error=str(error), digest=verdict.digest)
         if verdict.by == "by-hand" and reason == "cannot-verify":
             self._again.add(sensor)
-        elif verdict.by == "by-hand" and self._signed and desk.switch.record(sensor).in_force is None:
+        elif verdict.by == "by-hand" and self._signed and desk.switch.record(sensor).in_force is not None:
+            self._shelf.set_aside(sensor)
+            desk.switch.front(sensor)
+        elif verdict.by == "by-hand" and self._signed:
             self._intake.calibrate(sensor, None, damaged=True)
         self._tell(sensor, at)
         self._answer(getattr(verdict.request, "ticket", None), str(error), done=False)

@@ -71,6 +71,11 @@ class Examination:
         self._last_day = last_day
         self._max_shift = max_shift
 
+    @property
+    def trust(self) -> tuple[object, ...]:
+        """Changes when those who may sign do."""
+        return self._signers.stamp
+
     def examine(self, sensor: str, text: bytes, signature: bytes, record: CalibrationRecord, at: Instant) -> Candidate:
         """Raises OfferRefusedError with what is wrong; SignersError or StoreError when it could not be told."""
         if len(text) > LARGEST_BYTES:

@@ -99,7 +99,7 @@ class Examiner:
         self._jobs: deque[Given | Recheck] = deque()
         self._verdicts: deque[Verdict] = deque()
         self._offers_due_s = float("-inf")
-        self._refused: dict[str, tuple[bytes, float, Verdict]] = {}
+        self._refused: dict[str, tuple[object, float, Verdict]] = {}
         self.replaced = 0
         self.ticked = clock.now().boot_s
 
@@ -195,7 +195,7 @@ class Examiner:
             why = error.errors()[0]["msg"] if isinstance(error, ValidationError) else str(error)
             refusal = OfferRefusedError("bad-offer", str(why)[:200], "offer it with `moteferry roll`")
             return Verdict(request, record, digest(request.payload), refusal=refusal)
-        mark = sha256(request.payload).digest()
+        mark = (sha256(request.payload).digest(), *self._examination.trust)
         known = self._refused.get(request.sensor)
         if known is not None and known[0] == mark and at.boot_s < known[1] and known[2].record is record:
             return known[2]

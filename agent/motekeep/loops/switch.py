@@ -52,6 +52,8 @@ class Shelf(Protocol):
 
     def hide(self, sensor: str) -> None: ...
 
+    def set_aside(self, sensor: str) -> None: ...
+
     def prune(self, sensor: str, digests: Collection[str]) -> None: ...
 
 
@@ -97,7 +99,14 @@ class Switch:
         if (kept := self._shelf.kept(sensor, digest)) is not None:
             return kept
         guard = next((g for g in self.record(sensor).guards if g.digest == digest), None)
-        return None if guard is None else (guard.document.encode(), guard.signature.encode())
+        if guard is None:
+            return None
+        pair = guard.document.encode(), guard.signature.encode()
+        try:
+            self._shelf.keep(sensor, *pair)
+        except StoreError as error:
+            log.warning("calibration.not_kept", sensor=sensor, error=str(error))
+        return pair
 
     def load(self, sensor: str, at: Instant) -> bool:
         """Put into force what the record says; whether there is a record at all. What was lost of it or can no longer
