@@ -127,7 +127,7 @@ def fit(  # noqa: PLR0913, PLR0917 (an option each)
 @click.option("--sensor", help="Which one, where the readings are of several.")
 @click.option("--max-shift", type=float, default=0.5, show_default=True, help="As the device's config has it.")
 @json_option
-def rehearse(document: Path, device: Path, out: Path, sensor: str | None, max_shift: float, as_json: bool) -> None:  # noqa: PLR0913, PLR0917 (an option each)
+def rehearse(document: Path, device: Path, out: Path, sensor: str | None, max_shift: float, as_json: bool) -> None:
     """What DOCUMENT would have made of recorded readings: readings of the same schema, and how far they moved.
 
     Exit code 1 when a device would refuse it for that.

@@ -1,7 +1,7 @@
 """`moteferry rehearse`: what a document would have made of recorded readings, before anybody signs it.
 
-Owns the files and the summary. The rehearsal itself is the device's own (`motekeep.message.rehearsal`), so that operator
-and device judge by the same figures. One pass; memory holds two figures a reading and channel.
+Owns the files and the summary. The rehearsal itself is the device's own (`motekeep.message.rehearsal`), so that
+operator and device judge by the same figures. One pass; memory holds a few figures a reading and channel.
 """
 
 import json
@@ -32,7 +32,7 @@ class RehearsalError(MotekeepError):
 class Moved:
     """How the figures of one channel moved, ug/m3: value minus raw. `most_at` is the start of the reading of `most`."""
 
-    shifts: array[float] = field(default_factory=lambda: array("d"))
+    shifts: "array[float]" = field(default_factory=lambda: array("d"))
     most: float = 0.0
     most_at: str = ""
 

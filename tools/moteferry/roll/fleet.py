@@ -147,9 +147,10 @@ class Fleet:
 
     def hear(self, topic: str, payload: bytes, *, retained: bool, now: float) -> Iterable[Target]:
         prefix = self.root + "/"
-        if not topic.startswith(prefix):
+        levels = topic.removeprefix(prefix).split("/")
+        if not topic.startswith(prefix) or len(levels) < 3:
             return ()
-        site, gateway, *rest = topic[len(prefix) :].split("/")
+        site, gateway, *rest = levels
         concerned = self._of_gateway.get((site, gateway))
         if concerned is None or not payload:  # an empty one is a retained message taken away
             return ()
