@@ -77,12 +77,14 @@ class Outcome:
 
 @dataclass(frozen=True, slots=True)
 class Course:
-    """A roll as it was decided: who is in which wave, from 0, and what the register knows of it."""
+    """A roll as it was decided: its number in the register, and who is in which wave. Every `sweep_s` all are judged,
+    heard or not."""
 
     roll: int
     root: str
     waves: Sequence[Sequence[Offer]]
     rule: Rule
+    sweep_s: float = SWEEP_S
 
 
 def topics_of(root: str, target: Target) -> Topics:
@@ -188,7 +190,7 @@ class Conductor:
     def _turn(self) -> None:
         touched = self._pump(TURN_S)
         now = time.monotonic()
-        if now - self._swept_at >= SWEEP_S:
+        if now - self._swept_at >= self._course.sweep_s:
             self._swept_at = now
             touched = set(self._cases)
         if self._link.listening_s > 0:
