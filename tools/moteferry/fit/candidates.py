@@ -25,6 +25,10 @@ Rows = NDArray[np.bool_] | NDArray[np.int64]
 # RH or temperature that stands still tells nothing of its own influence, in % and degC.
 STILL_RH, STILL_T = 2.0, 1.0
 
+# Readings of a span are gathered into this many groups of like humidity before growth is fitted. Within a group the
+# growth of its mean is taken for the mean of its growth: under 0.2 % even where RH runs from 30 to 85 % in one hour.
+GROUPS = 6
+
 # Where the bent line bends: quantiles of the spans' means. The lowest point is 0, the highest the highest mean.
 BENDS = (0.5, 0.9)
 
@@ -156,7 +160,7 @@ class Growth:
 
     def features(self, pairs: Pairs) -> Features:
         held = np.clip(pairs.rh, RH_LOW, RH_HIGH)
-        return Features((pairs.weight * pairs.raw, held / (100.0 - held) / DENSITY))
+        return Features(_grouped(pairs.weight * pairs.raw, held / (100.0 - held) / DENSITY))
 
     def predict(self, parameters: Floats, features: Features) -> Floats:
         mass, water = features.arrays
@@ -216,6 +220,18 @@ class Bent:
 
     def jacobian(self, parameters: Floats, features: Features) -> Floats:  # noqa: ARG002 (every form is asked alike)
         return features.arrays[0]
+
+
+def _grouped(mass: Floats, water: Floats) -> tuple[Floats, Floats]:
+    """(n, m) readings as (n, GROUPS) groups of like `water`: the mass of each and its mean water by mass."""
+    if mass.shape[1] <= GROUPS:
+        return mass, water
+    order = np.argsort(water, axis=1)
+    mass, water = (np.take_along_axis(values, order, axis=1) for values in (mass, water))
+    begins = np.linspace(0, mass.shape[1], GROUPS, endpoint=False).astype(np.int64)
+    total = np.add.reduceat(mass, begins, axis=1)
+    wet = np.add.reduceat(mass * water, begins, axis=1)
+    return total, np.divide(wet, total, out=np.zeros_like(total), where=total > 0.0)
 
 
 def candidates(pairs: Pairs) -> tuple[Candidate, ...]:

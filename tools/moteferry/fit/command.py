@@ -67,7 +67,8 @@ def _summary(fit: Fit, out: Path) -> list[str]:
         *(f"  {n} = {v:.4g} +- {u:.2g}" for n, v, u in zip(fit.candidate.names, fit.parameters, _u(fit), strict=True)),
         (
             f"  typical error {after.pairs.rmse:.2f} {unit} in time it had not seen "
-            f"(uncorrected {raw.pairs.rmse:.2f}), R2 {after.pairs.r2:.2f}, reference within 2u in {100.0 * fit.covered:.0f} %"
+            f"(uncorrected {raw.pairs.rmse:.2f}), R2 {after.pairs.r2:.2f}, "
+            f"reference within 2u in {100.0 * fit.covered:.0f} %"
         ),
         f"  US EPA base testing targets by {after.over} means: "
         + ", ".join(f"{t.name} {'met' if t.met else 'NOT met'}" for t in after.targets),

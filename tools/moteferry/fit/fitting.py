@@ -5,34 +5,25 @@ bytes.
 """
 
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.stats import theilslopes
 
 from moteferry.fit import bootstrap
 from moteferry.fit.applied import applied
-from moteferry.fit.averages import averages
-from moteferry.fit.blocks import DAY_S, Block, Trial, blocks, trial
+from moteferry.fit.blocks import Block, Trial, blocks, trial
 from moteferry.fit.candidates import Candidate, Features, candidates
 from moteferry.fit.choice import Choice, choose
-from moteferry.fit.clock_check import lag_hours
+from moteferry.fit.doubts import doubts
 from moteferry.fit.extent import Extent, extent
+from moteferry.fit.judgement import Judgement, judged
 from moteferry.fit.least_squares import UnfitError, fitted, weights
-from moteferry.fit.metrics import Comparison, Equivalence, Target, compare, epa_targets, equivalence
 from moteferry.fit.pairs import Pairs
 from moteferry.fit.record import Floats, RecordError
-from moteferry.fit.residual import residual
+from moteferry.fit.residual import scaled, shape, variance_of, with_common
 from moteferry.fit.writing import Statement, written
 from motekeep.measure.document import CalibrationDocument
-
-# `max_shift` of a device as it is shipped, and the figure below which a move is measured against this; see
-# message/rehearsal.py, which decides.
-MAX_SHIFT, FLOOR_UG_M3 = 0.5, 5.0
-LOOSE_R2 = 0.5
-# A drift is told when the robust trend is surely there and moves more than this share of the mean.
-DRIFT_SHARE, DRIFT_DAYS = 0.1, 14
 
 
 @dataclass(frozen=True, slots=True)
@@ -51,17 +42,6 @@ class Request:
     limit_value: float = 30.0
     u_rh: float = 1.0
     fits_revision: int | None = None
-
-
-@dataclass(frozen=True, slots=True)
-class Judgement:
-    """One series against the reference: of its pairs, and of means of `over` against the published rules."""
-
-    pairs: Comparison
-    over: str
-    averaged: Comparison
-    targets: tuple[Target, ...]
-    equivalence: Equivalence
 
 
 @dataclass(frozen=True, slots=True)
@@ -119,32 +99,32 @@ def fit(
     choice, covariance = _sure(trials, whole, pairs, sigma, request.robust, refused)
     form = choice.chosen.candidate
     parameters = whole[form.name]
-    error = choice.chosen.held_out - pairs.reference
-    left_over = residual(error, choice.chosen.held_out, pairs.u_random, pairs.u_common)
     covers = extent(pairs, channel)
-    corrected = _judged(pairs, choice.chosen.held_out, request.limit_value)
+    corrected = judged(pairs, choice.chosen.held_out, request.limit_value)
     told("the document")
-    text, document = written(
-        Statement(
-            issue=request.issue,
-            place=place,
-            channel=channel,
-            made_at=request.made_at,
-            valid_from=request.valid_from,
-            valid_until=request.valid_until,
-            fits_revision=request.fits_revision,
-            ranges=covers.ranges,
-            candidate=form,
-            parameters=parameters,
-            covariance=covariance,
-            residual=left_over,
-            u_rh=request.u_rh if "rh" in covers.ranges else None,
-            reference_words=request.reference_words,
-            data=request.data,
-            hours=round(pairs.hours, 2),
-            metrics=_basis(corrected, covers),
-        )
+    error = choice.chosen.held_out - pairs.reference
+    parts = shape(error, choice.chosen.held_out, pairs.u_random)
+    draft = Statement(
+        issue=request.issue,
+        place=place,
+        channel=channel,
+        made_at=request.made_at,
+        valid_from=request.valid_from,
+        valid_until=request.valid_until,
+        fits_revision=request.fits_revision,
+        ranges=covers.ranges,
+        candidate=form,
+        parameters=parameters,
+        covariance=covariance,
+        residual=(float(parts[0]), float(parts[1])),
+        u_rh=request.u_rh if "rh" in covers.ranges else None,
+        reference_words=request.reference_words,
+        data=request.data,
+        hours=round(pairs.hours, 2),
+        metrics=_basis(corrected, covers),
     )
+    left_over = _left_over(draft, parts, pairs, error)
+    text, document = written(replace(draft, residual=left_over))
     value, u = applied(document, pairs, channel)
     return Fit(
         place=place,
@@ -162,12 +142,20 @@ def fit(
         value=value,
         u=u,
         covered=float(np.mean(np.abs(error) <= 2.0 * np.hypot(u, pairs.u_random))),
-        raw=_judged(pairs, pairs.raw_mean, request.limit_value),
+        raw=judged(pairs, pairs.raw_mean, request.limit_value),
         corrected=corrected,
-        warnings=(*covers.warnings, *_warnings(pairs, value, corrected)),
+        warnings=(*covers.warnings, *doubts(pairs, value, corrected.pairs)),
         text=text,
         document=document,
     )
+
+
+def _left_over(draft: Statement, parts: Floats, pairs: Pairs, error: Floats) -> tuple[float, float]:
+    """The residual with which what the device states of these spans holds as many of them as it promises."""
+    _, document = written(draft)
+    value, u = applied(document, pairs, draft.channel)
+    other = np.maximum(u**2 - variance_of(parts, value), 0.0) + pairs.u_random**2
+    return with_common(scaled(parts, error, value, other), value, pairs.u_common)
 
 
 @dataclass(frozen=True, slots=True)
@@ -265,22 +253,6 @@ def _all_of(refused: Mapping[str, str]) -> str:
     return "no form of correction can be fitted (" + "; ".join(f"{n}: {why}" for n, why in refused.items()) + ")"
 
 
-def _judged(pairs: Pairs, sensor: Floats, limit_value: float) -> Judgement:
-    try:
-        own = averages(pairs, sensor)
-        averaged = compare(own.reference, own.sensor)
-        u_reference = float(np.sqrt(np.mean(own.u_random**2)))
-        return Judgement(
-            compare(pairs.reference, sensor),
-            own.over,
-            averaged,
-            epa_targets(averaged),
-            equivalence(own.reference, own.sensor, limit_value, u_reference),
-        )
-    except ValueError as error:
-        raise RecordError("the two records", str(error), "see whether both are of the same air") from error
-
-
 def _basis(corrected: Judgement, covers: Extent) -> dict[str, float]:
     """What the document says of itself, of hours that its fit had not seen."""
     own = corrected.pairs
@@ -295,37 +267,3 @@ def _basis(corrected: Judgement, covers: Extent) -> dict[str, float]:
         "limit_value": corrected.equivalence.limit_value,
         "days": covers.days,
     }
-
-
-def _warnings(pairs: Pairs, value: Floats, corrected: Judgement) -> list[str]:
-    said = []
-    if lag := lag_hours(pairs):
-        said.append(
-            f"the records fit best with the reference's stamps {abs(lag)} h {'earlier' if lag > 0 else 'later'}: is it "
-            "stamped by the end of the hour, or in local time?"
-        )
-    if corrected.pairs.r2 < LOOSE_R2:
-        said.append(f"the sensor hardly follows the reference (R2 {corrected.pairs.r2:.2f}): do not rely on this fit")
-    move = np.median(np.abs(value - pairs.raw_mean) / np.maximum(pairs.raw_mean, FLOOR_UG_M3))
-    if move > MAX_SHIFT:
-        said.append(
-            f"it moves readings by {100.0 * move:.0f} %; a device whose max_shift is {MAX_SHIFT:g} will refuse it"
-        )
-    if not pairs.u_random.any():
-        said.append("the reference states no uncertainty: what it is off by itself is not in u")
-    if (drift := _drift(pairs, value)) is not None:
-        said.append(f"what is left over drifts by {drift:+.2f} ug/m3 in 30 days: is one of both changing?")
-    return said
-
-
-def _drift(pairs: Pairs, value: Floats) -> float | None:
-    """The robust trend of daily means of the error, ug/m3 in 30 days, where it surely is one (Theil-Sen; Sen 1968, J.
-    Am. Stat. Assoc. 63:1379). Days still resemble their neighbours, so the interval asked is that of 99 %."""
-    days, number = np.unique(np.floor(pairs.start / DAY_S), return_inverse=True)
-    if len(days) < DRIFT_DAYS:
-        return None
-    error = np.bincount(number, value - pairs.reference) / np.bincount(number)
-    slope, _, low, high = theilslopes(error, days, alpha=0.99)
-    moved = abs(slope) * float(days[-1] - days[0])
-    sure = low * high > 0.0 and moved > max(DRIFT_SHARE * float(pairs.reference.mean()), 0.5)
-    return 30.0 * float(slope) if sure else None

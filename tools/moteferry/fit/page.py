@@ -11,7 +11,8 @@ import numpy as np
 
 from moteferry.fit import plots
 from moteferry.fit.applied import one_reading
-from moteferry.fit.fitting import Fit, Judgement
+from moteferry.fit.fitting import Fit
+from moteferry.fit.judgement import Judgement
 from moteferry.fit.metrics import CLASS_SOURCE, EPA_SOURCE, EU_SOURCE
 from moteferry.fit.statement import CAUTION
 from motekeep.instant import rfc3339

@@ -8,7 +8,8 @@ from math import isfinite
 
 import numpy as np
 
-from moteferry.fit.fitting import Fit, Judgement
+from moteferry.fit.fitting import Fit
+from moteferry.fit.judgement import Judgement
 from moteferry.fit.metrics import CLASS_SOURCE, EPA_SOURCE, EU_SOURCE
 from motekeep.instant import rfc3339
 
