@@ -1,4 +1,4 @@
-"""A gateway with signers, without a daemon: the real feed, switch, examiner, shelf, spool and pipeline over a folder, on a
+"""A gateway with signers and no daemon: the real feed, switch, examiner, shelf, spool and pipeline over a folder, on a
 clock of the test. `ssh-keygen` is the real one. Only the journal is a dictionary, which outlives a crash."""
 
 from collections.abc import Callable, Iterator, Mapping

@@ -85,9 +85,16 @@ def sensor_setups(config: Config) -> list[SensorSetup]:
             frame_climate=isinstance(sensor.climate, FrameClimate),
             climate_max_age_s=_climate_max_age_s(sensor),
             limits=_limits(sensor, config),
+            active_a_day=config.health.active if _alone(sensor, config) else 0.0,
         )
         for sensor in config.sensor
     ]
+
+
+def _alone(sensor: Sensor, config: Config) -> bool:
+    """Whether only an active check shows its fan: a duty cycle has wakes enough, and a twin tells it in a day."""
+    twinned = sensor.twin is not None or any(other.twin == sensor.name for other in config.sensor)
+    return sensor.duty is None and not twinned
 
 
 def _limits(sensor: Sensor, config: Config) -> Limits:
@@ -204,9 +211,9 @@ class Daemon:
         if self._store is None:
             raise StoreError("rehearsing", "the journal is not open yet", "it is tried again")
         end = self._store.next_seq(sensor)
-        count = DAY_S // self._config.interval
-        every = -(-count // MOST_REHEARSED)
-        return _readings(self._store, sensor, max(end - count, 1), end, every)
+        first = max(end - DAY_S // self._config.interval, 1)
+        every = -(-(end - first) // MOST_REHEARSED)
+        return _readings(self._store, sensor, first, end, max(every, 1))
 
     def _remember(self) -> None:
         for sensor in self._config.sensor:

@@ -480,6 +480,7 @@ class CutError(BaseException):
     """The power is gone: nothing of ours handles it."""
 
 
+@pytest.mark.whole  # some sixty processes of ssh-keygen, one after the other
 def test_a_cut_at_any_step_of_a_switch_leaves_the_old_or_the_new_document_whole(
     tmp_path: Path, anna: Key, monkeypatch: pytest.MonkeyPatch
 ) -> None:

@@ -20,8 +20,8 @@ from motekeep.message.compose import Place
 from motekeep.message.documents import ReadingDocument
 from motekeep.message.rehearsal import Shift, rehearse, shift
 
-# With fewer stored readings than an hour has at the longest interval nothing can be said of a whole day.
-FEW_READINGS = 10
+# With fewer stored readings, on a gateway's first minutes, a median says nothing; the soak is left to judge.
+FEW_READINGS = 3
 
 
 class Signer(Protocol):
