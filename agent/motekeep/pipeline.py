@@ -129,6 +129,7 @@ class _Sensor:
     accumulator: Accumulator = field(default_factory=Accumulator)
     climate: tuple[Climate, float] | None = None
     calibration: CalibrationDocument | None = None
+    scale: float | None = None  # the noise scale that the correction was made with
     correction: Correction = uncorrected
     dose: Dose = field(default_factory=Dose)
     hourly: Hourly = field(default_factory=Hourly)
@@ -266,9 +267,14 @@ class Pipeline:
         sensor = self._sensors[name]
         sensor.calibration = document
         if document is not None:
-            sensor.correction = compile_document(document)
+            self._compile(sensor, document)
         else:
             sensor.correction = refused if damaged else uncorrected
+
+    @staticmethod
+    def _compile(sensor: _Sensor, document: CalibrationDocument) -> None:
+        sensor.scale = sensor.health.noise_scale
+        sensor.correction = compile_document(document, sensor.scale)
 
     def service(self, name: str, kind: ServiceKind, done_utc: float, at: Instant) -> None:
         """A person did something at the sensor at `done_utc`, and it is told now."""
@@ -351,6 +357,8 @@ class Pipeline:
             if seconds < 1.0 or sensor.seq is None:
                 continue  # a sliver before a clock step holds no figure
             flags = sensor.health.flags_between(span.boot_s, end_s)
+            if sensor.calibration is not None and sensor.scale != sensor.health.noise_scale:
+                self._compile(sensor, sensor.calibration)
             reading = make_reading(interval, sensor.correction, flags)
             self._readings.append(reading_document(reading, self._place, sensor.seq))
             sensor.seq += 1

@@ -16,12 +16,14 @@ from motekeep.health.account import (
 from motekeep.health.baseline import Baseline, hears
 from motekeep.health.check import Check, LineState, listens
 from motekeep.health.fan import FanStopped
+from motekeep.health.fan_surging import FanSurging
 from motekeep.health.fan_twin import FanStoppedBesideTwin
 from motekeep.health.finding import Finding, FindingEvent, Suspicion, casts_doubt
 from motekeep.health.fog import HumidityHigh
 from motekeep.health.frozen import OutputFrozen
 from motekeep.health.hour import Hour, HourBuilder
 from motekeep.health.ledger import Ledger, Terms
+from motekeep.health.lessons.noise import Noise, NoiseLesson
 from motekeep.health.line import FramesCorrupt, FramesMissing
 from motekeep.health.range import ChannelsInconsistent, CountsSaturated, MassClipped
 from motekeep.health.unit import SensorError, WarmingUp
@@ -68,6 +70,7 @@ class SensorHealth:
             SensorError(dialect.error_bits),
             FanStopped(flow_l_min, period_s),
             *([FanStoppedBesideTwin(flow_l_min, period_s)] if twinned else []),
+            FanSurging(period_s),
             HumidityHigh(),
             ServiceVisit(),
             UnitSwapped(),
@@ -77,7 +80,7 @@ class SensorHealth:
             CalibrationExpired(),
             CalibrationOutOfRange(),
         )
-        self.baseline = Baseline(())
+        self.baseline = Baseline((NoiseLesson(flow_l_min, period_s),))
         self._hours = HourBuilder()
         self._notes_due = False
         terms = {check.code: Terms(check.clear_s, check.again_s) for check in self._checks}
@@ -216,6 +219,12 @@ class SensorHealth:
     def sound(self) -> bool:
         """Whether nothing that is open casts doubt on the sensor's numbers."""
         return not any(casts_doubt(finding.code) for finding in self._ledger.open())
+
+    @property
+    def noise_scale(self) -> float | None:
+        """The unit's noise scale as in `counting`; None while it is not learnt."""
+        noise = self.baseline.parts.get(NoiseLesson.name)
+        return noise.scale if isinstance(noise, Noise) else None
 
     def open(self) -> list[Finding]:
         """All open findings."""
