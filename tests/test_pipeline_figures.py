@@ -311,8 +311,8 @@ def test_a_service_that_is_told_late_keeps_what_was_drawn_since() -> None:
 @pytest.mark.parametrize("rubbish", ["", "{", "[]", "null", '{"dust_ug": -5}', '{"findings": 3}', "[3]", "[" * 5000])
 def test_what_was_kept_and_cannot_be_read_begins_anew_and_stops_nothing(rubbish: str) -> None:
     first = Life().run(120.0)
-    assert set(first.kept) == set(first.pipeline.kept_names)
-    life = Life(120.0, 3, dict.fromkeys(first.kept, rubbish)).run(180.0)
+    assert set(first.kept) <= set(first.pipeline.kept_names)  # what is learnt is written once an hour
+    life = Life(120.0, 3, dict.fromkeys(first.pipeline.kept_names, rubbish)).run(180.0)
     [reading] = life.readings
     assert (reading.seq, pm2_5(reading).raw) == (3, 8.0)
     assert life.account == (pytest.approx(dust_ug(9.0, 0.1, 60.0), rel=1e-3), pytest.approx(1 / 60))

@@ -7,6 +7,7 @@ unit's own noise was learnt.
 from collections import deque
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from itertools import accumulate
 from math import exp, inf, sqrt
 from statistics import median
 from typing import Any, ClassVar
@@ -45,7 +46,8 @@ class _Group:
 @dataclass(frozen=True, slots=True)
 class _Flicker:
     """What a window of groups says of one channel: the variance of ln flow that would explain it, its standard error
-    from counting, and that of each group; `share` is the share of the quick in all, 1 for noise from frame to frame."""
+    from counting, and that of each group; `share` is the share of the quick in all, 1 for noise from frame to frame,
+    with the benefit of one standard error."""
 
     variance: float
     error: float
@@ -64,8 +66,9 @@ class FanSurging(Check):
     2. Persistence. Seven of nine groups have it: a plume lasts minutes, fireworks flare for a group or two.
     3. Quickness. What neighbouring frames do not share is compared with all that varies within an interval. Gusts,
        plumes and flares are eddies over tens of seconds, which the cell smooths further (its volume is flushed in 3 to
-       12 s); a dry bearing catches and lets go over seconds (no source). The border is what a time constant of 15 s
-       would show through this unit's averaging.
+       12 s); a dry bearing catches and lets go over seconds (no source). The border is what a time constant of 10 s
+       would show through this unit's averaging, and of 6 s while the air is well above the lowest of the last hours:
+       fireworks that go on for an hour are the quickest that air does.
     4. Likeness. The second channel flickers as much as the first, where it has pulses enough to say so: sources have
        sizes of their own, a flow has none.
 
@@ -87,7 +90,10 @@ class FanSurging(Check):
     ERRORS = 6.0
     MEANT_S = 4.0
     MEANT = 0.25**2
-    SLOWEST_S = 15.0
+    SLOWEST_S = 10.0
+    SLOWEST_RAISED_S = 6.0
+    RAISED = 2.5
+    LEVELS = 72  # groups: six hours
     ALIKE = 0.5
     GAP_S = 900.0
 
@@ -97,6 +103,7 @@ class FanSurging(Check):
         self._shapes: dict[tuple[float, int], Shape] = {}
         self._groups: deque[_Group] = deque(maxlen=self.GROUPS)
         self._open: _Group | None = None  # the group under way
+        self._levels: deque[float] = deque(maxlen=self.LEVELS)  # of the first channel, a group each
         self._since: float | None = None
         self._until = -inf
         self._told = ""
@@ -138,6 +145,7 @@ class FanSurging(Check):
         if end - group.start >= self.GROUP_S:
             self._open = None
             self._groups.append(group)
+            self._levels.append(group.mean[0] / group.intervals)
             self._look(noise)
 
     # -- judging ------------------------------------------------------------------------------------------------
@@ -156,16 +164,21 @@ class FanSurging(Check):
             else:
                 self._tell(noise, groups, found)
             return
-        lasting = [g for g, value in zip(groups, first.groups, strict=True) if value >= self.HOLDS]
         if (
             middle >= self.OPENS
-            and len(lasting) >= self.LASTING
+            and sum([value >= self.HOLDS for value in first.groups]) >= self.LASTING
             and first.variance >= self.ERRORS * first.error
-            and first.share >= self._share_of(noise, groups, self.SLOWEST_S)
+            and first.share
+            >= self._share_of(noise, groups, self.SLOWEST_RAISED_S if self._raised() else self.SLOWEST_S)
             and self._alike(found)
         ):
-            self._since = lasting[0].start
+            self._since = groups[_began(first.groups, middle / 2.0)].start
             self._tell(noise, groups, found)
+
+    def _raised(self) -> bool:
+        """Whether the air of the window is well above the lowest of the last hours."""
+        levels = list(self._levels)
+        return median(levels[-self.GROUPS :]) > self.RAISED * min(levels)
 
     def _alike(self, found: Sequence[_Flicker]) -> bool:
         first = found[0].variance
@@ -178,9 +191,10 @@ class FanSurging(Check):
     def _flicker(self, noise: Noise, groups: Sequence[_Group], channel: int) -> _Flicker:
         frames = self._frames(groups)
         meant, white = self._shape(noise, self.MEANT_S, frames), noise.variance(frames)
-        mean = sum([g.mean[channel] for g in groups]) / sum([g.intervals for g in groups])
+        total_mean = sum([g.mean[channel] for g in groups])
+        mean = total_mean / sum([g.intervals for g in groups])
         total = sum([g.frames for g in groups])
-        # relative standard errors of both under counting alone (JCGM-like: chi-square of the frames that are
+        # relative standard errors of both under counting alone (chi-square of the frames that are
         # independent; differences of neighbours have 1.5 times the variance of a variance, von Neumann 1941)
         by_step = noise.step / max(mean, 1e-9) * sqrt(3.0 / total) / meant.step
         by_variance = white / max(mean, 1e-9) * sqrt(2.0 * noise.averaging / total) / meant.variance
@@ -190,7 +204,8 @@ class FanSurging(Check):
         squares = max(sum([g.square[channel] for g in groups]), 1e-9)
         step = sum([g.step[channel] for g in groups]) / squares
         variance = sum([g.variance[channel] for g in groups]) / squares
-        share = step / variance * white / noise.step if variance > 0.0 else inf
+        doubt = noise.step * sqrt(3.0 / total) * total_mean / squares
+        share = (step + doubt) / variance * white / noise.step if variance > 0.0 else inf
         return _Flicker((step if quick else variance) / unit, min(by_step, by_variance), tuple(each), share)
 
     def _share_of(self, noise: Noise, groups: Sequence[_Group], tau_s: float) -> float:
@@ -238,6 +253,12 @@ class FanSurging(Check):
         if is_number(confidence):
             self._since, self._confidence = at.boot_s, confidence
             self._told = "the flow flickered before the restart"
+
+
+def _began(values: Sequence[float], border: float) -> int:
+    """Where a run above `border` that reaches the end began: what lies above it sums up furthest (Page 1954)."""
+    sums = list(accumulate([value - border for value in reversed(values)]))
+    return len(values) - 1 - max(range(len(sums)), key=sums.__getitem__)
 
 
 def shape_of(tau_s: float, period_s: float, averaging: int, frames: int) -> Shape:

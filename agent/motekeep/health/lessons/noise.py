@@ -61,9 +61,9 @@ def within(averaging: float, frames: int) -> float:
 class NoiseLesson(Lesson):
     """Learns `Noise` of a sensor that prints counts, from some 24 hours of sound intervals.
 
-    Two figures are taken, each over the mean: that of neighbouring frames (scale / averaging^2) and one in which pooling
-    does not hide: with FRAMES or more to an interval the variance within it, else the variance between the means of
-    intervals, two intervals apart so that no pulse is in both. Their quotient is a function of the averaging alone.
+    Two figures are taken, each over the mean: that of neighbouring frames (scale / averaging^2) and one in which
+    pooling does not hide: with FRAMES or more to an interval the variance within it, else the variance between the
+    means of intervals, two intervals apart so that no pulse is in both. Their quotient is a function of the averaging.
 
     Both come from the rarest channel with pulses enough. There the noise of counting drowns whatever the air and the
     fan do, whose share grows with the mean: 25 % of flicker adds one in 16 to the variance of one pulse. So a fan that
@@ -183,7 +183,8 @@ class NoiseLesson(Lesson):
 
 
 def averaging_of(quotient: float, frames: int, *, within_it: bool) -> float:
-    """The averaging at which `within` (or else `of_mean`, times `frames`... ) has this value, from 1 to 30."""
+    """The averaging, 1 to 30, at which `within`, or else `of_mean`, has this value; both grow with it. Within an
+    interval none beyond half its frames can be told."""
     figure = within if within_it else of_mean
     low, high = 1.0, min(30.0, frames / 2.0) if within_it else 30.0
     for _ in range(40):
