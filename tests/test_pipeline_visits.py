@@ -105,6 +105,20 @@ def test_a_record_entered_hours_late_amends_its_own_half_hour_and_nothing_else()
     assert set(flags(harvest.readings)) == {2}
 
 
+def test_a_visit_to_a_sensor_marks_its_twin_in_the_same_case_and_no_other() -> None:
+    names = ("north", "south", "roof")
+    setups = [SensorSetup(n, BM, 6.0, twin={"north": "south", "south": "north"}.get(n)) for n in names]
+    pipeline = Pipeline(PLACE, 60, setups, at(0.0))
+    pipeline.resume(dict.fromkeys(names, 1), {}, at(0.0))
+    pipeline.service("north", ServiceKind.CLEANED, NOON, at(0.0))
+    for slot in range(1, 21):
+        for n in names:
+            pipeline.receive(n, burst(slot), at(6.0 * slot))
+    found = {f.sensor: f.evidence for f in pipeline.harvest().findings if f.code == "service-visit"}
+    assert set(found) == {"north", "south"}
+    assert "the twin cleaned at" in found["south"]
+
+
 def test_a_note_marks_nothing() -> None:
     gateway = Gateway()
     gateway.live(600.0)

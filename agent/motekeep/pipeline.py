@@ -282,6 +282,8 @@ class Pipeline:
         sensor = self._sensors[name]
         sensor.dose = sensor.dose.serviced(kind, done_utc, at.utc)
         sensor.health.service(kind, done_utc, at)
+        if sensor.twin_health is not None:
+            sensor.twin_health.twin_service(kind, done_utc, at)
 
     def record_service(self, record: ServiceDocument, at: Instant) -> None:
         """A service record to be kept and published: it leaves with the next harvest, together with what it changed."""

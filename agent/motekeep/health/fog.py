@@ -45,9 +45,10 @@ class HumidityHigh(Check):
     Droplets: the ratio of counts above 1 um to those in the smallest channel, medians of the last seven minutes, is 1.6
     times its median of the last day (times of fog left out); counts above 1 um are themselves 1.4 times those of the
     last three hours, since air that merely loses its haze shows the same ratio; their excess is 0.4 per cm3 at least;
-    RH outside is 88 % at least, and 96 % or risen by a point in twenty minutes. Twice in a row. A minute of plume moves
-    no such median; dust and sea salt have the ratio, but seldom that air. It closes after twenty minutes without. Three
-    hours of record are needed first. A fixed RH says nothing, and a sensor without counts is judged by RH alone.
+    RH outside is 88 % at least, and 96 % or on the rise in these twenty minutes, in any case not falling. Twice in a
+    row. A minute of plume moves no such median; dust and sea salt have the ratio, but seldom that air. It closes after
+    twenty minutes without. Three hours of record are needed first. A fixed RH says nothing, and a sensor without counts
+    is judged by RH alone.
     """
 
     code: ClassVar[str] = "humidity-high"
@@ -63,7 +64,7 @@ class HumidityHigh(Check):
     RH, RH_BACK = 95.0, 93.0
     SATURATED_LEAST, FORGOTTEN_A_DAY = 80.0, 0.1
     NEAR, NEAR_BACK = 88.0, 84.0
-    HIGH, RISE = 96.0, 1.0
+    HIGH, RISE, FALLS = 96.0, 0.8, 0.3
     JUMP, JUMP_BACK, UP = 1.6, 1.3, 1.4
     EXCESS = 40.0  # per 0.1 L
 
@@ -145,8 +146,10 @@ class HumidityHigh(Check):
         return shown
 
     def _grew(self, piece: _Piece, small: float, large: float) -> bool:
-        lowest = min([p.outside for p in self._pieces])
-        moist = piece.outside >= self.HIGH or piece.outside - lowest >= self.RISE
+        recent = [p.rh for p in self._pieces]
+        if piece.rh < max(recent) - self.FALLS:
+            return False
+        moist = piece.outside >= self.HIGH or piece.rh - min(recent) >= self.RISE
         excess = large - (self._base or 0.0) * small
         return moist and excess >= self.EXCESS and large >= self.UP * median(self._larges)
 

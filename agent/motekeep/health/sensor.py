@@ -59,6 +59,7 @@ class SensorHealth:
         limits: Limits = DEFAULT_LIMITS,
     ) -> None:
         self._warm_up = WarmingUp(dialect.warm_up_s, period_s, at)
+        self._visit = ServiceVisit()
         self._checks: tuple[Check, ...] = (
             self._warm_up,
             FramesMissing(dialect, period_s, at),
@@ -72,7 +73,7 @@ class SensorHealth:
             *([FanStoppedBesideTwin(flow_l_min, period_s)] if twinned else []),
             FanSurging(period_s),
             HumidityHigh(),
-            ServiceVisit(),
+            self._visit,
             UnitSwapped(),
             DoseDue(limits),
             HoursDue(limits),
@@ -192,6 +193,10 @@ class SensorHealth:
         for hook in self._service:
             hook(kind, done_utc, at)
         self._notes_due = True
+
+    def twin_service(self, kind: ServiceKind, done_utc: float, at: Instant) -> None:
+        """A person did something at the twin, in the same enclosure."""
+        self._visit.beside(kind, done_utc, at)
 
     # -- what comes out -----------------------------------------------------------------------------------------
 

@@ -32,8 +32,8 @@ class ServiceVisit(Check):
     The span is ours. People enter a record when they are done or close to it, and before that they have opened the
     case, breathed on it and stirred the dust up; after it the case is closed, the unit warms up (half a minute), the
     air that came in is exchanged and the dust that was stirred settles (10 um falls a metre in some six minutes, 5 um
-    in twenty; Stokes). A `note` is no visit. A record of a visit that is over opens the finding once, for the span that
-    it was, so that the readings of that span are amended.
+    in twenty; Stokes). A visit to the twin in the same enclosure is one here too; a `note` is none. A record of a visit
+    that is over opens the finding once, for the span that it was, so that the readings of that span are amended.
     """
 
     code: ClassVar[str] = "service-visit"
@@ -51,6 +51,11 @@ class ServiceVisit(Check):
     def service(self, kind: ServiceKind, done_utc: float, at: Instant) -> None:
         if kind is not ServiceKind.NOTE:
             self._add(done_utc, f"{kind.value} at {rfc3339(done_utc)}", at)
+
+    def beside(self, kind: ServiceKind, done_utc: float, at: Instant) -> None:
+        """It was the twin's record: whoever is at its case is at this one too."""
+        if kind is not ServiceKind.NOTE:
+            self._add(done_utc, f"the twin {kind.value} at {rfc3339(done_utc)}", at)
 
     def _add(self, done_utc: float, said: str, at: Instant) -> None:
         self._offset = at.offset
