@@ -162,6 +162,7 @@ class Calibration(Section):
 
 class Health(Section):
     every: float = Field(default=60.0, ge=5, le=3600)
+    active: float = Field(default=4.0, ge=0, le=24)  # a day
 
 
 class Config(Section):

@@ -11,6 +11,7 @@ from contextlib import suppress
 from dataclasses import dataclass, field
 from typing import Any
 
+from motekeep.health.active_check import ActiveSchedule
 from motekeep.health.check import LineState
 from motekeep.health.finding import Category, Finding, FindingEvent
 from motekeep.health.gateway import GatewayFacts, GatewayHealth
@@ -40,13 +41,15 @@ from motekeep.wire.frame import Damage, Decoder, Dialect, Observation
 
 STEP_S = 1.0  # a jump of the wall clock beyond this is a step; time services slew smaller ones
 JUDGE_EVERY_S = 5.0  # fine enough for findings due within three minutes, coarse enough to cost nothing
+NO_CHECK_DURING = frozenset({"warming-up", "frames-missing", "service-visit"})
 SKIP_SPANS = 10  # of a longer hole (suspend, a gap in a capture) only so many intervals are empty, the rest is absent
 
 
 @dataclass(frozen=True, slots=True)
 class SensorSetup:
     """What the pipeline must know of a sensor. `twin` names the sensor beside it, in the same enclosure and air.
-    `climate_max_age_s`: older climate counts as absent."""
+    `climate_max_age_s`: older climate counts as absent. `active_a_day`: how often its fan is checked by putting it to
+    sleep, see `active_check`."""
 
     name: str
     dialect: Dialect
@@ -56,6 +59,7 @@ class SensorSetup:
     frame_climate: bool = False
     climate_max_age_s: float = 900.0
     limits: Limits = DEFAULT_LIMITS
+    active_a_day: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -123,6 +127,7 @@ class _Sensor:
     health: SensorHealth
     cadence: Cadence
     decoder: Decoder
+    active: ActiveSchedule
     ring: Ring = field(default_factory=Ring)
     twin_health: SensorHealth | None = None
     seq: int | None = None
@@ -173,7 +178,8 @@ class Pipeline:
             twinned=setup.twin is not None,
             limits=setup.limits,
         )
-        return _Sensor(setup, health, Cadence(setup.period_s, at.boot_s), setup.dialect.decoder())
+        active = ActiveSchedule(setup.active_a_day if setup.dialect.commands.sleep else 0.0, at)
+        return _Sensor(setup, health, Cadence(setup.period_s, at.boot_s), setup.dialect.decoder(), active)
 
     def resume(self, seqs: Mapping[str, int], kept: Mapping[str, str], at: Instant) -> None:
         """Go on from an earlier life: each sensor's next sequence number, and what `Harvest.keep` held last.
@@ -242,6 +248,8 @@ class Pipeline:
         sensor.ring.line(state, at)
         if state is LineState.OPENED:
             sensor.decoder.reset()
+            if sensor.asleep_since is not None:  # it was lost asleep, and is woken by what is said to an open line
+                self._woke(sensor, at.boot_s)
         elif state is LineState.ASLEEP:
             sensor.accumulator.missing += sensor.cadence.due(at.boot_s)
             sensor.asleep_since = at.boot_s
@@ -253,6 +261,20 @@ class Pipeline:
             sensor.asleep_s += boot_s - max(sensor.asleep_since, self._span.boot_s)
             sensor.asleep_since = None
         sensor.cadence.restart(boot_s)
+
+    def active_check(self, name: str, at: Instant) -> bool:
+        """Whether this sensor is to be put to sleep now, to be woken after `active_check.SLEEP_S`. True counts as its
+        beginning. Never while it starts, is gone or visited, and never beside its twin's own."""
+        sensor = self._sensors[name]
+        if not sensor.active.due(at, asked=sensor.health.wants_wake(at)):
+            return False
+        twin = None if sensor.setup.twin is None else self._sensors.get(sensor.setup.twin)
+        if twin is not None and (twin.asleep_since is not None or at.boot_s < twin.active.until_s):
+            return False
+        if any(finding.code in NO_CHECK_DURING for finding in sensor.health.open()):
+            return False
+        sensor.active.begin(at)
+        return True
 
     def climate(self, name: str, climate: Climate, at: Instant) -> None:
         """Air at the sensor from another source than its frames; from then on frames are not asked for it."""

@@ -16,6 +16,7 @@ from typing import Any, ClassVar
 
 from motekeep.health.check import LineState
 from motekeep.health.hour import Hour
+from motekeep.health.wake import Wake
 from motekeep.instant import Instant
 from motekeep.measure.dose import ServiceKind
 from motekeep.measure.interval import Interval
@@ -45,6 +46,9 @@ class Lesson(ABC):
 
     def line(self, state: LineState, at: Instant) -> None:  # noqa: B027
         """The line changed its state."""
+
+    def wake(self, wake: Wake) -> None:  # noqa: B027
+        """The sensor was woken and looked at while nothing was wrong with it."""
 
     @abstractmethod
     def part(self) -> Any:

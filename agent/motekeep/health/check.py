@@ -12,6 +12,7 @@ from typing import Any, ClassVar
 from motekeep.health.finding import Suspicion
 from motekeep.health.hour import Hour
 from motekeep.health.memory import Memory
+from motekeep.health.wake import Wake
 from motekeep.instant import Instant
 from motekeep.measure.account import Account
 from motekeep.measure.dose import ServiceKind
@@ -69,6 +70,9 @@ class Check(ABC):
     def hour(self, hour: Hour) -> None:  # noqa: B027
         """An hour is over: told with the first interval of the next one, trusted clock or not."""
 
+    def wake(self, wake: Wake) -> None:  # noqa: B027
+        """The sensor was woken and has been looked at for a minute and a half, or for as long as it was awake."""
+
     def learnt(self, parts: Mapping[str, Any]) -> None:  # noqa: B027
         """What is known of this unit, by lesson, has changed (see `baseline`). Any: each lesson has its own part."""
 
@@ -81,6 +85,10 @@ class Check(ABC):
     @abstractmethod
     def judge(self, at: Instant) -> Suspicion | None:
         """Whether the condition holds now. Asked every few seconds and at each interval's end."""
+
+    def wants_wake(self, at: Instant) -> bool:
+        """Whether a wake would tell this check what it cannot see: it may then be brought about, by an active check."""
+        return False
 
     def memory(self) -> Memory | None:
         """What must survive a restart (of a quick check: while the condition holds); None for nothing."""

@@ -129,6 +129,7 @@ KINDS: dict[str, Kind] = {
         4,
         f"Switch the sensor's supply off and on, and replace the unit if it reports the fault again. {OPENING}",
     ),
+    "active-check": Kind(C, None, "Nothing to do: the sensor sleeps for ten minutes, to show its fan start."),
     "warming-up": Kind(C, None, "Nothing to do: the sensor has just started, and its first half minute is left out."),
     "humidity-high": Kind(
         S, 3, "Nothing to repair: in fog a counter weighs water, and no correction holds; read these hours as too high."

@@ -13,21 +13,27 @@ from motekeep.health.account import (
     DoseDue,
     HoursDue,
 )
+from motekeep.health.active_check import ActiveCheck
 from motekeep.health.baseline import Baseline, hears
 from motekeep.health.check import Check, LineState, listens
 from motekeep.health.fan import FanStopped
 from motekeep.health.fan_surging import FanSurging
 from motekeep.health.fan_twin import FanStoppedBesideTwin
+from motekeep.health.fan_wake import FanStoppedByWakes
+from motekeep.health.fan_weak import FanWeakByWakes
 from motekeep.health.finding import Finding, FindingEvent, Suspicion, casts_doubt
 from motekeep.health.fog import HumidityHigh
 from motekeep.health.frozen import OutputFrozen
 from motekeep.health.hour import Hour, HourBuilder
 from motekeep.health.ledger import Ledger, Terms
 from motekeep.health.lessons.noise import Noise, NoiseLesson
+from motekeep.health.lessons.spin_up import SpinUpLesson
 from motekeep.health.line import FramesCorrupt, FramesMissing
 from motekeep.health.range import ChannelsInconsistent, CountsSaturated, MassClipped
 from motekeep.health.unit import SensorError, WarmingUp
 from motekeep.health.visit import ServiceVisit, UnitSwapped
+from motekeep.health.wake import Wake
+from motekeep.health.wake_watch import WakeWatch
 from motekeep.instant import Instant
 from motekeep.measure.account import Account, Limits
 from motekeep.measure.dose import ServiceKind
@@ -60,6 +66,8 @@ class SensorHealth:
     ) -> None:
         self._warm_up = WarmingUp(dialect.warm_up_s, period_s, at)
         self._visit = ServiceVisit()
+        sleeps = dialect.commands.sleep is not None
+        self._watch = WakeWatch(flow_l_min, period_s) if sleeps else None
         self._checks: tuple[Check, ...] = (
             self._warm_up,
             FramesMissing(dialect, period_s, at),
@@ -71,6 +79,8 @@ class SensorHealth:
             SensorError(dialect.error_bits),
             FanStopped(flow_l_min, period_s),
             *([FanStoppedBesideTwin(flow_l_min, period_s)] if twinned else []),
+            *([FanStoppedByWakes(flow_l_min, period_s), ActiveCheck()] if sleeps else []),
+            *([FanWeakByWakes()] if sleeps and not twinned else []),  # a twin tells it in a day
             FanSurging(period_s),
             HumidityHigh(),
             self._visit,
@@ -81,7 +91,12 @@ class SensorHealth:
             CalibrationExpired(),
             CalibrationOutOfRange(),
         )
-        self.baseline = Baseline((NoiseLesson(flow_l_min, period_s),))
+        self.baseline = Baseline(
+            (
+                NoiseLesson(flow_l_min, period_s),
+                *([SpinUpLesson()] if sleeps and not twinned else []),
+            )
+        )
         self._hours = HourBuilder()
         self._notes_due = False
         terms = {check.code: Terms(check.clear_s, check.again_s) for check in self._checks}
@@ -89,7 +104,7 @@ class SensorHealth:
         self._events: list[FindingEvent] = []  # those of an interval's end, until the next judge; a few
         checks = self._checks
         self._observe_all: tuple[Observe, ...] = tuple(
-            [c.observe for c in checks if listens(c, "observe") and not c.settled]
+            [c.observe for c in checks if listens(c, "observe") and not c.settled] + ([self._look] if sleeps else [])
         )
         self._observe_settled: tuple[Observe, ...] = tuple(
             [c.observe for c in checks if listens(c, "observe") and c.settled]
@@ -98,6 +113,8 @@ class SensorHealth:
         self._damaged = tuple([c.damaged for c in checks if listens(c, "damaged")])
         self._heard = tuple([c.heard for c in checks if listens(c, "heard")])
         self._line = tuple([c.line for c in checks if listens(c, "line")])
+        self._wake = tuple([c.wake for c in checks if listens(c, "wake")])
+        self._wants_wake = tuple([c.wants_wake for c in checks if listens(c, "wants_wake")])
         self._interval = tuple([c.interval for c in checks if listens(c, "interval")])
         self._hour = tuple([c.hour for c in checks if listens(c, "hour")])
         self._learnt = tuple([c.learnt for c in checks if listens(c, "learnt")])
@@ -109,6 +126,7 @@ class SensorHealth:
         lessons = self.baseline.lessons
         self._lesson_observe: tuple[Observe, ...] = tuple([x.observe for x in lessons if hears(x, "observe")])
         self._lesson_line = tuple([x.line for x in lessons if hears(x, "line")])
+        self._lesson_wake = tuple([x.wake for x in lessons if hears(x, "wake")])
         self._lesson_interval = tuple([x.interval for x in lessons if hears(x, "interval")])
         self._lesson_hour = tuple([x.hour for x in lessons if hears(x, "hour")])
 
@@ -145,6 +163,21 @@ class SensorHealth:
             hook(state, at, why)
         for told in self._lesson_line:
             told(state, at)
+        if self._watch is not None:
+            self._hear_wake(self._watch.line(state, at))
+
+    def _look(self, observation: Observation) -> None:
+        if self._watch is not None and self._watch.looking:
+            self._hear_wake(self._watch.observe(observation))
+
+    def _hear_wake(self, wake: Wake | None) -> None:
+        if wake is None:
+            return
+        if self.sound:
+            for lesson in self._lesson_wake:
+                lesson(wake)
+        for hook in self._wake:
+            hook(wake)
 
     def interval(self, interval: Interval) -> None:
         """An interval was closed. Judged at once, so that `flags_between` of its span is complete; the events come out
@@ -203,6 +236,10 @@ class SensorHealth:
     def warming(self, at: Instant) -> bool:
         """Whether frames that come now are still those of warm-up, to be left out of the statistics."""
         return at.boot_s < self._warm_up.until
+
+    def wants_wake(self, at: Instant) -> bool:
+        """Whether a check would learn from a wake what it cannot see without one."""
+        return any(wants(at) for wants in self._wants_wake)
 
     def judge(self, at: Instant) -> list[FindingEvent]:
         """Findings that opened and closed since the last call. To be asked every few seconds."""

@@ -31,6 +31,11 @@ class Intake:
         with self._lock:
             self._pipeline.line(sensor, state, at, why)
 
+    def active_check(self, sensor: str, at: Instant) -> bool:
+        """Whether the sensor is to be put to sleep now, for an active check; asking counts as beginning it."""
+        with self._lock:
+            return self._pipeline.active_check(sensor, at)
+
     def climate(self, sensor: str, climate: Climate, at: Instant) -> None:
         with self._lock:
             self._pipeline.climate(sensor, climate, at)
