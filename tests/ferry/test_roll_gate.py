@@ -94,6 +94,7 @@ def test_without_a_hold_acceptance_is_enough() -> None:
         (finding("counts-saturated", "out_of_specification"), Step.SOAKING),
         (finding("warming-up", "function_check"), Step.SOAKING),
         (finding("dose-due", "maintenance_required"), Step.SOAKING),
+        (finding("service-visit", "function_check"), Step.SOAKING),
     ],
 )
 def test_a_new_finding_stops_unless_weather_or_the_calendar_brought_it(own: dict[str, Any], step: Step) -> None:

@@ -14,7 +14,7 @@ import pytest
 from click.testing import CliRunner, Result
 
 from emulated_fleet import EmulatedFleet, Gateway, document_text, make_key, write_signed
-from mosquitto import Mosquitto, running
+from mosquitto import Certificates, Mosquitto, running
 from moteferry.cli import main
 from moteferry.roll.offer import Target
 from moteferry.roll.register import Register
@@ -110,6 +110,17 @@ def test_rolling_it_again_sends_nothing_more(tmp_path: Path) -> None:
         code, told = here.rolled(*documents, "--hold", "0")
         assert (code, told["outcome"]) == (0, "done")
         assert [len(gateway.offers) for gateway in here.fleet.gateways.values()] == [1, 1]
+
+
+def test_going_on_past_a_refusal_leaves_its_gateway_out_and_says_so(tmp_path: Path) -> None:
+    gateways = well(3)
+    gateways[0].behaviour = "refuses"
+    with site(tmp_path, *gateways) as here:
+        documents = here.documents(3)
+        assert here.rolled(*documents, "--hold", "0")[0] == 1
+        code, told = here.rolled(*documents, "--hold", "0", "--go-on")
+        assert (code, told["outcome"], told["left_out"]) == (1, "done", ["quarry/gate-0/north"])
+        assert [len(gateway.offers) for gateway in here.fleet.gateways.values()] == [1, 1, 1]
 
 
 @pytest.mark.parametrize(
@@ -247,3 +258,33 @@ def test_no_broker_is_one_line_that_names_the_option(tmp_path: Path) -> None:
     result = CliRunner().invoke(main, words)
     assert result.exit_code == 2
     assert "not reachable: Connection refused" in result.stderr
+
+
+def test_a_wrong_password_is_one_line_that_names_the_options(tmp_path: Path) -> None:
+    password = tmp_path / "password"
+    password.write_text("wrong\n")
+    mosquitto = Mosquitto(tmp_path, users={"operator": "right"})
+    [document] = write_signed(tmp_path, make_key(tmp_path), {targets(1)[0]: document_text(targets(1)[0], 3)})
+    words = ["roll", str(document), "--broker", f"127.0.0.1:{mosquitto.port}", "--register", str(tmp_path / "r.db")]
+    login = ["--username", "operator", "--password-file", str(password)]
+    with running(mosquitto):
+        result = CliRunner().invoke(main, [*words, *login])
+        assert result.exit_code == 2
+        assert "the broker refuses our login" in result.stderr
+        assert "look at --username, --password-file and --tls-cert" in result.stderr
+        password.write_text("right\n")
+        assert "not heard: no health document at this broker" in CliRunner().invoke(main, [*words, *login]).output
+
+
+def test_tls_with_certificates_of_ones_own(tmp_path: Path) -> None:
+    made = Certificates(tmp_path)
+    mosquitto = Mosquitto(tmp_path, tls=made)
+    [document] = write_signed(tmp_path, make_key(tmp_path), {targets(1)[0]: document_text(targets(1)[0], 3)})
+    words = ["roll", str(document), "--broker", f"127.0.0.1:{mosquitto.port}", "--register", str(tmp_path / "r.db")]
+    ours = ["--tls-cert", f"{made.client}.crt", "--tls-key", f"{made.client}.key"]
+    with running(mosquitto):
+        result = CliRunner().invoke(main, [*words, *ours, "--tls-ca", str(made.ca)])
+        assert (result.exit_code, "not heard" in result.output) == (1, True)
+        result = CliRunner().invoke(main, [*words, *ours])
+        assert result.exit_code == 2
+        assert "look at --tls-ca and at this computer's clock" in result.stderr

@@ -63,16 +63,17 @@ class Progress:
 
 @dataclass(frozen=True, slots=True)
 class Outcome:
-    """`done`: every target of every wave has it. `open`: offered and taken back, or never offered."""
+    """Where each target of the waves stands: `passed`; `holding`, which have it and were not held to the end; those
+    that stopped the roll; and `open`, which were not offered it, or had it taken back before they answered."""
 
-    waves: int
     passed: Sequence[Target]
+    holding: Sequence[Target]
     failures: Sequence[Failure]
     open: Sequence[Target]
 
     @property
     def done(self) -> bool:
-        return not self.failures and not self.open
+        return not (self.failures or self.holding or self.open)
 
 
 @dataclass(frozen=True, slots=True)
@@ -126,14 +127,21 @@ class Conductor:
                 self._show(self._progress(number, wave))
         if self._failures:
             self._take_back()
-        everybody = [offer.target for wave in self._course.waves for offer in wave]
-        passed = [target for target in everybody if self._passed(target) and target not in self._failures]
-        return Outcome(
-            len(self._course.waves),
-            passed,
-            list(self._failures.values()),
-            [target for target in everybody if target not in passed and target not in self._failures],
-        )
+        return self._outcome()
+
+    def _outcome(self) -> Outcome:
+        passed: list[Target] = []
+        holding: list[Target] = []
+        opened: list[Target] = []
+        for target in [offer.target for wave in self._course.waves for offer in wave]:
+            case = self._cases.get(target)
+            if target in self._failures:
+                continue
+            if case is None or case.accepted_at is None:
+                opened.append(target)
+            else:
+                (passed if case.passed else holding).append(target)
+        return Outcome(passed, holding, list(self._failures.values()), opened)
 
     # -- where it stands ----------------------------------------------------------------------------------------
 

@@ -21,8 +21,8 @@ RANK = {
         ("normal", "maintenance_required", "out_of_specification", "function_check", "failure")
     )
 }
-# Judged on raw figures, before any calibration, and brought by weather, by waking up, or by the calendar.
-NOT_OURS = frozenset({"humidity-high", "counts-saturated", "warming-up", "dose-due", "hours-due", "uplink-lost"})
+# Judged on raw figures, before any calibration, and brought by weather, by waking up, by a visitor, or by the calendar.
+NOT_OURS = frozenset({"humidity-high", "counts-saturated", "warming-up", "service-visit", "dose-due", "hours-due"})
 # One reading of flag 4 may be a sensor's own bad minute.
 READINGS_FAILED = 2
 

@@ -53,10 +53,10 @@ class Plan:
         found = Counter(entry.standing for entry in self.entries)
         return {standing: found[standing] for standing in Standing}
 
-    def left_out(self, rolled: Collection[Target] = ()) -> list[Entry]:
-        """Who neither has it nor is offered it; a roll that goes on has targets of its own (`rolled`)."""
-        fine = (Standing.OFFER, Standing.HAS_IT)
-        return [entry for entry in self.entries if entry.standing not in fine and entry.target not in rolled]
+    def left_out(self, rolled: Collection[Target] | None = None) -> list[Entry]:
+        """Who neither has it nor would be offered it; once it is known who is `rolled`, who is not among them."""
+        fine = (Standing.OFFER, Standing.HAS_IT) if rolled is None else (Standing.HAS_IT,)
+        return [entry for entry in self.entries if entry.standing not in fine and entry.target not in (rolled or ())]
 
 
 def make_plan(offers: Iterable[Offer], fleet: Fleet, now: float, *, unwell_too: bool = False) -> Plan:

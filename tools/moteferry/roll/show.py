@@ -107,11 +107,11 @@ def _line(progress: Progress) -> str:
 def show_outcome(outcome: Outcome, left: Sequence[Entry], *, undo: bool) -> None:
     for failure in outcome.failures[:LINES]:
         click.echo(f"  {failure.target} {STOPPED[failure.step]}: {failure.why}")
-    passed, everybody = len(outcome.passed), len(outcome.passed) + len(outcome.failures) + len(outcome.open)
+    passed, holding, open_ = (len(some) for some in (outcome.passed, outcome.holding, outcome.open))
+    everybody = passed + holding + open_ + len(outcome.failures)
     if outcome.failures:
-        click.echo(
-            f"stopped: {passed} of {everybody} have it; {len(outcome.open)} were not offered it, or not any more"
-        )
+        click.echo(f"stopped: of {everybody}, {passed} have it and held it, {holding} have it since a moment ago,")
+        click.echo(f"  {len(outcome.failures)} stopped the roll, {open_} do not have it and are not offered it now")
         again = "the same command again goes on, with --go-on without those above"
         click.echo(again if undo else f"{again}; --undo takes everybody back")
         return
@@ -144,6 +144,7 @@ def outcome_json(outcome: Outcome) -> dict[str, Any]:  # Any: JSON
     return {
         "outcome": "done" if outcome.done else "stopped",
         "passed": [str(target) for target in outcome.passed],
+        "holding": [str(target) for target in outcome.holding],
         "failures": [{**f.target._asdict(), "step": f.step.value, "why": f.why} for f in outcome.failures],
         "open": [str(target) for target in outcome.open],
     }
