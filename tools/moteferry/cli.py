@@ -4,6 +4,7 @@ Owns arguments and the translation of named errors: 0 done, 1 what was asked abo
 in one line. Each command is imported when it is called: fitting needs numpy and scipy, signing nothing.
 """
 
+from datetime import datetime
 from pathlib import Path
 
 import click
@@ -76,7 +77,7 @@ MODELS = ("scale", "linear", "linear-rh", "growth", "linear-rh-t", "piecewise")
 @click.option(
     "--reference-random",
     type=click.FloatRange(0.0, 1.0),
-    default=0.5,
+    default=0.75,
     show_default=True,
     help="Share of the variance u^2 of the reference that is drawn anew each time; the rest is the same all along.",
 )
@@ -135,6 +136,63 @@ def rehearse(document: Path, device: Path, out: Path, sensor: str | None, max_sh
     from moteferry import rehearsal  # noqa: PLC0415 (see above)
 
     _exit(rehearsal.rehearsal(document, device, out, sensor, max_shift, as_json=as_json))
+
+
+@main.command()
+@click.argument("documents", nargs=-1, type=FILE, required=True)
+@click.option("--key", type=FILE, required=True, help="Private key, or the .pub of one in the agent or on a token.")
+@click.option("--signers", type=FILE, help="An allowed-signers file: also say whether its devices would take it.")
+@click.option("--revoked", type=FILE, help="With --signers: their revocation list.")
+@json_option
+def sign(documents: tuple[Path, ...], key: Path, signers: Path | None, revoked: Path | None, as_json: bool) -> None:
+    """Sign DOCUMENTS, each x.toml as x.toml.sig beside it, by `ssh-keygen -Y sign`.
+
+    A document that no device would read is not signed, and a signature that is not good is not kept.
+    """
+    from moteferry import signing_command  # noqa: PLC0415 (see above)
+
+    signing_command.sign_all(documents, key, signers, revoked, as_json=as_json)
+
+
+@main.group()
+def signers() -> None:
+    """Whose signatures devices accept: the allowed-signers file and the revocation list."""
+
+
+@signers.command("add")
+@click.argument("file", type=click.Path(dir_okay=False, path_type=Path))
+@click.option("--key", type=FILE, required=True, help="The .pub file.")
+@click.option("--principal", required=True, help="What the signer is called, like anna@example.")
+@click.option("--until", type=click.DateTime(["%Y-%m-%d"]), help="The first day on which it no longer holds, UTC.")
+def signers_add(file: Path, key: Path, principal: str, until: datetime | None) -> None:
+    """Trust a public key for calibration, and nothing else, in the allowed-signers FILE (made when it is not there)."""
+    from moteferry import signing_command  # noqa: PLC0415
+
+    signing_command.add(file, key, principal, until.date() if until is not None else None)
+
+
+@signers.command("revoke")
+@click.argument("file", type=click.Path(dir_okay=False, path_type=Path))
+@click.option("--key", type=FILE, required=True, help="The .pub file.")
+def signers_revoke(file: Path, key: Path) -> None:
+    """Put a public key on the revocation list FILE (made when it is not there), [calibration] revoked of a device.
+
+    What it has signed goes out of force on the devices that get the list, and issue numbers it used up are free again.
+    """
+    from moteferry import signing_command  # noqa: PLC0415
+
+    signing_command.revoke(file, key)
+
+
+@signers.command("list")
+@click.argument("file", type=FILE)
+@click.option("--revoked", type=FILE, help="Say of each key whether it stands on this list.")
+@json_option
+def signers_list(file: Path, revoked: Path | None, as_json: bool) -> None:
+    """The keys of the allowed-signers FILE."""
+    from moteferry import signing_command  # noqa: PLC0415
+
+    signing_command.show(file, revoked, as_json=as_json)
 
 
 @main.command()
