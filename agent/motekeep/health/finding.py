@@ -141,6 +141,7 @@ KINDS: dict[str, Kind] = {
         C,
         3,
         "Enter `motekeep service add SENSOR unit-replaced` if it was, and check that its calibration is of this unit.",
+        explains=("fan-surging",),  # its noise is compared with that of the unit before it
     ),
     "dose-due": Kind(
         M,

@@ -15,6 +15,7 @@ from motekeep.health.account import (
 )
 from motekeep.health.active_check import ActiveCheck
 from motekeep.health.baseline import Baseline, hears
+from motekeep.health.behaviour import BehaviourSwapped
 from motekeep.health.check import Check, LineState, listens
 from motekeep.health.fan import FanStopped
 from motekeep.health.fan_surging import FanSurging
@@ -85,6 +86,7 @@ class SensorHealth:
             HumidityHigh(),
             self._visit,
             UnitSwapped(),
+            BehaviourSwapped(),
             DoseDue(limits),
             HoursDue(limits),
             *([CalibrationMissing()] if limits.calibration_required else []),
