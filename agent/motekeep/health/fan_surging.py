@@ -170,7 +170,7 @@ class FanSurging(Check):
             and first.variance >= self.ERRORS * first.error
             and first.share
             >= self._share_of(noise, groups, self.SLOWEST_RAISED_S if self._raised() else self.SLOWEST_S)
-            and self._alike(found)
+            and self._alike(groups, found)
         ):
             self._since = groups[_began(first.groups, middle / 2.0)].start
             self._tell(noise, groups, found)
@@ -180,11 +180,16 @@ class FanSurging(Check):
         levels = list(self._levels)
         return median(levels[-self.GROUPS :]) > self.RAISED * min(levels)
 
-    def _alike(self, found: Sequence[_Flicker]) -> bool:
+    def _alike(self, groups: Sequence[_Group], found: Sequence[_Flicker]) -> bool:
+        """Whether the other channels flicker as the first does. What grows as counting noise does, over the mean, is no
+        flow but another unit in the place of the one that was learnt: the border lies half-way to it."""
+        means = [sum([g.mean[channel] for g in groups]) for channel in range(len(found))]
         first = found[0].variance
         return all(
-            self.ALIKE * first <= other.variance <= first / self.ALIKE
-            for other in found[1:]
+            self.ALIKE * first - other.error
+            <= other.variance
+            <= first * min(1.0 / self.ALIKE, sqrt(means[0] / mean)) + other.error
+            for other, mean in zip(found[1:], means[1:], strict=True)
             if 3.0 * other.error < self.ALIKE * first
         )
 
