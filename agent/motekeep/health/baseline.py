@@ -29,11 +29,13 @@ Notes = Mapping[str, float | Sequence[float]]
 class Lesson(ABC):
     """One thing to learn. `name` is what its part is called in `Baseline.parts`.
 
-    `begun_again_by`: kinds of service after which it is learnt anew. Overrides the hooks it needs.
+    `begun_again_by`: kinds of service after which it is learnt anew; `begun_again_by_twin`: those at the twin. Overrides
+    the hooks it needs.
     """
 
     name: ClassVar[str]
     begun_again_by: ClassVar[frozenset[ServiceKind]]
+    begun_again_by_twin: ClassVar[frozenset[ServiceKind]] = frozenset()
 
     def interval(self, interval: Interval) -> None:  # noqa: B027 (empty on purpose, as in Check)
         """A sound interval was closed."""
@@ -106,6 +108,13 @@ class Baseline:
         """Forget what the service has changed; whether that was anything."""
         for lesson in self._lessons:
             if kind in lesson.begun_again_by:
+                lesson.forget()
+        return self.review(at)
+
+    def twin_service(self, kind: ServiceKind, at: Instant) -> bool:
+        """The same of a service of the twin."""
+        for lesson in self._lessons:
+            if kind in lesson.begun_again_by_twin:
                 lesson.forget()
         return self.review(at)
 

@@ -23,7 +23,7 @@ class Levels:
 
 @dataclass(frozen=True, slots=True)
 class Pair:
-    """Mean levels of a sensor and of its twin over the intervals in which both were sound, in channels both have.
+    """Mean levels of a sensor and of its twin over the intervals in which both could be compared, in channels both have.
 
     `seconds` is what the intervals last together, `frames` and `twin_frames` what was averaged.
     """
@@ -42,8 +42,9 @@ class Hour:
 
     `levels` are means over its frames and `lowest` the lowest interval mean of each channel, None without sound frames.
     Intervals with a censored count are in none of these. `sound` says that nothing was wrong with the sensor in it,
-    as far as anybody knew then; `pair` holds only intervals in which nothing was wrong with either. `rh_pct` and
-    `temperature_c` are means where climate is known.
+    as far as anybody knew then; `pair` holds only intervals in which nothing was wrong with either, but what the twin
+    itself tells of the sensor: that could not be seen to end otherwise. `rh_pct` and `temperature_c` are means where
+    climate is known.
     """
 
     start: Instant
@@ -94,8 +95,9 @@ class HourBuilder:
         self._rh: list[float] = []  # at most one an interval, so 360 an hour; the same below
         self._warm: list[float] = []
 
-    def add(self, interval: Interval, *, sound: bool) -> Hour | None:
-        """One more interval of the sensor; the hour before it, when it is the first of another."""
+    def add(self, interval: Interval, *, sound: bool, comparable: bool | None = None) -> Hour | None:
+        """One more interval of the sensor; the hour before it, when it is the first of another. `comparable`: whether
+        it may stand beside the twin's; when it is sound, unless said otherwise."""
         finished = None
         if self._start is None or not _same_hour(self._start, interval.start):
             finished = self._finish()
@@ -111,12 +113,13 @@ class HourBuilder:
             self._rh.append(interval.climate.rh_pct)
             if interval.climate.temperature_c is not None:
                 self._warm.append(interval.climate.temperature_c)
-        self._own_last = interval, sound
+        self._own_last = interval, sound if comparable is None else comparable
         self._match()
         return finished
 
     def add_twin(self, interval: Interval, *, sound: bool) -> None:
-        """One more interval of the twin; comes before or after the sensor's own of the same span."""
+        """One more interval of the twin, and whether it can be relied on; comes before or after the sensor's own of the
+        same span."""
         self._twin_last = interval, sound
         self._match()
 
