@@ -377,7 +377,7 @@ class Pipeline:
             sensor.asleep_s = 0.0
             sensor.health.interval(interval)
             if sensor.twin_health is not None:
-                sensor.twin_health.twin_interval(interval, sound=sensor.health.sound)
+                sensor.twin_health.twin_interval(interval, sound=sensor.health.reliable)
             if seconds < 1.0 or sensor.seq is None:
                 continue  # a sliver before a clock step holds no figure
             flags = sensor.health.flags_between(span.boot_s, end_s)

@@ -29,8 +29,11 @@ from motekeep.health.hour import Hour, HourBuilder
 from motekeep.health.ledger import Ledger, Terms
 from motekeep.health.lessons.noise import Noise, NoiseLesson
 from motekeep.health.lessons.spin_up import SpinUpLesson
+from motekeep.health.lessons.twin_ratio import TwinRatioLesson
 from motekeep.health.line import FramesCorrupt, FramesMissing
 from motekeep.health.range import ChannelsInconsistent, CountsSaturated, MassClipped
+from motekeep.health.twin_checks import twin_checks
+from motekeep.health.twin_verdict import CODES, DISAGREES
 from motekeep.health.unit import SensorError, WarmingUp
 from motekeep.health.visit import ServiceVisit, UnitSwapped
 from motekeep.health.wake import Wake
@@ -44,6 +47,11 @@ from motekeep.wire.frame import Damage, Dialect, Observation
 DEFAULT_LIMITS = Limits()
 
 Observe = Callable[[Observation], None]
+
+# While these are open a sensor may still stand beside its twin: what the twin itself tells, which could not be seen to
+# end otherwise, and fog, which both breathe.
+_COMPARABLE_IN = frozenset({*CODES, "humidity-high"})
+_RELIABLE_IN = frozenset({DISAGREES, "humidity-high"})
 
 
 class SensorHealth:
@@ -79,7 +87,7 @@ class SensorHealth:
             ChannelsInconsistent(),
             SensorError(dialect.error_bits),
             FanStopped(flow_l_min, period_s),
-            *([FanStoppedBesideTwin(flow_l_min, period_s)] if twinned else []),
+            *([FanStoppedBesideTwin(flow_l_min, period_s), *twin_checks(flow_l_min, period_s)] if twinned else []),
             *([FanStoppedByWakes(flow_l_min, period_s), ActiveCheck()] if sleeps else []),
             *([FanWeakByWakes()] if sleeps and not twinned else []),  # a twin tells it in a day
             FanSurging(period_s),
@@ -96,7 +104,9 @@ class SensorHealth:
         self.baseline = Baseline(
             (
                 NoiseLesson(flow_l_min, period_s),
+                *([TwinRatioLesson(flow_l_min, period_s)] if twinned else []),
                 *([SpinUpLesson()] if sleeps and not twinned else []),
+                *([] if twinned else [ShapeLesson()]),
             )
         )
         self._hours = HourBuilder()
@@ -194,12 +204,12 @@ class SensorHealth:
         if sound:
             for lesson in self._lesson_interval:
                 lesson(interval)
-        hour = self._hours.add(interval, sound=sound)
+        hour = self._hours.add(interval, sound=sound, comparable=sound or self._sound_but_for(_COMPARABLE_IN))
         if hour is not None:
             self._hear(hour, end)
 
     def twin_interval(self, interval: Interval, *, sound: bool) -> None:
-        """An interval of the twin was closed; `sound` says that nothing is wrong with the twin."""
+        """An interval of the twin was closed; `sound` says that it can be relied on, see `reliable`."""
         self._hours.add_twin(interval, sound=sound)
 
     def _hear(self, hour: Hour, at: Instant) -> None:
@@ -231,7 +241,10 @@ class SensorHealth:
 
     def twin_service(self, kind: ServiceKind, done_utc: float, at: Instant) -> None:
         """A person did something at the twin, in the same enclosure."""
+        if self.baseline.twin_service(kind, at):
+            self._teach()
         self._visit.beside(kind, done_utc, at)
+        self._notes_due = True
 
     # -- what comes out -----------------------------------------------------------------------------------------
 
@@ -262,7 +275,15 @@ class SensorHealth:
     @property
     def sound(self) -> bool:
         """Whether nothing that is open casts doubt on the sensor's numbers."""
-        return not any(casts_doubt(finding.code) for finding in self._ledger.open())
+        return self._sound_but_for(frozenset())
+
+    @property
+    def reliable(self) -> bool:
+        """Whether a twin may be measured against this sensor. That both disagree does not say which is wrong."""
+        return self._sound_but_for(_RELIABLE_IN)
+
+    def _sound_but_for(self, codes: frozenset[str]) -> bool:
+        return not any(casts_doubt(finding.code) and finding.code not in codes for finding in self._ledger.open())
 
     @property
     def noise_scale(self) -> float | None:
