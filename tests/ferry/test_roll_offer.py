@@ -9,9 +9,10 @@ from emulated_fleet import document_text, make_key, write_signed
 from ferry.rolling import NORTH, NOW, offer
 from moteferry.roll.fleet import Seat
 from moteferry.roll.gate import Before
-from moteferry.roll.offer import RollError, check_apart, check_signatures, offer_of, read_offer, signature_file
+from moteferry.roll.offer import RollError, check_apart, check_signatures, offer_of, read_offer
 from moteferry.roll.register import Register
-from moteferry.roll.undo import NoWayBack, WayBack, reissued, signer_with, way_back, write_and_sign
+from moteferry.roll.undo import NoWayBack, WayBack, reissued, way_back, write_and_sign
+from moteferry.signing import sign, signature_path
 from motekeep.measure.document_text import parse
 
 
@@ -20,7 +21,7 @@ def test_a_document_without_a_signature_is_told_how_to_get_one(tmp_path: Path) -
     path.write_text(document_text(NORTH, 8))
     with pytest.raises(RollError, match=r"there is no north\.toml\.sig beside it; sign it"):
         read_offer(path)
-    signature_file(path).write_text("yes, it is fine")
+    signature_path(path).write_text("yes, it is fine")
     with pytest.raises(RollError, match="it is no SSH signature"):
         read_offer(path)
 
@@ -28,7 +29,7 @@ def test_a_document_without_a_signature_is_told_how_to_get_one(tmp_path: Path) -
 def test_a_document_that_no_device_would_take_is_refused_with_its_key(tmp_path: Path) -> None:
     path = tmp_path / "north.toml"
     path.write_text(document_text(NORTH, 8).replace("issue = 8", "issue = 0"))
-    signature_file(path).write_text("-----BEGIN SSH SIGNATURE-----\n")
+    signature_path(path).write_text("-----BEGIN SSH SIGNATURE-----\n")
     with pytest.raises(RollError, match="issue"):
         read_offer(path)
 
@@ -72,7 +73,7 @@ def test_the_way_back_is_signed_once_and_stays_the_same_issue(tmp_path: Path) ->
             register.keep([earlier, undone])
         way = way_back(register, undone, was, NOW, 7)
         assert isinstance(way, WayBack)
-        [signed] = write_and_sign([way], tmp_path / "undo", signer_with(key), register)
+        [signed] = write_and_sign([way], tmp_path / "undo", lambda path: sign(path, key), register)
         check_signatures([signed])
         assert signed.issue == 8
         again = way_back(register, undone, was, NOW, 20)
@@ -96,10 +97,3 @@ def test_where_there_is_no_way_back_it_says_why(tmp_path: Path, was: Seat | None
         found = way_back(register, offer(7), Before(in_force=was), now, 7)
     assert isinstance(found, NoWayBack)
     assert why in found.why
-
-
-def test_a_key_that_cannot_sign_is_one_line(tmp_path: Path) -> None:
-    path = tmp_path / "north.toml"
-    path.write_text(document_text(NORTH, 8))
-    with pytest.raises(RollError, match="see --key"):
-        signer_with(tmp_path / "nokey")(path)

@@ -23,13 +23,14 @@ from moteferry.roll.offer import Offer, RollError, Target, check_apart, check_si
 from moteferry.roll.plan import Plan, Standing, make_plan
 from moteferry.roll.register import FAILED, HAS, STANDS, Event, Register
 from moteferry.roll.show import Screen, outcome_json, plan_json, show_outcome, show_plan, show_ways, tenure_json
-from moteferry.roll.undo import NoWayBack, WayBack, accepted_in, signer_with, way_back, write_and_sign
+from moteferry.roll.undo import NoWayBack, WayBack, accepted_in, way_back, write_and_sign
 from moteferry.roll.waves import sizes, split
+from moteferry.signing import sign
 from motekeep.edges.login import BrokerSettings
 from motekeep.instant import from_rfc3339, rfc3339
 
 # Nothing says that all retained messages have come: they have when nothing came for this long, at most after LISTEN_S.
-QUIET_S = 1.5
+QUIET_S = 2.5
 SETTLED_S = 0.3  # when health and state of every target have come
 LISTEN_S = 20.0
 
@@ -151,7 +152,8 @@ def _listening(wish: Wish, fleet: Fleet) -> Iterator[Link]:
                     case Up():
                         up, quiet_since = True, time.monotonic()
                     case Came(topic, payload, retained):
-                        if fleet.hear(topic, payload, retained=retained, now=time.time()) and retained:
+                        fleet.hear(topic, payload, retained=retained, now=time.time())
+                        if retained:  # of whomever: those asked about may come last
                             quiet_since = time.monotonic()
             if up and time.monotonic() - quiet_since > (SETTLED_S if fleet.complete else QUIET_S):
                 break
@@ -307,7 +309,8 @@ def _signed(ways: Sequence[WayBack], how: UndoWish, register: Register, *, quiet
         return [way.offer for way in ways]
     if how.key is None:
         raise RollError("signing the way back", "no key is named", "give --key; a key in an agent by its .pub file")
-    signing = write_and_sign(ways, how.out, signer_with(how.key), register)
+    key = how.key
+    signing = write_and_sign(ways, how.out, lambda path: sign(path, key), register)
     if quiet:
         return list(signing)
     with click.progressbar(signing, length=len(ways), label=f"signing into {how.out}", file=sys.stderr) as signed:

@@ -5,24 +5,21 @@ exactly these bytes, that no two are for one sensor. Must not know who is truste
 """
 
 import json
-import subprocess
-import tempfile
 from collections.abc import Iterable, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from pathlib import Path
 from typing import NamedTuple
 
+from moteferry.signing import SigningError, fingerprint_of, signature_path
 from motekeep.errors import MotekeepError
 from motekeep.measure.document import CalibrationDocument
 from motekeep.measure.document_text import parse
 
-NAMESPACE = "calibration@motekeep"
 # A signature of the longest RSA key is 3 kB in its armour.
 SIGNATURE_BYTES = 16 * 1024
 # `ssh-keygen` is a process of some 5 ms, most of it waiting.
 VERIFIERS = 8
-KEYGEN_LIMIT_S = 60.0
 
 
 class RollError(MotekeepError):
@@ -67,14 +64,9 @@ def offer_of(document: bytes, signature: str) -> Offer:
     )
 
 
-def signature_file(document: Path) -> Path:
-    """`x.toml.sig`, where `ssh-keygen -Y sign` puts it."""
-    return document.with_name(document.name + ".sig")
-
-
 def read_offer(path: Path) -> Offer:
     """Raises RollError for a missing signature or a document that no device would take."""
-    beside = signature_file(path)
+    beside = signature_path(path)
     try:
         signature = beside.read_bytes()
     except FileNotFoundError as error:
@@ -105,28 +97,16 @@ def check_apart(offers: Iterable[Offer]) -> None:
 def check_signatures(offers: Sequence[Offer]) -> None:
     """That each signature is one of these exact bytes in our namespace, whoever made it. Raises RollError."""
     with ThreadPoolExecutor(VERIFIERS) as pool:
-        for offer, whole in zip(offers, pool.map(_is_of, offers), strict=True):
-            if not whole:
-                raise RollError(
-                    f"checking the signature of issue {offer.issue} for {offer.target}",
-                    f"it is not one of this document in the namespace {NAMESPACE}",
-                    "the document was changed after it was signed, or signed for something else: sign it again",
-                )
+        for _ in pool.map(_check_signature, offers):
+            pass
 
 
-def _is_of(offer: Offer) -> bool:
-    """`check-novalidate` asks for no list of signers: a temporary file is all that it needs."""
-    with tempfile.NamedTemporaryFile("w", suffix=".sig") as file:
-        file.write(offer.signature)
-        file.flush()
-        try:
-            done = subprocess.run(  # noqa: S603 (fixed words; the only argument is a file of ours)
-                ["ssh-keygen", "-Y", "check-novalidate", "-n", NAMESPACE, "-s", file.name],  # noqa: S607 (the operator's PATH)
-                input=offer.document.encode(),
-                capture_output=True,
-                timeout=KEYGEN_LIMIT_S,
-                check=False,
-            )
-        except FileNotFoundError as error:
-            raise RollError("checking signatures", "there is no ssh-keygen", "install the OpenSSH client") from error
-    return done.returncode == 0
+def _check_signature(offer: Offer) -> None:
+    try:
+        fingerprint_of(offer.document.encode(), offer.signature.encode())
+    except SigningError as error:
+        raise RollError(
+            f"checking the signature of issue {offer.issue} for {offer.target}",
+            error.why,
+            "was the document changed after it was signed, or signed for something else? " + error.mend,
+        ) from error

@@ -5,14 +5,14 @@ so going back is a new document, signed like any other. Must not know a broker.
 """
 
 import re
-import subprocess
 from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass, replace
 from pathlib import Path
 
 from moteferry.roll.gate import Before
-from moteferry.roll.offer import NAMESPACE, Offer, RollError, Target, offer_of, signature_file
+from moteferry.roll.offer import Offer, RollError, Target, offer_of
 from moteferry.roll.register import Register
+from moteferry.signing import signature_path
 from motekeep.errors import DocumentError
 from motekeep.instant import rfc3339
 from motekeep.measure.document_text import parse
@@ -91,7 +91,7 @@ def reissued(earlier: Offer, issue: int, why: str) -> bytes:
 
 
 def write_and_sign(
-    ways: Iterable[WayBack], folder: Path, sign: Callable[[Path], None], register: Register
+    ways: Iterable[WayBack], folder: Path, sign: Callable[[Path], object], register: Register
 ) -> Iterator[Offer]:
     """Each document to its file, signed, and into the register before the next: one at a time, since a key may want
     to be touched. What an earlier attempt signed is not signed again."""
@@ -101,23 +101,8 @@ def write_and_sign(
             continue
         folder.mkdir(parents=True, exist_ok=True)
         path = folder / f"{'-'.join(way.offer.target)}-{way.offer.issue}.toml"
-        signature_file(path).unlink(missing_ok=True)  # ssh-keygen would ask before writing over it
         path.write_bytes(way.offer.document.encode())
         sign(path)
-        offer = replace(way.offer, signature=signature_file(path).read_text("ascii"))
+        offer = replace(way.offer, signature=signature_path(path).read_text("ascii"))
         register.keep_way_back(way.undone.digest, offer)
         yield offer
-
-
-def signer_with(key: Path) -> Callable[[Path], None]:
-    """Signs a file with `ssh-keygen`; a passphrase, a PIN or a touch is asked for on the terminal."""
-
-    def sign(path: Path) -> None:
-        command = ["ssh-keygen", "-q", "-Y", "sign", "-n", NAMESPACE, "-f", str(key), str(path)]
-        done = subprocess.run(command, stdout=subprocess.DEVNULL, stderr=subprocess.PIPE, check=False)  # noqa: S603 (fixed words and paths)
-        if done.returncode != 0 or not signature_file(path).exists():
-            said = done.stderr.decode(errors="replace").strip().splitlines()
-            why = said[-1] if said else f"ssh-keygen ended with {done.returncode}"
-            raise RollError(f"signing {path} with {key}", why, "see --key; a key in an agent is named by its .pub file")
-
-    return sign
