@@ -47,6 +47,7 @@ def one_reading(channel: str, raw: float, rh: float | None, t: float | None) -> 
 
 
 def _intervals(pairs: Pairs, channel: str) -> Iterator[Interval]:
+    humid, warm = pairs.humid, pairs.warm
     rows = zip(pairs.raw_mean.tolist(), pairs.rh_mean.tolist(), pairs.t_mean.tolist(), strict=True)
     for raw, rh, t in rows:
-        yield one_reading(channel, raw, rh if pairs.humid else None, t if pairs.warm else None)
+        yield one_reading(channel, raw, rh if humid else None, t if warm else None)

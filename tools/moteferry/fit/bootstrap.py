@@ -19,7 +19,7 @@ from moteferry.fit.record import Floats
 LEAST_S = 48.0 * 3600.0
 # With fewer runs than this to draw from, the spread of what is drawn is too small by itself.
 FEWEST_RUNS = 6
-REPLICATES = 400  # their standard deviation is then known to 4 %
+REPLICATES = 200  # their standard deviation is then known to 5 %
 
 
 def lag1(rest: Floats) -> float:

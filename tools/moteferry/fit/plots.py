@@ -4,6 +4,7 @@ Owns what is drawn. Must not know the page. Text stays text, so that it can be r
 """
 
 import itertools
+import re
 from io import StringIO
 from typing import Any
 
@@ -127,10 +128,11 @@ def _figure(size: tuple[float, float]) -> tuple[Figure, Axes]:
 
 
 def _svg(figure: Figure, name: str) -> str:
-    """The SVG element alone. `name` salts its identifiers: those of two pictures on one page must differ."""
+    """The SVG element alone. `name` goes before its identifiers: those of two pictures on one page must differ."""
     text = StringIO()
     nothing = dict.fromkeys(("Creator", "Date", "Format", "Type"))
-    with rc_context({"svg.fonttype": "none", "svg.hashsalt": name, "svg.id": f"plot-{name}"}):
+    # salted, or the same fit would draw other identifiers each time
+    with rc_context({"svg.fonttype": "none", "svg.hashsalt": name}):
         figure.savefig(text, format="svg", metadata=nothing)
     svg = text.getvalue()
-    return svg[svg.index("<svg") :]
+    return re.sub(r'(\bid="|url\(#|href="#)', rf"\g<1>{name}-", svg[svg.index("<svg") :])
