@@ -18,10 +18,10 @@ ACL = Path(__file__).parents[2] / "systemd/mosquitto-acl.example"
 OURS = "motekeep/quarry/east-gate"
 OTHERS = "motekeep/quarry/west-gate"
 
-# The topic tree: what the device writes, what comes to it, what does both.
-MADE = ["reading/north", "late/north", "amend/north", "hourly/north", "health", "finding", "calibration/north/state"]
+# The topic tree: what the device writes, what comes to it.
+MADE = ["reading/north", "late/north", "amend/north", "hourly/north", "health", "finding", "service"]
+MADE += ["calibration/north/state"]
 MEANT = ["calibration/north/offer", "resend", "taken/north"]
-BOTH = ["service"]
 
 
 def rules(user: str | None) -> list[tuple[str, str]]:
@@ -58,19 +58,19 @@ class TestTree:
         assert [t for t in spelled if not allows(None, "write", t) and not allows(None, "read", t)] == []
 
     def test_the_gateway_has_exactly_the_ways_of_the_design(self) -> None:
-        every = MADE + MEANT + BOTH
+        every = MADE + MEANT
 
-        assert [t for t in every if allows(None, "write", f"{OURS}/{t}")] == MADE + BOTH
-        assert [t for t in every if allows(None, "read", f"{OURS}/{t}")] == MEANT + BOTH
+        assert [t for t in every if allows(None, "write", f"{OURS}/{t}")] == MADE
+        assert [t for t in every if allows(None, "read", f"{OURS}/{t}")] == MEANT
 
     def test_nothing_is_allowed_in_the_tree_of_another_gateway(self) -> None:
-        ways = [(access, t) for access in ("read", "write") for t in MADE + MEANT + BOTH]
+        ways = [(access, t) for access in ("read", "write") for t in MADE + MEANT]
 
         assert [way for way in ways if allows(None, way[0], f"{OTHERS}/{way[1]}")] == []
 
     @pytest.mark.parametrize("user", ["operator", "archive", "viewer"])
     def test_people_read_all_and_write_nothing_in_a_gateways_name(self, user: str) -> None:
-        assert all(allows(user, "read", f"{OURS}/{t}") for t in MADE + MEANT + BOTH)
+        assert all(allows(user, "read", f"{OURS}/{t}") for t in MADE + MEANT)
         assert [t for t in MADE if allows(user, "write", f"{OURS}/{t}")] == []
 
 
@@ -148,16 +148,16 @@ class Somebody:
 def test_a_real_broker_takes_and_hands_out_exactly_that(broker: int) -> None:
     gateway, operator, archive = (Somebody(broker, name) for name in ("quarry/east-gate", "operator", "archive"))
     try:
-        every = MADE + MEANT + BOTH
-        assert [t for t in every if gateway.publish(f"{OURS}/{t}")] == MADE + BOTH
+        every = MADE + MEANT
+        assert [t for t in every if gateway.publish(f"{OURS}/{t}")] == MADE
         assert [t for t in every if gateway.publish(f"{OTHERS}/{t}")] == []
-        assert [t for t in every if operator.publish(f"{OURS}/{t}")] == ["calibration/north/offer", "resend", "service"]
+        assert [t for t in every if operator.publish(f"{OURS}/{t}")] == ["calibration/north/offer", "resend"]
         assert [t for t in every if archive.publish(f"{OURS}/{t}")] == ["resend", "taken/north"]
         assert operator.publish(f"{OTHERS}/resend")
         assert operator.publish(f"{OURS}/calibration/last/offer")
 
         heard = gateway.heard(f"{OURS}/calibration/last/offer")
-        assert sorted(set(heard)) == sorted(f"{OURS}/{t}" for t in MEANT + BOTH)
+        assert sorted(set(heard)) == sorted(f"{OURS}/{t}" for t in MEANT)
         assert set(operator.got) >= {f"{OURS}/{t}" for t in MADE}
     finally:
         for somebody in (gateway, operator, archive):
