@@ -15,6 +15,7 @@ from motekeep.health.chance import poisson_at_least, poisson_at_most
 from motekeep.health.check import Check, LineState
 from motekeep.health.finding import Suspicion
 from motekeep.health.memory import Memory, is_number
+from motekeep.health.wake import Wake
 from motekeep.instant import Instant
 from motekeep.wire.frame import Frame, Layout, Observation
 
@@ -67,7 +68,7 @@ class FanStopped(Check):
     Then it holds until the smallest channel is back at half of before, or the large particles are back in their old
     share. A daemon that restarts remembers it. Fog clearing fails 1 as small particles stay. Below some 60 /dL at a 6 s
     cadence (10 /dL at 1 s) there are too few pulses to tell. A duty cycle with less than eight minutes awake is too
-    short to see a collapse in: the look at each spin-up is what finds it there, and that check is not this one.
+    short to see a collapse in: the look at each wake is what finds it there, and that check is `fan_wake`.
     """
 
     code: ClassVar[str] = "fan-stopped"
@@ -92,6 +93,8 @@ class FanStopped(Check):
     REFINE = 25  # blocks after which levels left are taken anew: five minutes tell the drizzle better than two
     BACK = 5  # blocks that must be back
     GAP_S = 60.0
+    SURE = 0.95
+    FLUSHED, FLUSHED_SIGMA = 0.06, 4.0  # shortfall after a wake; a laser that starts dim makes up to 0.04
 
     def __init__(self, flow_l_min: float, period_s: float) -> None:
         self._block_s = max(self.BLOCK_S, 2.0 * period_s)
@@ -289,10 +292,30 @@ class FanStopped(Check):
         collapse = self._collapse
         if collapse is None:
             return None
-        confidence = 0.97 if collapse.sorted else 0.9
+        return Suspicion(collapse.since, self._confidence(collapse), collapse.evidence)
+
+    @staticmethod
+    def _confidence(collapse: _Collapse) -> float:
         if len(collapse.before) <= 3:  # masses
-            confidence = 0.6
-        return Suspicion(collapse.since, confidence, collapse.evidence)
+            return 0.6
+        return 0.97 if collapse.sorted else 0.9
+
+    # -- a wake -------------------------------------------------------------------------------------------------
+
+    def wants_wake(self, at: Instant) -> bool:
+        """Order or counts were missing: then a wake may tell clean air from a still fan, and may free a stuck one."""
+        return self._collapse is not None and self._confidence(self._collapse) < self.SURE
+
+    def wake(self, wake: Wake) -> None:
+        """A cell that settles while the sensor sleeps and is flushed when it wakes has a fan that runs; beside one that
+        stands still awake as well nothing changes."""
+        weight = sum([1.0 / s.variance for s in wake.shortfalls])
+        if self._collapse is None or not wake.shortfalls:
+            return
+        mean = sum([s.share / s.variance for s in wake.shortfalls]) / weight
+        if mean >= self.FLUSHED and mean * sqrt(weight) >= self.FLUSHED_SIGMA:
+            self._collapse = None
+            self._blocks.clear()
 
     # -- across a restart ---------------------------------------------------------------------------------------
 

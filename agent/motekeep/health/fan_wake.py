@@ -5,6 +5,7 @@ Owns the comparison of a wake's plateau with what was there before. Must not kno
 
 from collections import deque
 from dataclasses import dataclass
+from math import exp
 from typing import ClassVar
 
 from motekeep.health.chance import poisson_at_most
@@ -12,6 +13,7 @@ from motekeep.health.check import Check
 from motekeep.health.finding import Suspicion
 from motekeep.health.memory import Memory, is_number
 from motekeep.health.wake import Wake
+from motekeep.health.wake_watch import EARLY_S
 from motekeep.instant import Instant
 from motekeep.measure.interval import Interval
 
@@ -22,11 +24,12 @@ HOUR_S = 3600.0
 @dataclass(slots=True)
 class _Silence:
     """Wakes in a row that were as still as a stopped fan leaves them: levels before, pulses of the second channel that
-    came and that would have come had the air fallen to AIR_FALLS_TO."""
+    came and that would have come had the air fallen to AIR_FALLS_TO. `sealed`: what was in the cell never came out."""
 
     since: float
     before: Levels
     left: Levels
+    sealed: bool = False
     seen: float = 0.0
     due: float = 0.0
     wakes: int = 0
@@ -42,13 +45,16 @@ class FanStoppedByWakes(Check):
     1. The smallest channel is at most DEPTH of what it was when the sensor was last awake, and clearly under the lowest
        of the last 24 hours: a plume that went, or a night as clean as the last one, is no fault.
     2. Above 0.5 um, where no false counts hold it up, fewer pulses came than air that had fallen to AIR_FALLS_TO could
-       bring by chance, and a third at most of the lowest of 24 hours. An air cleaner of 16 room volumes an hour
-       leaves 3 % (infiltration of half a volume an hour); rain and clean fronts leave far more.
+       bring by chance, added up over wakes in a row.
+    3. One of two. Either what was left in the cell did not come out: air that was cleaned while the sensor slept
+       leaves the old air in the cell, of which settling and draught take some 0.4 % a second at the most, and a fan
+       that runs blows it through the beam in the first seconds (below 0.5 um, where no dust is stirred up). That tells
+       at the first wake after a sleep of ten minutes; after half an hour nothing is left to come out. Or it stays so
+       for a day: an air cleaner, rain or a clean front can do as much for some hours.
 
-    Pulses are added up over wakes in a row: a minute of 900 /dL above 0.5 um (some 5,000 above 0.3) is enough, so the
-    first wake tells; 100 /dL need some nine wakes. Then it holds until air is back: the smallest channel at a quarter
-    of before, or a tenth above 0.5 um. Needs counts, and an hour of levels first. Of a sensor that never sleeps it
-    hears nothing.
+    At 5,000 /dL and sleeps of ten minutes the first wake tells; below some 2,000, and after long sleeps, it takes the
+    day. Then it holds until air is back: the smallest channel at a quarter of before, or a tenth
+    above 0.5 um. Needs counts, and an hour of levels first. Of a sensor that never sleeps it hears nothing.
     """
 
     code: ClassVar[str] = "fan-stopped"
@@ -59,9 +65,13 @@ class FanStoppedByWakes(Check):
     BELOW_LOWEST = 0.35
     AIR_FALLS_TO = 0.02
     CHANCE = 1e-5
+    CHANCE_SEALED = 1e-3  # beside the other
     HOURS = 24
     LEAST_HOURS = 2  # begun, so an hour at the least
     LEAST_FRAMES = 3
+    FADES_PER_S = 4e-3  # of the small particles in a still cell: a large draught, and settling
+    FLUSH_S = 2.0  # of a small cell, as far as a slow cadence sees it
+    LASTS_S = 24.0 * HOUR_S
     BACK, BACK_LARGER, BACK_PULSES = 0.25, 0.1, 8.0
 
     def __init__(self, flow_l_min: float, period_s: float) -> None:
@@ -83,9 +93,9 @@ class FanStoppedByWakes(Check):
 
     def _note(self, boot_s: float, levels: Levels) -> None:
         hour = boot_s // HOUR_S
-        self._last = levels
         if self._lowest and len(self._lowest[-1][1]) != len(levels):
             self._lowest.clear()
+        self._last = levels
         if self._lowest and self._lowest[-1][0] == hour:
             self._lowest[-1] = hour, tuple(map(min, self._lowest[-1][1], levels))
         else:
@@ -104,12 +114,22 @@ class FanStoppedByWakes(Check):
             self._note(boot_s, levels)
             return
         if self._silence is None:
-            self._silence = _Silence(boot_s, self._last, levels)
+            self._silence = _Silence(boot_s, self._last, levels, sealed=self._is_sealed(wake))
         silence = self._silence
         silence.wakes += 1
         silence.seen += levels[1] * wake.frames / self._per_pulse
         silence.due += self.AIR_FALLS_TO * silence.before[1] * wake.frames / self._per_pulse
-        self._holds = poisson_at_most(round(silence.seen), silence.due) < self.CHANCE
+        lasting = boot_s - silence.since >= self.LASTS_S
+        few = poisson_at_most(round(silence.seen), silence.due) < self.CHANCE
+        self._holds = few and (silence.sealed or lasting)
+
+    def _is_sealed(self, wake: Wake) -> bool:
+        """Whether the air that was in the cell when the sensor fell asleep did not come out of it."""
+        one = self._per_pulse / wake.early_frames
+        old = (self._last[0] - self._last[1]) * exp(-self.FADES_PER_S * wake.asleep_s) * self.FLUSH_S / EARLY_S
+        return (
+            poisson_at_most(round(wake.early / one), (wake.levels[0] - wake.levels[1] + old) / one) < self.CHANCE_SEALED
+        )
 
     def _is_still(self, levels: Levels) -> bool:
         before = self._silence.before if self._silence is not None else self._last
@@ -139,7 +159,9 @@ class FanStoppedByWakes(Check):
             f"the next {larger:.4g} to {larger_left:.3g} /dL; {silence.seen:.0f} pulses in {silence.wakes} wakes where "
             f"air a fiftieth as dense would bring {silence.due:.0f}"
         )
-        return Suspicion(silence.since, 0.95, evidence)
+        if silence.sealed:
+            evidence += "; nothing of the old air in the cell came out"
+        return Suspicion(silence.since, 0.95 if silence.sealed else 0.9, evidence)
 
     # -- across a restart ---------------------------------------------------------------------------------------
 
@@ -155,5 +177,5 @@ class FanStoppedByWakes(Check):
             return
         if len(before) != len(left) or len(before) < 2 or not all(is_number(x) for x in (*before, *left)):
             return
-        self._silence = _Silence(at.boot_s, tuple(before), tuple(left), seen, due, 1)
+        self._silence = _Silence(at.boot_s, tuple(before), tuple(left), seen=seen, due=due, wakes=1)
         self._holds = True

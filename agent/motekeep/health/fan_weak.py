@@ -11,7 +11,7 @@ from typing import Any, ClassVar
 
 from motekeep.health.check import Check
 from motekeep.health.finding import Suspicion
-from motekeep.health.lessons.spin_up import BLOCK_WAKES, DAY_S, SpinUp, SpinUpLesson
+from motekeep.health.lessons.spin_up import BLOCK_WAKES, DAY_S, WEAK, SpinUp, SpinUpLesson, added
 from motekeep.health.memory import Memory, is_number
 from motekeep.health.wake import Wake
 from motekeep.instant import Instant
@@ -34,14 +34,14 @@ class FanWeakByWakes(Check):
     """fan-weak: after waking, fresh air comes in more slowly than it did in this unit's first days.
 
     The level tells nothing without a twin: cleaner air looks the same. The time constant V/(q Q) of the cell does not
-    know the air. Of each wake the shortfall below its own plateau is taken (`wake`), in channels below 1 um, and held
-    against the usual one (`SpinUp`): with q = 0.7 it is a quarter to a half larger, the more so at a slow cadence.
-    Floor and optics hardly move it: false counts lower it, a loss of a quarter of the signal raises it by some 5 %. Air
-    that changes by itself does so both ways and is averaged out; a wake's own gusts are in its variance.
+    know the air. Of each wake the shortfall below its own plateau is taken (`wake_watch`), in channels below 1 um, and
+    held against the usual one (`SpinUp`): with q = 0.7 it is some 0.03 larger at 0.3 um and 0.05 at 0.5 um. That change
+    is the unit in which it is told. Floor and optics hardly move it: false counts lower it, and a loss of a quarter of
+    the signal raises it by some 5 % of its own. Air that changes does so both ways and is averaged out.
 
-    A single wake tells little: its excess has a standard deviation of about 0.4 at 5,000 /dL (50 pulses a second),
-    some 1.3 at 500. So the mean over the last days is judged, over whichever of 1 to 14 days is the clearest: at least
-    LEAST and Z standard deviations above nothing, those of the lesson and of what does not average out included.
+    A single wake tells little: at 5,000 /dL (50 pulses a second) its excess has a standard deviation of some 2. So the
+    mean over the last days is judged, over whichever of 1 to 14 days is the clearest: at least LEAST and Z standard
+    deviations above nothing, those of the lesson and of what does not average out included.
 
     While nothing is learnt yet, and while the mean is suspicious, it asks for more wakes than the schedule brings.
     """
@@ -52,8 +52,8 @@ class FanWeakByWakes(Check):
     slow: ClassVar[bool] = True
 
     Z = 3.0
-    LEAST = 0.12
-    LASTING = 0.02  # relative: size and humidity of the particles change what settles, and that for days
+    LEAST = 0.5
+    LASTING = 0.1  # size and humidity of the particles change what settles, and that for days
     UNSURE_Z = 1.3
     DAYS = 14.0
     LEAST_WAKES = 12
@@ -125,10 +125,12 @@ class FanWeakByWakes(Check):
     @staticmethod
     def _told(usual: SpinUp, mean: float, z: float, wakes: int) -> str:
         before = 100.0 * usual.shortfalls[0]
+        after = before + 100.0 * mean * added(usual.sizes_um[0], usual.asleep_s)
+        flow = 1.0 / (1.0 + mean * (1.0 / WEAK - 1.0))
         return (
-            f"after waking the smallest channel stays {before * (1.0 + mean):.1f} % short of its plateau in the first "
-            f"20 s, weighted, by the mean of {wakes} wakes; {before:.1f} % in {usual.wakes} wakes of its first days "
-            f"(all channels {100.0 * mean:+.0f} %, {z:.1f} standard deviations)"
+            f"after waking fresh air comes in at about {flow:.2f} of the usual flow: in the first 20 s the smallest "
+            f"channel is {after:.1f} % short of its plateau by {wakes} wakes, {before:.1f} % by the {usual.wakes} of "
+            f"its first days ({z:.1f} standard deviations over all channels)"
         )
 
     def wants_wake(self, at: Instant) -> bool:

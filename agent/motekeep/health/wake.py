@@ -26,7 +26,8 @@ class Wake:
 
     `levels` are plateau means as printed, counts where there are some, over `frames` frames in `seconds`; `shortfalls`
     may lack channels with too few pulses and is empty where the air did not stand still. `deficit_s` is the integral of
-    1 - c/plateau of the smallest channel over the first 20 s and `first` its first frame over its plateau.
+    1 - c/plateau of the smallest channel over the first 20 s and `first` its first frame over its plateau. `early` is
+    that channel's mean over the `early_frames` frames of the first 15 s.
     """
 
     at: Instant
@@ -38,3 +39,5 @@ class Wake:
     shortfalls: tuple[Shortfall, ...]
     deficit_s: float
     first: float
+    early: float
+    early_frames: int

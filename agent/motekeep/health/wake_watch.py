@@ -20,6 +20,7 @@ from motekeep.wire.frame import Frame, Layout, Observation
 
 LOOKS_S = 90.0  # after a wake; a sensor with a shorter duty is looked at for as long as it is awake
 SHORTEST_S = 55.0  # of a look: half a minute for the plateau
+EARLY_S = 15.0  # by then what was in the cell is gone
 SETTLED_S = 20.0  # from here on the plateau: 95 % of the air is fresh, in a slow cell 80 %
 # Frames count with t exp(-t/7 s), t being their age: the course of what a slower flush takes away, as the derivative of
 # exp(-t q/tau) by q is, for the tau of a usual cell. The first seconds, with spin-up, the laser's start and stirred-up
@@ -87,6 +88,7 @@ class WakeWatch:
         seconds = ages[-1] - SETTLED_S
         if len(plateau) < 0.5 * seconds / self._period or len(plateau) < 4 or settled < 2:
             return None  # frames were lost, and nobody knows which
+        early = max(sum([age <= EARLY_S for age in ages]), 1)
         levels = tuple([sum(column) / len(plateau) for column in zip(*plateau, strict=True)])
         _, _, smallest = self._channels(layout, rows)[0]
         level = sum(smallest[settled:]) / len(plateau)
@@ -101,6 +103,8 @@ class WakeWatch:
             shortfalls=self._shortfalls(layout, rows, settled),
             deficit_s=deficit_s,
             first=smallest[0] / level if level > 0.0 else 0.0,
+            early=sum(smallest[:early]) / early,
+            early_frames=early,
         )
 
     def _shortfalls(self, layout: Layout, rows: list[tuple[float, ...]], settled: int) -> tuple[Shortfall, ...]:

@@ -6,26 +6,30 @@ Owns the gathering of wakes into what is usual, and what physics allows as usual
 from collections import deque
 from collections.abc import Sequence
 from dataclasses import dataclass
-from math import sqrt
+from math import expm1, sqrt
 from statistics import median
 from typing import ClassVar
 
 from motekeep.health.baseline import Lesson, Notes
 from motekeep.health.memory import is_number
 from motekeep.health.wake import Wake
+from motekeep.health.wake_watch import WEIGHT_S
 from motekeep.measure.dose import ServiceKind
 
 DAY_S = 86400.0
 BLOCK_WAKES = 24  # a day of wakes, or so many: what is averaged before anything is judged
 CLIP = 3.0  # standard deviations beyond which a wake counts as just so far off: a plume went by
 ALIKE = 0.2  # relative: sleeps of another length leave another shortfall
+WEAK = 0.7  # of the flow: the fault that excesses are told in units of
+USUAL_FLUSH_S = 5.4
+DRAUGHT_PER_S = 1.5e-3  # a hundredth of the flow through 9 cm3
 
 
 @dataclass(frozen=True, slots=True)
 class SpinUp:
     """The usual shortfalls after a wake, by the lower edges of their channels, of a unit whose fan is well.
 
-    They hold for sleeps of `asleep_s`. `u` is the standard uncertainty of all of them together, relative; `spread` how
+    They hold for sleeps of `asleep_s`. `u` is the standard uncertainty that they bring into an `excess`; `spread` how
     many times the variance of a wake was what counting and gusts allow. `deficit_s` and `first`: see `Wake`.
     """
 
@@ -39,22 +43,39 @@ class SpinUp:
     first: float
 
     def excess(self, wake: Wake) -> tuple[float, float] | None:
-        """How far this wake's shortfalls are above the usual ones, relative, and with what variance; None when they
-        cannot be compared. A channel weighs with its usual shortfall squared over its variance: by counting statistics.
+        """How far this wake's shortfalls are above the usual ones, in units of what a fan at WEAK would add, and with
+        what variance; None when they cannot be compared. A channel weighs by what it would add and by its counting.
         """
         if abs(wake.asleep_s / self.asleep_s - 1.0) > ALIKE:
             return None
         found = {s.size_um: s for s in wake.shortfalls}
-        pairs = [
-            (found[size], usual) for size, usual in zip(self.sizes_um, self.shortfalls, strict=True) if size in found
-        ]
-        weight = sum([usual * usual / s.variance for s, usual in pairs])
+        usual = zip(self.sizes_um, self.shortfalls, strict=True)
+        rows = [(found[size], share, added(size, self.asleep_s)) for size, share in usual if size in found]
+        weight = sum([more * more / s.variance for s, _, more in rows])
         if weight <= 0.0:
             return None
-        value = sum([(s.share - usual) * usual / s.variance for s, usual in pairs]) / weight
+        value = sum([(s.share - share) * more / s.variance for s, share, more in rows]) / weight
         variance = self.spread / weight
         reach = CLIP * sqrt(variance)
         return max(min(value, reach), -reach), variance
+
+
+def added(size_um: float, asleep_s: float) -> float:
+    """What a fan at WEAK adds to the shortfall of the channel from this size on, after so long a sleep.
+
+    Of the particles exp(-(k + b) t) of what settling would leave not is there still: k by Stokes with slip from 1 cm at
+    1.6 g/cm3, b by the draught. Of what is missing the weights of `wake_watch` see E(tau) = (1 + 7 s/tau)^-2, and tau
+    rises from a usual 5.4 s (9 cm3 at 0.1 L/min) to 7.7 s.
+    """
+    diameter = 1.35 * size_um or 0.4  # the middle of a channel; most of a smallest mass
+    settling = 4.8e-3 * diameter * diameter * (1.0 + 0.165 / diameter)
+    missing = settling / (settling + DRAUGHT_PER_S) * -expm1(-(settling + DRAUGHT_PER_S) * asleep_s)
+    return missing * (seen(USUAL_FLUSH_S / WEAK) - seen(USUAL_FLUSH_S))
+
+
+def seen(flush_s: float) -> float:
+    """The weighted mean of exp(-t/flush) over a wake."""
+    return (1.0 + WEIGHT_S / flush_s) ** -2
 
 
 @dataclass(frozen=True, slots=True)
@@ -70,16 +91,17 @@ class _Block:
 
 
 class SpinUpLesson(Lesson):
-    """Learns the usual shortfall from the first wakes: until it is known to 4 %, over three days at the least.
+    """Learns the usual shortfall from the first wakes: over three days at the least, and until its uncertainty is a
+    fifth of what a fan at 70 % would add; after PATIENT_DAYS a third is enough.
 
     Only wakes after sleeps of about one length are taken: that of the first. When it changes for good (another duty),
     learning begins anew. A block is a day, or 24 wakes; within it wakes beyond 3 standard deviations of the median are
     drawn in, so that a plume or a gust teaches nothing.
 
-    Plausible is what a cell of 5 to 20 cm3 at the nominal flow can do (flush in 3 to 12 s; computed): of ten minutes'
-    sleep between a fifth and two thirds of what is below 1 um is lost, and of that a twelfth to a half is still missing
-    in the seconds that are weighed. What lies outside is never given: a fan that is weak already, or a lag that is none
-    of the cell's.
+    Plausible is what a cell flushed in 3 to 12 s can do: of ten minutes' sleep a third to two thirds of what is below
+    1 um is lost, and a twelfth to two fifths of that is missing in the seconds that are weighed; firmware that averages
+    over ten frames and a laser that starts bright or dim move it by some 0.1 (emulated units). What lies outside is
+    never given. A fan that is weak on its first day lies inside: alone it cannot be told from a large cell.
     """
 
     name: ClassVar[str] = "spin_up"
@@ -87,12 +109,12 @@ class SpinUpLesson(Lesson):
         {ServiceKind.FAN_REPLACED, ServiceKind.UNIT_REPLACED, ServiceKind.CLEANED}
     )
 
-    ENOUGH = 0.04
+    ENOUGH, ENOUGH_LATER, PATIENT_DAYS = 0.2, 0.33, 30.0
     LEAST_DAYS = 3.0
     MOST_BLOCKS = 60  # two months of days: what is not known by then goes with the oldest
     USUAL_SPREAD, USUAL_BLOCKS = 1.7, 10  # emulated units and weathers; counts as so many blocks seen
     OTHER_LENGTH = 20  # sleeps of another length in a row: the duty was changed
-    PLAUSIBLE = (0.02, 0.33)
+    PLAUSIBLE = (-0.08, 0.45)
 
     def __init__(self) -> None:
         self.forget()
@@ -138,15 +160,17 @@ class SpinUpLesson(Lesson):
         low, high = self.PLAUSIBLE
         if not all(low <= share <= high for share in usual):
             return None
+        more = [added(size, self._asleep_s) for size in self._sizes]
         squares = 0.0
         for block in blocks:
-            weight = sum([u * u * w for u, w in zip(usual, block.weights, strict=True)])
-            pull = sum([(s - u) * u * w for s, u, w in zip(block.shares, usual, block.weights, strict=True)])
+            weight = sum([m * m * w for m, w in zip(more, block.weights, strict=True)])
+            pull = sum([(s - u) * m * w for s, u, m, w in zip(block.shares, usual, more, block.weights, strict=True)])
             squares += pull * pull / weight
         spread = (squares + self.USUAL_BLOCKS * self.USUAL_SPREAD) / (len(blocks) - 1 + self.USUAL_BLOCKS)
         spread = max(spread, self.USUAL_SPREAD)
-        u = sqrt(spread / sum([share * share * total for share, total in zip(usual, totals, strict=True)]))
-        if u > self.ENOUGH:
+        u = sqrt(spread / sum([m * m * total for m, total in zip(more, totals, strict=True)]))
+        late = blocks[-1].day - blocks[0].day >= self.PATIENT_DAYS
+        if u > (self.ENOUGH_LATER if late else self.ENOUGH):
             return None
         wakes = sum([b.wakes for b in blocks])
         deficit_s = sum([b.wakes * b.deficit_s for b in blocks]) / wakes
@@ -173,7 +197,7 @@ class SpinUpLesson(Lesson):
             return
         if len(known) == 6 and len(shortfalls) == len(sizes):
             asleep_s, u, spread, wakes, deficit_s, first = known
-            if asleep_s > 0.0 and u > 0.0 and spread > 0.0 and min(shortfalls) > 0.0:
+            if asleep_s > 0.0 and u > 0.0 and spread > 0.0:
                 self._sizes, self._asleep_s = tuple(sizes), asleep_s
                 self._part = SpinUp(tuple(sizes), tuple(shortfalls), asleep_s, u, spread, int(wakes), deficit_s, first)
             return
