@@ -64,11 +64,12 @@ class Calibrated:
     def payload(self, text: bytes, signature: bytes) -> bytes:
         return json.dumps({"document": text.decode(), "signature": signature.decode()}).encode()
 
-    def offer(self, payload: bytes, *, retain: bool = True) -> None:
+    def offer(self, payload: bytes, *, retain: bool = True, qos: int = 1) -> None:
+        """With `qos` 0 and not retained the broker forgets it at once; with 1 it waits for a session that is away."""
         beside = self.site.folder / "payload"
         beside.write_bytes(payload)
         retained = ["-r"] if retain else []
-        words = ["-q", "1", *retained, "-t", f"{ROOT}/calibration/north/offer", "-f", str(beside)]
+        words = ["-q", str(qos), *retained, "-t", f"{ROOT}/calibration/north/offer", "-f", str(beside)]
         subprocess.run(self.site.mosquitto.client("mosquitto_pub", *words), check=True, timeout=20.0)
 
     def signed(self, text: bytes, key: Key | None = None) -> bytes:

@@ -11,7 +11,7 @@ from hypothesis import strategies as st
 from keys import Key, make_key, revocation_list
 from motekeep.edges import signers as edge
 from motekeep.edges import sshsig
-from motekeep.edges.signers import Signer, Signers, check_files, count_keys
+from motekeep.edges.signers import Signer, Signers, check_files, count_keys, trust_files
 from motekeep.errors import OfferRefusedError, SignersError
 from motekeep.measure.document_text import LARGEST_BYTES
 
@@ -124,6 +124,18 @@ def test_a_revocation_list_that_cannot_be_read_trusts_nobody(tmp_path: Path, ann
 def test_a_line_for_several_people_names_one_of_them(tmp_path: Path, anna: Key, signed: bytes) -> None:
     path = allowed(tmp_path, f'"!carl@example,*@example" {anna.public}\n')
     assert Signers(path).verify(TEXT, signed, NOW).principal == "*@example"
+
+
+def test_a_folder_of_trust_holds_both_files(tmp_path: Path, anna: Key, bert: Key, signed: bytes) -> None:
+    folder = tmp_path / "signers"
+    folder.mkdir()
+    signers = Signers(folder)
+    assert not signers.exist
+    (folder / "allowed_signers").write_text(anna.line() + bert.line())
+    assert signers.verify(TEXT, signed, NOW).principal == "anna@example"
+    revocation_list(folder / "revoked", anna)
+    assert refusal(signers, TEXT, signed) == "revoked-signer"
+    assert trust_files(folder, tmp_path / "other") == (folder / "allowed_signers", tmp_path / "other")
 
 
 def test_without_a_file_of_signers_nobody_is_trusted(tmp_path: Path, signed: bytes) -> None:

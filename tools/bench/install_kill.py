@@ -3,8 +3,8 @@
 A real daemon on a real broker gets a new signed document, one issue after the other, and SIGKILL at a random moment of
 its installation; then it is started again, and everything that tells what is in force is compared: the state that it
 publishes, the journal, the pair in front of the folder and the one that is kept, both verified by `ssh-keygen`, and the
-readings. It must be all of the old document or all of the new one. The offers are not retained, so that a start shows
-what the kill left and not what the broker repeats.
+readings. It must be all of the old document or all of the new one. The offers are not retained and of QoS 0, so that a
+start shows what the kill left and not what the broker repeats.
 
 Half of the kills fall evenly into the time that an installation takes, half right behind the first file that it writes:
 the change itself lasts some ten milliseconds of it.
@@ -30,10 +30,12 @@ sys.path[:0] = [str(ROOT / "tests"), str(Path(__file__).parent), str(ROOT / "age
 from outage import Nursery  # noqa: E402
 
 from calibration_site import Calibrated, accepted, document, state_when  # noqa: E402  (the paths above come first)
+from fast_daemon import EPOCH  # noqa: E402
 from motekeep.edges.signers import Signers  # noqa: E402
+from motekeep.instant import from_rfc3339  # noqa: E402
 from motekeep.measure.document import digest  # noqa: E402
 from motekeep.message.calibration_record import CalibrationRecord, recalled, record_name  # noqa: E402
-from whole_site import Subscriber, gateway, readings  # noqa: E402
+from whole_site import Subscriber, boot_s, gateway, readings  # noqa: E402
 
 SPEED = 10.0
 # From the offer to the end of its installation on this clock; the bulk is the wait for the next turn.
@@ -78,7 +80,7 @@ class Campaign:
     def play(self, kills: int) -> Tally:
         self._nursery.start()
         self._subscriber.wait_on("reading/north", lambda d: d["seq"] >= 4)
-        self._site.offer(self._site.signed(self._current), retain=False)
+        self._site.offer(self._site.signed(self._current), retain=False, qos=0)
         accepted(self._subscriber, self._current)
         for n in range(kills):
             self._cut(n)
@@ -90,7 +92,7 @@ class Campaign:
         old, new = self._current, document(self._issue, round(self._rng.uniform(0.7, 1.0), 3))
         payload = self._site.signed(new)
         files = self._files()
-        self._site.offer(payload, retain=False)
+        self._site.offer(payload, retain=False, qos=0)
         if n % 2:
             deadline = time.monotonic() + PATIENCE_S
             while self._files() == files and time.monotonic() < deadline:
@@ -103,17 +105,16 @@ class Campaign:
         shelved = (self._site.folder / "kept" / "north" / f"{digest(new)[7:]}.toml").exists()
         began = record.in_force if record is not None else None
         self.tally.inside += (began == digest(old) and shelved) or (began == digest(new) and front == old)
-        heard = len(self._subscriber.on(STATE))
+        killed_utc = EPOCH + SPEED * boot_s()
         self._nursery.start()
-        self._judge(n, old, new, self._state_after(heard))
+        self._judge(n, old, new, self._state_after(killed_utc))
 
     def _files(self) -> list[str]:
         return sorted(path.name for path in (self._site.folder / "kept" / "north").iterdir())
 
-    def _state_after(self, heard: int) -> dict[str, Any]:
-        """The first state of a start. Any: JSON."""
-        assert self._subscriber.wait(lambda _: len(self._subscriber.on(STATE)) > heard, PATIENCE_S), "no start"
-        return self._subscriber.on(STATE)[heard].document
+    def _state_after(self, utc: float) -> dict[str, Any]:
+        """The first state of a start: what the dead one has said may still be on its way. Any: JSON."""
+        return self._subscriber.wait_on(STATE, lambda state: from_rfc3339(state["at"]) >= utc, PATIENCE_S)
 
     def _judge(self, n: int, old: bytes, new: bytes, state: dict[str, Any]) -> None:
         told = state["in_force"]["digest"] if state["in_force"] else None

@@ -89,7 +89,7 @@ def _line(entry: Accepted, *, in_force: bool) -> str:
 
 
 def _by_hand(config: Config, sensor: str) -> str:
-    if config.calibration.signers.exists():
+    if Signers(config.calibration.signers, config.calibration.revoked).exist:
         return ""
     try:
         document = Shelf(config.calibration.folder, config.site, config.gateway).in_force(sensor)

@@ -20,7 +20,8 @@ from motekeep.edges.clock import SystemClock
 from motekeep.edges.host import Host
 from motekeep.edges.ports import Connected, Disconnected, SubscriptionRefused
 from motekeep.edges.serial_line import open_line
-from motekeep.errors import BrokerError, ClimateError, PortError
+from motekeep.edges.signers import check_files, count_keys, trust_files, why_no_program
+from motekeep.errors import BrokerError, ClimateError, PortError, SignersError
 from motekeep.loops.reader import Rhythm
 from motekeep.message.topics import Topics
 from motekeep.wire.dialects import DIALECTS
@@ -157,11 +158,24 @@ def _existing(folder: Path) -> Path:
 
 
 def _signers(config: Config) -> Line:
-    signers, required = config.calibration.signers, config.calibration.required
-    if signers.exists() and os.access(signers, os.R_OK):
-        return Line("ok", "signers", str(signers))
-    said = f"{signers} is not there or not readable; calibration documents cannot be accepted until it is"
-    return Line("bad" if required else "warn", "signers", said)
+    """Without signers documents are taken unsigned: that works, and whoever can write to the folder decides."""
+    calibration = config.calibration
+    allowed, revoked = trust_files(calibration.signers, calibration.revoked)
+    if not allowed.exists():
+        said = (
+            f"there is no {allowed}; offers are refused, and documents put into {calibration.folder} are not verified"
+        )
+        return Line("bad" if calibration.required else "warn", "signers", said)
+    if why := check_files(allowed, revoked) or why_no_program():
+        return Line("bad", "signers", why)
+    try:
+        keys = count_keys(allowed)
+    except SignersError as error:
+        return Line("bad", "signers", str(error))
+    if not keys:
+        return Line("bad", "signers", f"{allowed} holds no key; add one with `moteferry signers add`")
+    told = "" if revoked is None else f", revoked by {revoked}"
+    return Line("ok", "signers", f"{keys} {'key' if keys == 1 else 'keys'} in {allowed}{told}")
 
 
 def _broker(config: Config) -> Iterator[Line]:

@@ -9,6 +9,7 @@ file that has no name and lives in memory, so that a full disk is no reason to r
 
 import os
 import re
+import shutil
 import subprocess
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -22,6 +23,7 @@ from motekeep.errors import OfferRefusedError, SignersError
 from motekeep.measure.document_text import LARGEST_BYTES
 
 NAMESPACE = "calibration@motekeep"
+IN_FOLDER_ALLOWED, IN_FOLDER_REVOKED = "allowed_signers", "revoked"
 
 # 5 ms on a workstation; a small board with a busy card takes a second. What takes longer hangs.
 TIMEOUT_S = 15.0
@@ -58,8 +60,15 @@ class Signers:
     """Verifies detached signatures of documents. Files are read anew each time: a key taken out is out at once."""
 
     def __init__(self, allowed: Path, revoked: Path | None = None) -> None:
-        self._allowed = allowed
-        self._revoked = revoked
+        self._configured = allowed, revoked
+
+    @property
+    def _allowed(self) -> Path:
+        return trust_files(*self._configured)[0]
+
+    @property
+    def _revoked(self) -> Path | None:
+        return trust_files(*self._configured)[1]
 
     @property
     def exist(self) -> bool:
@@ -179,6 +188,19 @@ class Signers:
         except OSError as error:
             raise SignersError("asking ssh-keygen", str(error)[:200], "it is tried again") from error
         return Answer(done.returncode == 0, done.stdout.decode("utf-8", "replace"), _tail(done.stderr))
+
+
+def trust_files(allowed: Path, revoked: Path | None) -> tuple[Path, Path | None]:
+    """The two files where `signers` of the configuration names the folder that the installer makes for them."""
+    if not allowed.is_dir():
+        return allowed, revoked
+    inside = allowed / IN_FOLDER_REVOKED
+    return allowed / IN_FOLDER_ALLOWED, inside if revoked is None and inside.exists() else revoked
+
+
+def why_no_program() -> str | None:
+    """Why nobody can be asked, None when `ssh-keygen` is there."""
+    return None if shutil.which(PROGRAM, path=PATH) else "there is no ssh-keygen; install openssh-client"
 
 
 def check_files(allowed: Path, revoked: Path | None) -> str | None:
