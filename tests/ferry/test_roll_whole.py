@@ -18,6 +18,7 @@ from mosquitto import Certificates, Mosquitto, running
 from moteferry.cli import main
 from moteferry.roll.offer import Target
 from moteferry.roll.register import Register
+from motekeep.edges import connection
 from motekeep.measure.document import digest
 
 pytestmark = pytest.mark.whole
@@ -288,3 +289,14 @@ def test_tls_with_certificates_of_ones_own(tmp_path: Path) -> None:
         result = CliRunner().invoke(main, [*words, *ours])
         assert result.exit_code == 2
         assert "look at --tls-ca and at this computer's clock" in result.stderr
+
+
+def test_what_the_edge_logs_stays_out_of_the_json(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    def received(*_: object) -> None:
+        connection.log.warning("link.noisy")
+
+    monkeypatch.setattr(connection.Connection, "_received", received)
+    with site(tmp_path, *well(1)) as here:
+        result = here.roll(*here.documents(3), "--json")
+        assert json.loads(result.stdout)["plan"]["counts"]["not heard"] == 1
+        assert "link.noisy" in result.stderr

@@ -14,6 +14,7 @@ from pathlib import Path
 from typing import Any
 
 import click
+import structlog
 
 from moteferry.roll.conductor import Conductor, Course
 from moteferry.roll.fleet import Fleet
@@ -32,7 +33,8 @@ from motekeep.instant import from_rfc3339, rfc3339
 # Nothing says that all retained messages have come: they have when nothing came for this long, at most after LISTEN_S.
 QUIET_S = 2.5
 SETTLED_S = 0.3  # when health and state of every target have come
-LISTEN_S = 20.0
+LISTEN_S = 60.0
+CONNECT_S = 20.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -131,7 +133,9 @@ def _take_in(register: Register, offers: Sequence[Offer], known: Sequence[Path])
 
 @contextmanager
 def _listening(wish: Wish, fleet: Fleet) -> Iterator[Link]:
-    """A link that has heard what the broker has kept of the targets."""
+    """A link that has heard what the broker has kept of the targets. The agent's edge logs; here to standard error."""
+    logging = structlog.get_config()
+    structlog.configure(logger_factory=lambda *_: structlog.PrintLogger(sys.stderr))
     broker = BrokerSettings(
         wish.broker.host,
         wish.broker.port,
@@ -146,7 +150,7 @@ def _listening(wish: Wish, fleet: Fleet) -> Iterator[Link]:
     try:
         began = quiet_since = time.monotonic()
         up = False
-        while time.monotonic() - began < LISTEN_S:
+        while time.monotonic() - began < (LISTEN_S if up else CONNECT_S):
             for event in link.events(0.1):
                 match event:
                     case Up():
@@ -162,6 +166,7 @@ def _listening(wish: Wish, fleet: Fleet) -> Iterator[Link]:
         yield link
     finally:
         link.stop()
+        structlog.configure(**logging)
 
 
 # -- rolling -----------------------------------------------------------------------------------------------------
