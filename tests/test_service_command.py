@@ -66,6 +66,14 @@ def test_on_a_clock_that_nobody_vouches_for_it_says_so_and_marks_the_record(
     assert [left["clock"] for left in waiting(config)] == ["unsynced"]
 
 
+def test_a_board_that_woke_up_in_1970_may_enter_a_record_all_the_same(
+    config: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("motekeep.edges.clock.SystemClock.now", lambda _: Instant(300.0, 300.0, "b" * 32, False))
+    assert run(config, "add", "north", "cleaned").exit_code == 0
+    assert [(left["at"], left["clock"]) for left in waiting(config)] == [("1970-01-01T00:05:00Z", "unsynced")]
+
+
 def test_a_time_that_a_person_states_is_taken_and_called_so(config: Path) -> None:
     run(config, "add", "north", "unit-replaced", "--at", "2026-11-30T10:00:00+01:00")
     [left] = waiting(config)
@@ -84,7 +92,7 @@ def test_a_time_that_a_person_states_is_taken_and_called_so(config: Path) -> Non
         (("north", "cleaned", "--at", "yesterday"), "--at 'yesterday': not a time; write it like"),
         (("north", "cleaned", "--at", "2026-11-30T10:00:00"), "not a time; write it like"),
         (("north", "cleaned", "--at", "2027-11-30T10:00:00Z"), "that is to come, now it is 2026-12-01T12:00:00Z"),
-        (("north", "cleaned", "--at", "2006-11-30T10:00:00Z"), "before 2020"),
+        (("north", "cleaned", "--at", "1996-11-30T10:00:00Z"), "not of this century"),
         (("north", "note", "--note", "x" * 501), "--note: 501 characters"),
         (("north", "note", "--note", "two\nlines"), "--note: it has line breaks"),
     ],

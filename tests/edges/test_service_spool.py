@@ -93,6 +93,10 @@ def test_a_link_a_pipe_and_a_folder_are_refused_and_none_hangs(spool: ServiceSpo
         (record().json_text().replace('"cleaned"', '"polished"'), "kind"),
         (record().json_text().replace('"note":""', '"note":"","more":1'), "more"),
         (record().json_text().replace('"boot_s":100.0', '"boot_s":NaN'), "boot_s"),
+        (record(at="yesterday").json_text(), "at: no time"),
+        (record(at="2026-12-01T09:30:00").json_text(), "at: no time"),
+        (record(entered="9999-12-31T23:59:59Z").json_text(), "entered: no time"),
+        (record().json_text().replace('"boot_s":100.0', '"boot_s":1e300'), "boot_s"),
         (record("00000000-ffffffff").json_text(), "named unlike its id"),
     ],
 )

@@ -14,16 +14,15 @@ import click
 from motekeep.config import Config
 from motekeep.edges.clock import SystemClock
 from motekeep.edges.journal_view import JournalView
-from motekeep.edges.service_spool import ServiceSpool
+from motekeep.edges.service_spool import LATEST, ServiceSpool
 from motekeep.errors import ConfigError, ServiceError
 from motekeep.instant import Instant, from_rfc3339, rfc3339
 from motekeep.measure.dose import ServiceKind
 from motekeep.message.documents import ServiceDocument
 
 NOTE_LONGEST = 500
+EARLIEST = 946_684_800.0  # 2000: what a person says was before is a slip of the pen
 FUTURE_S = 60.0  # between two watches that are both right
-# 2020-01-01: what was done before this program existed is a slip of the pen
-EARLIEST = 1_577_836_800.0
 
 
 def add(config: Config, config_path: Path, sensor: str, kind: str, said: tuple[str | None, str]) -> None:
@@ -110,8 +109,8 @@ def _moment(text: str, now: Instant) -> float:
         raise ConfigError(f"--at {text!r}", "not a time", "write it like 2026-12-01T09:15:00Z") from error
     if now.trusted and moment > now.utc + FUTURE_S:
         raise ConfigError(f"--at {text!r}", f"that is to come, now it is {rfc3339(int(now.utc))}", "give when it was")
-    if moment < EARLIEST:
-        raise ConfigError(f"--at {text!r}", "that is before 2020", "check the year")
+    if not EARLIEST <= moment < LATEST:
+        raise ConfigError(f"--at {text!r}", "that is not of this century or the next", "check the year")
     return moment
 
 

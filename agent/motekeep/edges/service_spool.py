@@ -17,6 +17,7 @@ from pydantic import ValidationError
 
 from motekeep.edges.journal_schema import sync_folder
 from motekeep.errors import ServiceError, StoreError
+from motekeep.instant import from_rfc3339
 from motekeep.message.documents import ServiceDocument
 
 FOLDER = "service"
@@ -24,6 +25,7 @@ SUFFIX = ".json"
 REFUSED = ".refused"
 LARGEST_BYTES = 8192  # a note of 500 characters, each escaped, leaves half of it
 MOST_FILES = 100  # taken at once; the rest waits for the next look
+LATEST = 7_258_118_400.0  # 2200; the earliest is 1970, where a board without a battery clock may wake up
 FOLDER_MODE, FILE_MODE = 0o2770, 0o640
 
 
@@ -112,6 +114,9 @@ class ServiceSpool:
             first = error.errors()[0]
             where = ".".join(map(str, first["loc"]))
             raise ServiceError(f"reading {path}", f"{where + ': ' if where else ''}{first['msg']}", mend) from error
+        for key in ("at", "entered"):
+            if not _is_moment(getattr(record, key)):
+                raise ServiceError(f"reading {path}", f"{key}: no time between 1970 and 2200", mend)
         if name != f"{record.id}{SUFFIX}":
             raise ServiceError(f"reading {path}", f"it is named unlike its id {record.id}", mend)
         return record
@@ -127,6 +132,14 @@ class ServiceSpool:
         path = self.folder / name
         with suppress(OSError):
             path.rename(path.with_name(name + REFUSED))
+
+
+def _is_moment(text: str) -> bool:
+    """Whether this is a time that may be reckoned with: RFC 3339, from 1970 to 2199."""
+    try:
+        return 0.0 <= from_rfc3339(text) < LATEST
+    except (ValueError, OverflowError):
+        return False
 
 
 def _is_record(name: str) -> bool:

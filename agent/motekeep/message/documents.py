@@ -181,7 +181,7 @@ class ServiceDocument(Document):
     clock: Literal["synced", "corrected", "unsynced", "stated"]
     entered: Time
     boot: str
-    boot_s: float = Field(allow_inf_nan=False)
+    boot_s: float = Field(ge=0, le=1e9)
     note: str = Field(default="", max_length=500)
 
 
