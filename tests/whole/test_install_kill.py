@@ -1,4 +1,4 @@
-"""The short form of `tools/bench/install_kill.py`: SIGKILL in the middle of an installation leaves old or new, whole."""
+"""The short form of `tools/bench/install_kill.py`: SIGKILL amid an installation leaves old or new, whole."""
 
 import sys
 from pathlib import Path
