@@ -2,9 +2,11 @@
 
 import json
 from dataclasses import dataclass, replace
+from functools import cache
 from pathlib import Path
 
 import numpy as np
+from scipy.signal import lfilter
 
 from moteferry.fit.device import DeviceRecord
 from moteferry.fit.fitting import Request
@@ -35,6 +37,7 @@ class Collocation:
     true: Floats
 
 
+@cache
 def collocation(
     days: int = 30,
     *,
@@ -72,11 +75,9 @@ def collocation(
 def slowly(rng: np.random.Generator, n: int, memory: float) -> Floats:
     """A series of unit variance that forgets over `memory` steps."""
     phi = np.exp(-1.0 / memory)
-    out = rng.standard_normal(n) * np.sqrt(1.0 - phi**2)
-    out[0] /= np.sqrt(1.0 - phi**2)
-    for i in range(1, n):
-        out[i] += phi * out[i - 1]
-    return np.asarray(out)
+    noise = rng.standard_normal(n) * np.sqrt(1.0 - phi**2)
+    noise[0] /= np.sqrt(1.0 - phi**2)
+    return np.asarray(lfilter([1.0], [1.0, -phi], noise))
 
 
 def reading(record: DeviceRecord, i: int, **changed: object) -> dict[str, object]:

@@ -162,6 +162,15 @@ def test_out_of_range_use_is_corrected_and_suspect() -> None:
         assert got.values[1].u is not None
 
 
+def test_a_stated_range_of_rh_counts_for_steps_that_do_not_need_it_where_rh_is_known() -> None:
+    text = document(LINEAR).replace(b"rh = [0.0, 100.0]", b"rh = [20.0, 60.0]")
+    assert b"rh = [20.0, 60.0]" in text
+    dry_air_only = compile_document(parse(text))
+    got = [dry_air_only(interval(climate=c)) for c in (Climate(50.0, 12.0, "frame"), HUMID, None)]
+    assert ["calibration-out-of-range" in g.reasons for g in got] == [False, True, False]
+    assert all(g.values[1].u is not None for g in got)
+
+
 @pytest.mark.parametrize(
     ("at", "trusted", "reason"),
     [

@@ -127,7 +127,7 @@ class DocumentCorrection:
             run.note(SUSPECT, f"uncorrected:{name}")
             return Value(raw, raw, None)
         run.used = True
-        self._judge_range(name, raw, chain.needs, run)
+        self._judge_range(name, raw, run)
         followed = follow(chain, raw, run)
         if followed is None:
             return Value(raw, None, None)
@@ -140,12 +140,14 @@ class DocumentCorrection:
             return Value(raw, None, None)
         return Value(raw, value, budget.u, budget.u_random)
 
-    def _judge_range(self, name: str, raw: float, needs: frozenset[Need], run: Run) -> None:
+    def _judge_range(self, name: str, raw: float, run: Run) -> None:
+        """A range of RH or temperature counts for chains that do not need them too: the fit may have seen dry air only,
+        and found no influence of what it had not seen. Without a climate nothing is known against the figure."""
         inside = self._document.in_range(name, raw)
         rh, t = run.air.rh_pct, run.air.temperature_c
-        if Need.RH in needs and rh is not None:
+        if rh is not None:
             inside = inside and self._document.in_range(Need.RH, rh)
-        if Need.TEMPERATURE in needs and t is not None:
+        if t is not None:
             inside = inside and self._document.in_range(Need.TEMPERATURE, t)
         if not inside:
             run.note(SUSPECT, "calibration-out-of-range")

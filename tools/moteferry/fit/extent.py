@@ -32,8 +32,12 @@ class Extent:
     warnings: tuple[str, ...]
 
 
-def extent(pairs: Pairs, channel: str) -> Extent:
-    """`filled` is the share of the time between first and last span that is paired."""
+def extent(pairs: Pairs, channel: str, *, by_temperature: bool = False) -> Extent:
+    """`filled` is the share of the time between first and last span that is paired.
+
+    RH limits any document: humidity acts on every sensor, whether this fit saw it or not. Temperature limits one that
+    corrects for it; a document of six weeks would otherwise flag the other seasons whole.
+    """
     days = (float(pairs.start[-1] - pairs.start[0]) + pairs.seconds) / DAY_S
     filled = len(pairs) * pairs.seconds / (days * DAY_S)
     raw = pairs.raw_mean
@@ -44,7 +48,7 @@ def extent(pairs: Pairs, channel: str) -> Extent:
         low, high = np.quantile(pairs.rh[pairs.weight > 0.0], [0.001, 0.999])
         ranges["rh"] = (round(float(low), 1), round(min(max(float(high), float(low) + 0.1), RH_HIGH), 1))
         rh_span = ranges["rh"][1] - ranges["rh"][0]
-    if pairs.warm:
+    if pairs.warm and by_temperature:
         low, high = np.quantile(pairs.t[pairs.weight > 0.0], [0.001, 0.999])
         ranges["t"] = (round(float(low), 1), round(max(float(high), float(low) + 0.1), 1))
     found = Extent(days, len(pairs), pairs.seconds, filled, ranges, rh_span, ())

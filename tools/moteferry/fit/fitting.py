@@ -99,7 +99,7 @@ def fit(
     choice, covariance = _sure(trials, whole, pairs, sigma, request.robust, refused)
     form = choice.chosen.candidate
     parameters = whole[form.name]
-    covers = extent(pairs, channel)
+    covers = extent(pairs, channel, by_temperature="linear.t_term" in form.names)
     corrected = judged(pairs, choice.chosen.held_out, request.limit_value)
     told("the document")
     error = choice.chosen.held_out - pairs.reference

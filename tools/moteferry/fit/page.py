@@ -132,7 +132,7 @@ def _examples(fit: Fit) -> str:
     low, high = fit.extent.ranges.get("rh", (0.0, 100.0))
     rhs = [rh for rh in EXAMPLE_RH if low <= rh <= high] or [round((low + high) / 2.0)]
     rhs = rhs if humid else [0.0]
-    t = EXAMPLE_T if not warm else float(np.clip(EXAMPLE_T, *fit.extent.ranges["t"]))
+    t = float(np.clip(EXAMPLE_T, *fit.extent.ranges.get("t", (EXAMPLE_T, EXAMPLE_T))))
     correction = compile_document(fit.document)
     rows = []
     for raw in raws:
