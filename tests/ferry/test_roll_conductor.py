@@ -12,11 +12,12 @@ from hypothesis import strategies as st
 from emulated_fleet import Gateway, document_text
 from ferry.rolling import offer
 from moteferry.roll.conductor import Conductor, Course, Outcome
-from moteferry.roll.fleet import Fleet
+from moteferry.roll.fleet import Fleet, Seat
 from moteferry.roll.gate import Rule, Step
 from moteferry.roll.link import Came, Down, LinkEvent, Taken, Up
 from moteferry.roll.offer import Offer, Target
 from moteferry.roll.register import Register
+from moteferry.roll.undo import accepted_in
 from moteferry.roll.waves import split
 from motekeep.message.topics import Topics
 
@@ -266,3 +267,15 @@ def test_the_state_before_is_that_of_the_first_offer_even_after_a_kill(table: Ta
     table.paper.kill_at, table.paper.turns = None, 0
     [failure] = table.run().failures
     assert (failure.target.gateway, failure.step) == ("gate-0", Step.WORSE)
+
+
+def test_a_device_that_took_it_as_it_was_taken_back_is_undone_to_what_it_had_before(table: Table) -> None:
+    earlier = offer(7, table.offers[0].target)
+    table.gateway(0).take(earlier.document.encode())
+    table.gateway(0).behaviour = "silent"
+    assert [f.step for f in table.run().failures] == [Step.SILENT]
+    table.gateway(0).behaviour = "well"
+    table.gateway(0).take(table.offers[0].document.encode())
+    assert table.run().done
+    befores = {o.target: was for o, was in accepted_in(table.register, table.roll)}
+    assert befores[table.offers[0].target].in_force == Seat(issue=7, digest=earlier.digest, signer="operator")

@@ -88,10 +88,6 @@ class Course:
     sweep_s: float = SWEEP_S
 
 
-def topics_of(root: str, target: Target) -> Topics:
-    return Topics(root, target.site, target.gateway)
-
-
 class Conductor:
     def __init__(
         self,
@@ -111,7 +107,6 @@ class Conductor:
         self._show = show
         self._cases: dict[Target, Case] = {}
         self._failures: dict[Target, Failure] = {}
-        self._offered: dict[str, Target] = {}
         self._link_trouble: str | None = None
         self._swept_at = 0.0
         self._recall()
@@ -191,9 +186,11 @@ class Conductor:
         self._link.send(self._message(o) for o in wave if self._cases[o.target].accepted_at is None)
 
     def _message(self, offer: Offer) -> tuple[str, str]:
-        topic = topics_of(self._course.root, offer.target).calibration_offer(offer.target.sensor)
-        self._offered[topic] = offer.target
-        return topic, offer.body
+        return self._topic(offer), offer.body
+
+    def _topic(self, offer: Offer) -> str:
+        target = offer.target
+        return Topics(self._course.root, target.site, target.gateway).calibration_offer(target.sensor)
 
     def _turn(self) -> None:
         touched = self._pump(TURN_S)
@@ -274,17 +271,16 @@ class Conductor:
     def _take_back(self) -> None:
         """Offers that nobody answered are taken off the broker: with nobody watching they must not be accepted."""
         self._link.drop_waiting()
-        open_ = [case for case in self._cases.values() if case.accepted_at is None]
+        unanswered = [case.offer for case in self._cases.values() if case.accepted_at is None]
         now = self._wall()
         with self._register.transaction():
-            self._register.add([self._event(case.offer, "taken-back", now) for case in open_ if self._unanswered(case)])
-        self._link.send((self._message(case.offer)[0], "") for case in open_)
+            self._register.add(
+                [self._event(o, "taken-back", now) for o in unanswered if o.target not in self._failures]
+            )
+        self._link.send((self._topic(offer), "") for offer in unanswered)
         deadline = time.monotonic() + FAREWELL_S
         while not self._link.idle and time.monotonic() < deadline:
             self._pump(TURN_S)
-
-    def _unanswered(self, case: Case) -> bool:
-        return case.offer.target not in self._failures
 
     def _event(
         self,

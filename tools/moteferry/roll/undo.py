@@ -42,13 +42,16 @@ def accepted_in(register: Register, roll: int) -> list[tuple[Offer, Before]]:
     accepted: dict[Target, str] = {}
     for event in register.events(roll=roll):
         if event.event == "offered":
-            befores[event.target] = Before.model_validate_json(event.before or "{}")
+            was = Before.model_validate_json(event.before or "{}")
+            # offered again to a device that had taken it unnoticed: what it had before is in the earlier event
+            if was.in_force is None or was.in_force.digest != event.digest:
+                befores[event.target] = was
         elif event.event == "accepted" and event.digest is not None:
             accepted[event.target] = event.digest
     found = []
     for target, digest in accepted.items():
         offer = register.document(digest)
-        if offer is not None:
+        if offer is not None and target in befores:
             found.append((offer, befores[target]))
     return found
 
