@@ -165,7 +165,7 @@ class Daemon:
             self._publisher,
             self._remember,
             Facts(Host(), config.store.path, self._publisher.facts),
-            CaptureFolder(config.store.path.parent),
+            captures=CaptureFolder(config.store.path.parent),
         )
         rule = SoakRule(config.calibration.max_shift, config.calibration.soak)
         switch = Switch(shelf, intake, self._recorder, rule)

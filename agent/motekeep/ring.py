@@ -10,8 +10,8 @@ from motekeep.health.check import LineState
 from motekeep.instant import Instant
 
 SECONDS = 120.0
-# Two minutes of the fastest dialect, polled once a second, are some 8 kB. More is rubbish on the line, of which the last
-# 32 KiB say enough; sixteen sensors then hold half a MiB at the most, and a burst of one byte costs a hundred.
+# Two minutes of the fastest dialect, polled once a second, are some 8 kB. More is rubbish on the line, of which the
+# last 32 KiB say enough: half a MiB for sixteen sensors. A burst of one byte costs a hundred, hence the second limit.
 MOST_BYTES = 32 << 10
 MOST_BURSTS = 2000
 

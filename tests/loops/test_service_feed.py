@@ -52,7 +52,7 @@ class Gateway:
         intake = Intake(self.pipeline)
         settings = RecorderSettings(PLACE, TOPICS, 60.0, Life(0, now.boot_s, "0"))
         self.recorder = Recorder(
-            settings, intake, self._open, Outlet(), lambda: None, self._facts, CaptureFolder(folder)
+            settings, intake, self._open, Outlet(), lambda: None, self._facts, captures=CaptureFolder(folder)
         )
         feed_settings = ServiceFeedSettings(PLACE, ("north", "south"))
         self.feed = ServiceFeed(feed_settings, self.spool, intake, self.recorder.has_service)

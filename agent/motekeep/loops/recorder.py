@@ -69,6 +69,7 @@ class Recorder:
         outlet: Outlet,
         remember: Callable[[], None],
         facts: Callable[[StoreState, Instant], tuple[GatewayFacts, LinkHealth]],
+        *,
         captures: CaptureStore,
     ) -> None:
         self._settings = settings
