@@ -40,6 +40,10 @@ soak = {soak}
 """
 
 
+# Within the length of a line, so that its depth is what is refused.
+NESTED = b"a = " + (b"[" * 100 + b"\n") * 30 + (b"]" * 100 + b"\n") * 30
+
+
 def document(issue: int, slope: float = 0.8, gateway: str = "east-gate") -> bytes:
     return TEXT.format(issue=issue, slope=slope, gateway=gateway).encode()
 

@@ -7,7 +7,7 @@ from pathlib import Path
 
 import pytest
 
-from calibration_site import Calibrated, Flood, accepted, document, rss_kb, state_when
+from calibration_site import NESTED, Calibrated, Flood, accepted, document, rss_kb, state_when
 from motekeep.measure.document import digest
 from whole_site import DaemonProcess, Subscriber, gateway, readings
 
@@ -54,7 +54,7 @@ def attacks(site: Calibrated) -> Iterator[tuple[str, str, bytes, bytes]]:
     yield one("another namespace", "other-namespace", new, site.anna.sign(new, "file"))
     yield signed("parameters that overflow", "bad-document", new.replace(b"0.8", b"1e999"))
     yield signed("parameters that are absurd", "bad-document", new.replace(b"0.8", b"1e308"))
-    yield signed("deeply nested", "bad-document", b"a = " + b"[" * 400 + b"]" * 400)
+    yield signed("deeply nested", "bad-document", NESTED)
     yield signed("deep tables", "bad-document", b"\n".join(b"[" + b".".join([b"a"] * n) + b"]" for n in range(1, 200)))
     yield signed("beyond max_shift", "moves-too-far", document(6, 2.5))
     yield signed("80 kB", "too-large", new + b"#\n" * 40_000)

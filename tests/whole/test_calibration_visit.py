@@ -5,7 +5,7 @@ from pathlib import Path
 import pytest
 from click.testing import CliRunner, Result
 
-from calibration_site import Calibrated, accepted, document
+from calibration_site import NESTED, Calibrated, accepted, document
 from motekeep.cli import main
 from motekeep.commands import calibration
 from whole_site import Gateway, gateway
@@ -49,7 +49,7 @@ def test_a_visit_with_a_stick(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -
             (document(1), True, "issue-not-higher"),
             (document(2, 0.7), True, "issue-reused"),
             (document(3) + b"#\n" * 500_000, True, "too-large"),
-            (b"a = " + b"[" * 400 + b"]" * 400, True, "nested too deeply"),
+            (NESTED, True, "nested too deeply"),
         ]
         for text, sign, why in refusals:
             done = motekeep(site, "install", stick(calibrated, text, sign=sign))
