@@ -89,7 +89,7 @@ def test_each_attack_is_refused_by_name_with_nothing_changed(site: Site) -> None
 
 def test_a_megabyte_is_not_even_taken_from_the_broker(site: Site) -> None:
     """The device tells the broker at the connection how large a message may be, and hears nothing of this one. What is
-    larger than a document and still comes is refused by name, above; brought on a stick, in `tests/test_commands.py`."""
+    larger than a document and still comes is refused by name, above; on a stick, in `test_calibration_visit.py`."""
     calibrated, daemon, subscriber = site
     text = document(6) + b"# more of it\n" * 80_000
     assert len(text) > 1_000_000
