@@ -25,6 +25,7 @@ REQUEST = Request(
     valid_until=START + 455 * 86_400.0,
     reference_words="our own invention",
     data="sha256:" + "0" * 64,
+    replicates=40,  # how sure the parameters are is not what most tests ask
 )
 
 

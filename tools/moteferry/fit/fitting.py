@@ -42,6 +42,7 @@ class Request:
     limit_value: float = 30.0
     u_rh: float = 1.0
     fits_revision: int | None = None
+    replicates: int = bootstrap.REPLICATES
 
 
 @dataclass(frozen=True, slots=True)
@@ -96,7 +97,7 @@ def fit(
     cut = blocks(pairs)
     trials, whole, refused = _tried(_asked(forms, request.model), pairs, cut, sigma, request.robust, told)
     told("how sure the parameters are")
-    choice, covariance = _sure(trials, whole, pairs, sigma, request.robust, refused)
+    choice, covariance = _sure(trials, whole, pairs, sigma, request, refused)
     form = choice.chosen.candidate
     parameters = whole[form.name]
     covers = extent(pairs, channel, by_temperature="linear.t_term" in form.names)
@@ -228,7 +229,7 @@ def _sure(
     whole: Mapping[str, Floats],
     pairs: Pairs,
     sigma: Floats,
-    robust: bool,
+    request: Request,
     refused: dict[str, str],
 ) -> tuple[Choice, Floats]:
     """The chosen form with the covariance of its parameters; a form whose resampled records cannot be fitted is out."""
@@ -240,9 +241,9 @@ def _sure(
         rest = (form.predict(begin, features) - pairs.reference) / sigma
         length = bootstrap.run_length(rest, bootstrap.least_run(pairs))
 
-        search = Search(form, features, pairs.reference, sigma, robust, begin)
+        search = Search(form, features, pairs.reference, sigma, request.robust, begin)
         try:
-            return choice, bootstrap.covariance(bootstrap.replicates(search, len(pairs), length))
+            return choice, bootstrap.covariance(bootstrap.replicates(search, len(pairs), length, request.replicates))
         except ValueError as error:
             refused[form.name] = str(error)
             left = [t for t in left if t.candidate is not form]
