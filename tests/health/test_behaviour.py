@@ -28,7 +28,7 @@ def first(check: BehaviourSwapped, made: list[Interval]) -> float | None:
     """The minute in which it first held."""
     for interval in made:
         check.interval(interval)
-        end = interval.start.boot_s + interval.seconds
+        end: float = interval.start.boot_s + interval.seconds
         if check.judge(at(end)) is not None:
             return (end - START) / 60.0
     return None

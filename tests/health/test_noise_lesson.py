@@ -42,7 +42,8 @@ def test_a_day_of_gusts_and_plumes_teaches_the_same() -> None:
         factor[at : at + 120] *= 6.0
     noise = taught(counter, factor=factor).part()
     assert noise is not None
-    assert (noise.scale, noise.averaging) == (pytest.approx(80.0, rel=0.12), pytest.approx(3.0, rel=0.1))
+    assert noise.scale == pytest.approx(80.0, rel=0.12)
+    assert noise.averaging == pytest.approx(3.0, rel=0.1)
 
 
 def test_a_fan_that_surges_from_the_first_day_on_does_not_teach_its_surging() -> None:
@@ -75,7 +76,7 @@ def test_intervals_with_warm_up_sleep_or_missing_frames_are_left_out() -> None:
             {"asleep_s": 20.0},
             {"frames": replace(interval.frames, missing=2)},
         )[number % 3]
-        lesson.interval(replace(interval, **spoilt))  # type: ignore[arg-type] # one of three fields
+        lesson.interval(replace(interval, **spoilt))
     assert lesson.part() is None
 
 
