@@ -7,12 +7,13 @@ hour) for six weeks, at 6 s cadence, at the sites of `coverage.py`. `moteferry.f
 records. Two weeks that follow in the same air are held out: every minute of them goes through the document by the very
 code of the device, and the hours are made by that of the device too.
 
-Judged over all units of all sites:
-- RMSE against the reference on the held-out hours, over the best of three forms fitted by scipy to the same hourly
+Judged over all units of all sites, on the held-out hours that the device vouches for (flag 1: a document promises
+nothing of air beyond its range, where one peak of smoke can decide over a fortnight):
+- RMSE against the reference, over the best of three forms fitted by scipy to the same hourly
   means: linear, linear with RH, kappa with slope and offset. Which of the three is best is known only in hindsight, by
   the held-out hours themselves. The mean over units of that ratio has to be at most 1.05.
-- The share of held-out hours in which the truth lies within 2u, of the hours that the device vouches for (flag 1): 90
-  to 98 %. Beside it the share in which the reference does, within 2u of both.
+- The share in which the truth lies within 2u: 90 to 98 %. Beside it the share in which the reference does, within 2u
+  of both, and that of the truth in all held-out hours whatever their flag.
 
 Exits 1 when one is missed. `--tuning` takes the seeds that thresholds were chosen on; the default ones were not looked
 at for that.
@@ -56,7 +57,7 @@ LOW, HIGH = 90.0, 98.0
 DAY_S, HOUR_S, MINUTE_S = 86_400.0, 3600.0, 60.0
 START = from_rfc3339("2027-03-01T00:00:00Z")
 FIT_DAYS = 42
-JUDGING, TUNING = 9000, 5000
+JUDGING, TUNING = 12000, 5000
 LAYOUT = Layout("bench", (CHANNEL,), 0.0, np.inf)
 
 
@@ -245,10 +246,10 @@ def judge(case: Case, seed: int, days: int) -> Judged:
     kept = held_out.of(place)
     value, u, flag = (np.array([getattr(h, name) for h, _ in rows]) for name in ("mean", "u", "flag"))
     true = records.true[((kept.start - START) / HOUR_S).astype(int)]
-    hindsight = in_hindsight(fitted_on, kept)
-    best = min(hindsight, key=hindsight.__getitem__)
-    own = rmse(value, kept.reference)
     good = flag == PASS
+    hindsight = in_hindsight(fitted_on, kept.of(good))
+    best = min(hindsight, key=hindsight.__getitem__)
+    own = rmse(value[good], kept.reference[good])
     inside = np.abs(value - true) <= 2.0 * u
     spread = np.sqrt(u**2 + kept.u_random**2)
     inside_reference = np.abs(value - kept.reference) <= 2.0 * spread
