@@ -49,6 +49,8 @@ _LEAST_FALSE = 200.0  # false counts per 0.1 L worth a visit, a fifth of clean a
 _DAYLIGHT_GAIN = 30.0  # -2 ln likelihood against the same number all day
 _NIGHT_SHARE = 0.4  # of the daily part, which a leak may leave at night
 _DISAGREEMENT = log(1.3)
+_MOST_LOST = -log(0.25)  # of flow or light: with less left a unit is as good as stopped, and shapes are no guide
+_RIVAL = 3.0  # -2 ln likelihood by which another explanation may lead before false counts are not believed
 
 
 @dataclass(frozen=True, slots=True)
@@ -136,7 +138,10 @@ class TwinVerdict:
                 continue
             found.append(self._loss(FAN, Explanation.FLOW, whole, window, ratio))
             if window == _SLOW:
-                found += [self._loss(OPTICS, Explanation.OPTICS, whole, window, ratio), self._disagreement(whole)]
+                found += [
+                    self._loss(OPTICS, Explanation.OPTICS, whole, window, ratio),
+                    self._disagreement(whole, ratio),
+                ]
         return [one for one in found if one is not None]
 
     def _loss(self, code: str, name: Explanation, whole: Account, window: int, ratio: TwinRatio) -> Held | None:
@@ -144,15 +149,19 @@ class TwinVerdict:
         held = self.held is not None and self.held.code == code
         least = _LEAST_FLOW if name is Explanation.FLOW else _LEAST_LIGHT
         limit = least / 2.0 if held else least
-        lost = fit.number <= -limit and fit.number <= -_SURE * (0.5 if held else 1.0) * fit.sd and whole.gain > 0.0
+        lost = (
+            -_MOST_LOST <= fit.number <= -limit
+            and fit.number <= -_SURE * (0.5 if held else 1.0) * fit.sd
+            and whole.gain > 0.0
+        )
         good = fit.chi2 <= _GOOD * len(whole.departures)
         lead = whole.lead(name)
         if not (lost and good and (lead >= (-_CLEAR_LEAD if held else _LEAD))):
             return None
-        if window == _FAST:  # few blocks: every one of them must say so
-            each = [self._account(ratio, [block]).fits[name].number for block in self._blocks[-window:]]
-            if max(each) > -limit / 2.0:
-                return None
+        # few blocks: every one of them must say so; of many, two thirds, so that no single event of a day passes for it
+        each = sorted([self._account(ratio, [block]).fits[name].number for block in self._blocks[-window:]])
+        if each[-1 if window == _FAST else 2 * window // 3 - 1] > -limit / 2.0:
+            return None
         what = "of its flow" if name is Explanation.FLOW else "of its light"
         channels = ", ".join([f"{exp(d.value):.2f} above {d.size_um:g}" for d in whole.departures])
         evidence = (
@@ -168,15 +177,19 @@ class TwinVerdict:
         lost = [-self._account(ratio, [block]).fits[name].number for block in self._blocks]
         return self._blocks[_last_zero(lost, -number / 2.0)].start_utc
 
-    def _disagreement(self, whole: Account) -> Held | None:
-        """Beyond what both can differ by, for two days, and like nothing that is known, in either direction."""
+    def _disagreement(self, whole: Account, ratio: TwinRatio) -> Held | None:
+        """Less than both can differ by in some channel, for two days, and like nothing that is known."""
         held = self.held is not None and self.held.code == DISAGREES
         best = whole.fits[whole.best]
-        far = [d for d in whole.departures if abs(d.value) >= max(_DISAGREEMENT, 1.5 * _SURE * sqrt(d.variance))]
+        far = [d for d in whole.departures if -d.value >= max(_DISAGREEMENT, 1.5 * _SURE * sqrt(d.variance))]
         odd = best.chi2 > (1.0 if held else 2.0) * _GOOD * len(whole.departures)
         if not far or not odd:
             return None
-        worst = max(far, key=lambda d: abs(d.value))
+        i = whole.departures.index(min(far, key=lambda d: d.value))
+        each = sorted([ratio.channels[i].residual(self._compared[block][i]) for block in self._blocks[-_SLOW:]])
+        if each[2 * _SLOW // 3 - 1] > -_DISAGREEMENT / 2.0:
+            return None
+        worst = min(far, key=lambda d: d.value)
         days = _SLOW * BLOCK_S / 86_400.0
         evidence = (
             f"{exp(worst.value):.2f} of what is usual beside the twin above {worst.size_um:g} um for {days:.0f} days, "
@@ -197,7 +210,7 @@ class TwinVerdict:
                 continue  # the channel above is off too: this is no floor
             excess = excess_of(seen[-window:])
             one = self._floor(excess) or self._leak(excess, window)
-            if one is not None:
+            if one is not None and self._account(ratio, self._blocks[-window:]).lead(Explanation.FLOOR) > -_RIVAL:
                 # began: as in `_began`; a night between two days of a leak is no end of it
                 began = _last_zero([each.excess for each in seen], max(excess.night, excess.day / 4.0) / 2.0)
                 found.append(replace(one, since_utc=self._blocks[began].start_utc))
