@@ -52,8 +52,8 @@ class FanStoppedByWakes(Check):
        at the first wake after a sleep of ten minutes; after half an hour nothing is left to come out. Or it stays so
        for a day: an air cleaner, rain or a clean front can do as much for some hours.
 
-    At 5,000 /dL and sleeps of ten minutes the first wake tells; below some 2,000, and after long sleeps, it takes the
-    day. Then it holds until air is back: the smallest channel at a quarter of before, or a tenth
+    At 10,000 /dL and sleeps of ten minutes the first wake tells, at 5,000 mostly; below some 2,000, and after long
+    sleeps, it takes the day. Then it holds until air is back: the smallest channel at a quarter of before, or a tenth
     above 0.5 um. Needs counts, and an hour of levels first. Of a sensor that never sleeps it hears nothing.
     """
 
