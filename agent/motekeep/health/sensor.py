@@ -23,14 +23,18 @@ from motekeep.health.fan_twin import FanStoppedBesideTwin
 from motekeep.health.fan_wake import FanStoppedByWakes
 from motekeep.health.fan_weak import FanWeakByWakes
 from motekeep.health.finding import Finding, FindingEvent, Suspicion, casts_doubt
+from motekeep.health.floor_alone import FloorRaisedAlone
 from motekeep.health.fog import HumidityHigh
 from motekeep.health.frozen import OutputFrozen
 from motekeep.health.hour import Hour, HourBuilder
 from motekeep.health.ledger import Ledger, Terms
 from motekeep.health.lessons.noise import Noise, NoiseLesson
+from motekeep.health.lessons.shape import ShapeLesson
 from motekeep.health.lessons.spin_up import SpinUpLesson
 from motekeep.health.lessons.twin_ratio import TwinRatioLesson
+from motekeep.health.light_leak import LightLeakAlone
 from motekeep.health.line import FramesCorrupt, FramesMissing
+from motekeep.health.optics_alone import OpticsFouledAlone
 from motekeep.health.range import ChannelsInconsistent, CountsSaturated, MassClipped
 from motekeep.health.twin_checks import twin_checks
 from motekeep.health.twin_verdict import CODES, DISAGREES
@@ -91,6 +95,8 @@ class SensorHealth:
             *([FanStoppedByWakes(flow_l_min, period_s), ActiveCheck()] if sleeps else []),
             *([FanWeakByWakes()] if sleeps and not twinned else []),  # a twin tells it in a day
             FanSurging(period_s),
+            # Beside a twin its word is better, in days and in any air; two judgements of one code would only differ.
+            *([] if twinned else [OpticsFouledAlone(), FloorRaisedAlone(), LightLeakAlone()]),
             HumidityHigh(),
             self._visit,
             UnitSwapped(),
