@@ -101,7 +101,7 @@ class BehaviourSwapped(Check):
         told = [f for c in range(rarest) if (f := _compare(noise, rows, c)) is not None]
         if any(abs(r - ratio) > self.ALIKE + 2.0 * error for r, _ in told):
             return False
-        if ratio > 0.0 and not told:  # the air can do that in one channel
+        if ratio > 0.0 and (not told or not self._lasting(noise, rows, rarest, ratio)):
             return False
         self._told = (
             f"neighbouring frames differ {exp(ratio / 2.0):.2g} times as much as counting by this unit did "
@@ -109,6 +109,13 @@ class BehaviourSwapped(Check):
             "channels; no record `unit-replaced` for it"
         )
         return True
+
+    @staticmethod
+    def _lasting(noise: Noise, rows: Sequence[_Row], channel: int, ratio: float) -> bool:
+        """Whether three quarters of the intervals (all of three) show at least half of it; a plume is not in all."""
+        own = sorted([counts[channel].step for _, _, counts in rows])
+        mean = sum([counts[channel].mean for _, _, counts in rows]) / len(rows)
+        return own[len(own) // 4] > noise.step * mean * exp(ratio / 2.0)
 
     def judge(self, at: Instant) -> Suspicion | None:
         if self._since is None:
