@@ -134,8 +134,10 @@ class FloorRaisedAlone(Check):
         if self._since is None:
             self._since = self._blocks[0].utc
         self._confidence = 0.6
-        self._evidence = f"{plane.a:.0f} +- {plane.a_error:.0f} false counts /dL above 0.3 um since the sensor is known, "
+        self._evidence = (
+            f"{plane.a:.0f} +- {plane.a_error:.0f} false counts /dL above 0.3 um since the sensor is known, "
             f"of {level:.0f} in all"
+        )
 
     def judge(self, at: Instant) -> Suspicion | None:
         if self._since is None:

@@ -48,8 +48,8 @@ class OpticsFouledAlone(Check):
       steps, which leaves the middle where it was; more coarse dust does too.
 
     Each is scored against what air does over weeks (ours: sd `BEND_SD`, `TWIST_SD`, and what the unit's first weeks
-    show). It opens when one alone scores `ALONE`, or both `TOGETHER`, and N(>0.5)/N(>0.3) has fallen; it closes when both
-    score less than half. The beginning is that of the rise in Page's chart (1954) over means of three days,
+    show). It opens when one alone scores `ALONE`, or both `TOGETHER`, and N(>0.5)/N(>0.3) has fallen; it closes when
+    both score less than half. The beginning is that of the rise in Page's chart (1954) over means of three days,
     as days are alike and would ruin a chart; that it goes on is said by Mann and Kendall's test over the same means.
 
     Limits. The first two weeks are taken as right: what fouled before is not seen. Air that becomes another kind for
