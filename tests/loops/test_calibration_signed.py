@@ -449,6 +449,18 @@ def test_without_ssh_keygen_it_is_said_and_tried_again(
     assert gateway.in_force == 1
 
 
+def test_a_step_that_raises_refuses_the_document_and_not_the_daemon(
+    gateway: SignedGateway, anna: Key, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    gateway.signed(anna, document(1))
+
+    def fails(*_: object) -> None:
+        raise OverflowError("math range error")
+
+    monkeypatch.setattr("motekeep.loops.examination.rehearse", fails)
+    assert refused(gateway, document(2), anna.sign(document(2))) == "bad-document"
+
+
 def test_a_full_disk_changes_nothing(gateway: SignedGateway, anna: Key, monkeypatch: pytest.MonkeyPatch) -> None:
     gateway.signed(anna, document(1))
 

@@ -11,6 +11,8 @@ from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
 from typing import Protocol
 
+import structlog
+
 from motekeep.errors import DocumentError, OfferRefusedError
 from motekeep.instant import Instant, rfc3339
 from motekeep.measure.document import CalibrationDocument
@@ -19,6 +21,8 @@ from motekeep.message.calibration_record import CalibrationRecord, Guard, check_
 from motekeep.message.compose import Place
 from motekeep.message.documents import ReadingDocument
 from motekeep.message.rehearsal import Shift, rehearse, shift
+
+log = structlog.get_logger()
 
 # With fewer stored readings, on a gateway's first minutes, a median says nothing; the soak is left to judge.
 FEW_READINGS = 3
@@ -111,7 +115,14 @@ class Examination:
                 raise OfferRefusedError(f"other-{what}", f"it is for {what} {own!r}, not {here!r}", "offer it there")
 
     def _rehearse(self, document: CalibrationDocument, sensor: str) -> Shift:
-        moved = shift(document, rehearse(document, self._last_day(sensor)))
+        try:
+            moved = shift(document, rehearse(document, self._last_day(sensor)))
+        except ArithmeticError as error:
+            # a step that raises is a bug of ours; a retained offer must not bring the daemon down again and again by it
+            log.exception("calibration.rehearsal_failed", sensor=sensor, digest=document.digest)
+            raise OfferRefusedError(
+                "bad-document", f"its steps fail on the sensor's own readings: {error}", "use other parameters"
+            ) from error
         if moved.offered >= FEW_READINGS and moved.judged == 0:
             raise OfferRefusedError(
                 "corrects-nothing",

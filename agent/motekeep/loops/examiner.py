@@ -137,7 +137,9 @@ class Examiner:
             now = self._clock.now()
             self.ticked = now.boot_s
             while (request := self._next(now.boot_s)) is not None and not self._stop.is_set():
-                self.work(request, self._clock.now())
+                now = self._clock.now()
+                self.ticked = now.boot_s
+                self.work(request, now)
             self._clock.wait(self._stop, TURN_S)
 
     def turn(self, at: Instant) -> None:
@@ -214,5 +216,6 @@ class Examiner:
         try:
             candidate = self._examination.examine(request.sensor, text, signature, record, at)
         except (OfferRefusedError, SignersError, StoreError) as refusal:
-            return Verdict(request, record, own, refusal=refusal, by=by)
+            # its traceback holds every buffer on the way, and a verdict outlives the examination
+            return Verdict(request, record, own, refusal=refusal.with_traceback(None), by=by)
         return Verdict(request, record, own, candidate, by=by)
