@@ -1,4 +1,4 @@
-"""What a twin tells: each fault by its own name and from when it began, the weather by none, and all of it remembered."""
+"""What a twin tells: each fault by its own name and since when, the weather by none, and all of it remembered."""
 
 import json
 from math import exp

@@ -64,30 +64,32 @@ def false_counts(ratio: TwinRatio, start_utc: float, compared: Sequence[Comparis
     known = smallest.level_sd**2 + above.level_sd**2
     variance = (first.variance + second.variance + _SPREAD**2 + known) * expected**2 + 1.0
     slot = int(start_utc % _DAY_S // BLOCK_S)
-    return FalseCounts(slot, expected * (exp(residual) - 1.0), variance, abs(shared) * expected)
+    return FalseCounts(slot, expected * (exp(residual) - 1.0), variance, shared * expected)
 
 
 def excess_of(seen: Sequence[FalseCounts]) -> Excess:
     """The course through the day of what these blocks say; at least three blocks."""
     weights = [0.0] * _SLOTS
     means = [0.0] * _SLOTS
-    squares = shared = 0.0
+    shared = [0.0] * _SLOTS
+    squares = 0.0
     for one in seen:
         w = 1.0 / one.variance
         weights[one.slot] += w
         means[one.slot] += w * one.excess
         squares += w * one.excess**2
-        shared += w * one.shared
+        shared[one.slot] += w * one.shared
     flat = _line(weights, means, squares, _FLAT)
-    best, noon = flat, 0
+    best, noon, course = flat, 0, _FLAT
     for (noon_h, _), shape in _SHAPES.items():
         fitted = _line(weights, means, squares, shape)
         if fitted.misfit < best.misfit and fitted.slope > 0.0:
-            best, noon = fitted, noon_h
+            best, noon, course = fitted, noon_h, shape
     # noise that is larger than thought widens all, as in any fit of unknown noise; smaller noise is not believed
     widening = sqrt(max(best.misfit / max(len(seen) - 2, 1), 1.0))
-    doubt = _SHARED * shared / sum(weights)
-    night_sd, day_sd = hypot(best.level_sd * widening, doubt), hypot(best.slope_sd * widening, doubt)
+    doubt = _line(weights, shared, 0.0, course)
+    night_sd = hypot(best.level_sd * widening, _SHARED * doubt.level)
+    day_sd = hypot(best.slope_sd * widening, _SHARED * doubt.slope)
     gain = (flat.misfit - best.misfit) / widening**2
     return Excess(best.level, night_sd, best.slope, day_sd, gain, float(noon))
 

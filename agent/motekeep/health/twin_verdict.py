@@ -48,6 +48,7 @@ _GOOD = 3.0  # chi2 per channel that an explanation may leave, as no shape is ex
 _LEAST_FALSE = 200.0  # false counts per 0.1 L worth a visit, a fifth of clean air above 0.3 um
 _DAYLIGHT_GAIN = 30.0  # -2 ln likelihood against the same number all day
 _NIGHT_SHARE = 0.4  # of the daily part, which a leak may leave at night
+_NIGHT_LACK = 0.7
 _DISAGREEMENT = log(1.3)
 _MOST_LOST = -log(0.25)  # of flow or light: with less left a unit is as good as stopped, and shapes are no guide
 _RIVAL = 3.0  # -2 ln likelihood by which another explanation may lead before false counts are not believed
@@ -149,11 +150,8 @@ class TwinVerdict:
         held = self.held is not None and self.held.code == code
         least = _LEAST_FLOW if name is Explanation.FLOW else _LEAST_LIGHT
         limit = least / 2.0 if held else least
-        lost = (
-            -_MOST_LOST <= fit.number <= -limit
-            and fit.number <= -_SURE * (0.5 if held else 1.0) * fit.sd
-            and whole.gain > 0.0
-        )
+        sure = _SURE / 2.0 if held else _SURE
+        lost = -_MOST_LOST <= fit.number <= -max(limit, sure * fit.sd) and whole.gain > 0.0
         good = fit.chi2 <= _GOOD * len(whole.departures)
         lead = whole.lead(name)
         if not (lost and good and (lead >= (-_CLEAR_LEAD if held else _LEAD))):
@@ -182,20 +180,19 @@ class TwinVerdict:
         held = self.held is not None and self.held.code == DISAGREES
         best = whole.fits[whole.best]
         far = [d for d in whole.departures if -d.value >= max(_DISAGREEMENT, 1.5 * _SURE * sqrt(d.variance))]
-        odd = best.chi2 > (1.0 if held else 2.0) * _GOOD * len(whole.departures)
+        odd = best.chi2 > (1.0 if held else 2.0) * _GOOD * len(whole.departures) or best.number < -_MOST_LOST
         if not far or not odd:
             return None
         i = whole.departures.index(min(far, key=lambda d: d.value))
-        each = sorted([ratio.channels[i].residual(self._compared[block][i]) for block in self._blocks[-_SLOW:]])
-        if each[2 * _SLOW // 3 - 1] > -_DISAGREEMENT / 2.0:
+        worst = whole.departures[i]
+        lost = [-ratio.channels[i].residual(self._compared[block][i]) for block in self._blocks]
+        if sorted(lost[-_SLOW:])[_SLOW // 3] < _DISAGREEMENT / 2.0:  # two thirds of the blocks must say so
             return None
-        worst = min(far, key=lambda d: d.value)
-        days = _SLOW * BLOCK_S / 86_400.0
         evidence = (
-            f"{exp(worst.value):.2f} of what is usual beside the twin above {worst.size_um:g} um for {days:.0f} days, "
-            f"which neither flow nor optics nor false counts explain"
+            f"{exp(worst.value):.2f} of what is usual beside the twin above {worst.size_um:g} um over "
+            f"{_SLOW * BLOCK_S / 86_400.0:.0f} days, which neither flow nor optics nor false counts explain"
         )
-        return Held(DISAGREES, self._blocks[-_SLOW].start_utc, 0.8, evidence)
+        return Held(DISAGREES, self._blocks[_last_zero(lost, -worst.value / 2.0)].start_utc, 0.8, evidence)
 
     # -- false counts ---------------------------------------------------------------------------------------------
 
@@ -233,7 +230,8 @@ class TwinVerdict:
         least = share * max(_LEAST_FALSE, _SURE * excess.day_sd)
         if window == _FLOOR_SHORT or excess.day < least or excess.gain < share * _DAYLIGHT_GAIN:
             return None
-        if abs(excess.night) > _NIGHT_SHARE / share * excess.day:  # below nothing at night: the twin's own, by night
+        # far below nothing at night is the twin's own leak, seen upside down
+        if not -_NIGHT_LACK * excess.day <= excess.night <= _NIGHT_SHARE / share * excess.day:
             return None
         evidence = (
             f"false counts in the smallest channel follow daylight: {excess.day:.0f} per 0.1 L about "
