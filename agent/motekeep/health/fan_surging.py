@@ -66,7 +66,7 @@ class FanSurging(Check):
     2. Persistence. Seven of nine groups have it: a plume lasts minutes, fireworks flare for a group or two.
     3. Quickness. What neighbouring frames do not share is compared with all that varies within an interval. Gusts,
        plumes and flares are eddies over tens of seconds, which the cell smooths further (its volume is flushed in 3 to
-       12 s); a dry bearing catches and lets go over seconds (no source). The border is what a time constant of 10 s
+       12 s); a dry bearing catches and lets go over seconds (no source). The border is what a time constant of 8 s
        would show through this unit's averaging, and of 6 s while the air is well above the lowest of the last hours:
        fireworks that go on for an hour are the quickest that air does.
     4. Likeness. The second channel flickers as much as the first, where it has pulses enough to say so: sources have
@@ -90,11 +90,11 @@ class FanSurging(Check):
     ERRORS = 6.0
     MEANT_S = 4.0
     MEANT = 0.25**2
-    SLOWEST_S = 10.0
+    SLOWEST_S = 8.0
     SLOWEST_RAISED_S = 6.0
     RAISED = 2.5
     LEVELS = 72  # groups: six hours
-    ALIKE = 0.5
+    ALIKE = 0.7
     GAP_S = 900.0
 
     def __init__(self, period_s: float) -> None:
@@ -186,9 +186,9 @@ class FanSurging(Check):
         means = [sum([g.mean[channel] for g in groups]) for channel in range(len(found))]
         first = found[0].variance
         return all(
-            self.ALIKE * first - other.error
+            self.ALIKE * first - 2.0 * other.error
             <= other.variance
-            <= first * min(1.0 / self.ALIKE, sqrt(means[0] / mean)) + other.error
+            <= first * min(1.0 / self.ALIKE, sqrt(means[0] / mean)) + 2.0 * other.error
             for other, mean in zip(found[1:], means[1:], strict=True)
             if 3.0 * other.error < self.ALIKE * first
         )
