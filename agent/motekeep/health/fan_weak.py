@@ -51,7 +51,7 @@ class FanWeakByWakes(Check):
     again_s: ClassVar[float] = 3600.0
     slow: ClassVar[bool] = True
 
-    Z = 3.4
+    Z = 3.3
     LEAST = 0.5
     LASTING = 0.1  # size and humidity of the particles change what settles, and that for days
     UNSURE_Z = 1.3
