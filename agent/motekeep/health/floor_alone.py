@@ -13,7 +13,7 @@ from motekeep.health.finding import Suspicion
 from motekeep.health.hour import Hour
 from motekeep.health.lessons.shape import false_floor
 from motekeep.health.memory import Memory, is_number
-from motekeep.health.shape import Block, BlockBuilder, Plane, boot_seconds, fit_plane, packed, unpacked
+from motekeep.health.shape import Block, BlockBuilder, Plane, bend_of, boot_seconds, fit_plane, packed, unpacked
 from motekeep.health.trend import chart_began, theil_sen
 from motekeep.instant import Instant
 from motekeep.measure.dose import ServiceKind
@@ -43,6 +43,7 @@ class FloorRaisedAlone(Check):
     RECENT_S, KEPT, FIRST = 3 * 86_400.0, 80, 30  # blocks: ten days, as a fit of its own needs weather
     LEAST, LEAST_SHARE, CLOSES, EVERY_HOUR = 300.0, 0.035, 0.5, 0.4
     SLOPE_LOW, SLOPE, SLOPE_HIGH = 0.3, 0.65, 1.7  # of the median excess: Sen's lower bound, the slope itself
+    BENT = 0.05
     PROVEN = 5  # blocks in a row: fifteen hours, so that one turn of the weather cannot open it
     HOLDS_S = 4 * 86_400.0
     LEAST_BLOCKS = 12
@@ -107,9 +108,14 @@ class FloorRaisedAlone(Check):
             return False
         rest = [e / b.n05 for b, e in zip(recent, excess, strict=True)]
         slope = theil_sen([1.0 / b.n05 for b in recent], rest, alike=True)
-        if slope is None or slope.low < self.SLOPE_LOW * usual:
+        if slope is None or slope.low < self.SLOPE_LOW * usual or self._bent_before(recent[0].utc):
             return False
         return self.SLOPE * usual <= slope.value <= self.SLOPE_HIGH * usual
+
+    def _bent_before(self, utc: float) -> bool:
+        """Whether the relation was off in proportion already: what lost light does, and then chance may add up."""
+        older = [b for b in self._blocks if b.utc < utc]
+        return self._plane is not None and len(older) >= self.LEAST_BLOCKS and bend_of(self._plane, older) > self.BENT
 
     def _say(self, usual: float, level: float) -> None:
         self._evidence = (

@@ -19,6 +19,7 @@ from motekeep.health.shape import (
     Block,
     BlockBuilder,
     Plane,
+    bend_of,
     boot_seconds,
     fit_plane,
     packed,
@@ -48,6 +49,7 @@ class LightLeakAlone(Check):
     KEPT = 8 * BLOCKS_A_DAY
     LEAST_BLOCKS = 32
     ADDITIVE = 0.4
+    BENT = 0.06
     MISSED = 5  # days
 
     def __init__(self) -> None:
@@ -101,9 +103,11 @@ class LightLeakAlone(Check):
         )
 
     def _additive(self, found: Daylight, excess: list[float]) -> bool:
-        """Whether the brighter half of the day has the same excess in any air."""
+        """Whether the brighter half of the day has one excess in any air, and the whole is not off in proportion."""
         bright = [(b.n05, e) for b, e in zip(self._blocks, excess, strict=True) if found.light(b.slot) > 0.5]
         slope = theil_sen([1.0 / n05 for n05, _ in bright], [e / n05 for n05, e in bright])
+        if self._plane is not None and bend_of(self._plane, list(self._blocks)) > self.BENT:
+            return False
         return slope is not None and slope.value >= self.ADDITIVE * median([e for _, e in bright])
 
     def _began(self, found: Daylight, excess: list[float]) -> float:

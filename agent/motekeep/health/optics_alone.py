@@ -16,7 +16,7 @@ from motekeep.health.finding import Suspicion
 from motekeep.health.hour import Hour
 from motekeep.health.lessons.shape import Shape
 from motekeep.health.memory import Memory, is_number
-from motekeep.health.shape import DAY_S, Block, BlockBuilder, boot_seconds, packed, unpacked
+from motekeep.health.shape import DAY_S, Block, BlockBuilder, bend_of, boot_seconds, packed, unpacked
 from motekeep.health.trend import chart_began, mann_kendall, theil_sen
 from motekeep.instant import Instant
 from motekeep.measure.dose import ServiceKind
@@ -136,6 +136,11 @@ class OpticsFouledAlone(Check):
         line = theil_sen(x, [self._bend(shape, b) for b in blocks], alike=True)
         if line is None:
             return None
+        middle = days[len(days) // 2].utc
+        halves = [[b for b in blocks if b.utc < middle], [b for b in blocks if b.utc >= middle]]
+        bends = [bend_of(shape.plane, half) if half else 0.0 for half in halves]
+        # a floor that rose within these days bends the line through all of them, but neither half alone
+        bend = _held(line.intercept, 2.0 * max(min([b if line.intercept > 0.0 else -b for b in bends]), 0.0))
         blur = (line.high - line.low) / 4.0 * median(x)
         bend_sd = hypot(self.BEND_SD, shape.plane.scatter, blur)
         twist = twist_sd = 0.0
@@ -145,7 +150,7 @@ class OpticsFouledAlone(Check):
             twist_sd = hypot(self.TWIST_SD, shape.usual.twist_spread * alike**0.5)
         fall = median([day.ratios[0] for day in days]) - shape.usual.medians[0]
         twist_score = _held(twist / twist_sd, self.MOST) if twist_sd else 0.0
-        return _Signs(line.intercept, _held(line.intercept / bend_sd, self.MOST), twist, twist_score, fall)
+        return _Signs(bend, _held(bend / bend_sd, self.MOST), twist, twist_score, fall)
 
     def _thirds(self, shape: Shape, signs: _Signs) -> list[float]:
         """The clearer sign as a share of what it is now, in means of three days of which the last ends now."""

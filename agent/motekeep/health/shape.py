@@ -21,7 +21,7 @@ from statistics import median
 
 from motekeep.health.hour import Hour
 from motekeep.health.memory import is_number
-from motekeep.health.trend import spread
+from motekeep.health.trend import spread, theil_sen
 from motekeep.instant import Instant
 
 BLOCK_S = 10_800.0
@@ -171,6 +171,14 @@ def _solve(rows: list[list[float]], target: list[float], weights: list[float]) -
                 factor = system[j][i]
                 system[j] = [v - factor * p for v, p in zip(system[j], system[i], strict=True)]
     return [row[n] for row in system], system[n - 1][n + 1]
+
+
+def bend_of(plane: Plane, blocks: Sequence[Block]) -> float:
+    """By what share the relation is off in proportion, freed of any floor: the intercept of the relative excess over
+    1/N(>0.5); 0 when the air does not vary."""
+    rest = [(plane.excess(b) - plane.a) / b.n05 / plane.ratio for b in blocks]
+    line = theil_sen([1.0 / b.n05 for b in blocks], rest)
+    return 0.0 if line is None else line.intercept
 
 
 def packed(blocks: Iterable[Block]) -> list[float]:

@@ -46,7 +46,7 @@ def theil_sen(x: Sequence[float], y: Sequence[float], *, alike: bool = False) ->
     if alike:
         half *= sqrt(n / effective_number([b - intercept - value * a for a, b in zip(x, y, strict=True)]))
     pairs = len(slopes)
-    below = max(round((pairs - half) / 2.0), 0)
+    below = max(round((pairs - half) / 2.0) - 1, 0)
     above = min(round((pairs + half) / 2.0), pairs - 1)
     return Slope(value, intercept, slopes[below], slopes[above])
 
