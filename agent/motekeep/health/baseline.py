@@ -29,8 +29,8 @@ Notes = Mapping[str, float | Sequence[float]]
 class Lesson(ABC):
     """One thing to learn. `name` is what its part is called in `Baseline.parts`.
 
-    `begun_again_by`: kinds of service after which it is learnt anew; `begun_again_by_twin`: those at the twin. Overrides
-    the hooks it needs.
+    `begun_again_by`: kinds of service after which it is learnt anew; `begun_again_by_twin`: those at the twin.
+    Overrides the hooks it needs.
     """
 
     name: ClassVar[str]

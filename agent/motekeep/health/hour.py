@@ -23,9 +23,10 @@ class Levels:
 
 @dataclass(frozen=True, slots=True)
 class Pair:
-    """Mean levels of a sensor and of its twin over the intervals in which both could be compared, in channels both have.
+    """Mean levels of a sensor and of its twin over the intervals in which both could be compared.
 
-    `seconds` is what the intervals last together, `frames` and `twin_frames` what was averaged.
+    Only the channels that both have. `seconds` is what the intervals last together, `frames` and `twin_frames` what was
+    averaged.
     """
 
     sizes_um: tuple[float, ...]

@@ -48,7 +48,7 @@ _GOOD = 3.0  # chi2 per channel that an explanation may leave, as no shape is ex
 _LEAST_FALSE = 200.0  # false counts per 0.1 L worth a visit, a fifth of clean air above 0.3 um
 _DAYLIGHT_GAIN = 30.0  # -2 ln likelihood against the same number all day
 _NIGHT_SHARE = 0.4  # of the daily part, which a leak may leave at night
-_NIGHT_LACK = 0.7
+_NIGHT_LACK = 0.5  # of it, which a leak may lack: a twin's own leak makes it all of it
 _DISAGREEMENT = log(1.3)
 _MOST_LOST = -log(0.25)  # of flow or light: with less left a unit is as good as stopped, and shapes are no guide
 _RIVAL = 3.0  # -2 ln likelihood by which another explanation may lead before false counts are not believed
@@ -180,7 +180,9 @@ class TwinVerdict:
         held = self.held is not None and self.held.code == DISAGREES
         best = whole.fits[whole.best]
         far = [d for d in whole.departures if -d.value >= max(_DISAGREEMENT, 1.5 * _SURE * sqrt(d.variance))]
-        odd = best.chi2 > (1.0 if held else 2.0) * _GOOD * len(whole.departures) or best.number < -_MOST_LOST
+        odd = best.chi2 > (1.0 if held else 2.0) * _GOOD * len(whole.departures) or (
+            whole.best is not Explanation.FLOOR and best.number < -_MOST_LOST
+        )
         if not far or not odd:
             return None
         i = whole.departures.index(min(far, key=lambda d: d.value))
