@@ -12,16 +12,22 @@ from functools import cache
 import numpy as np
 import pytest
 
+from health.small_air import URBAN as URBAN_AIR
+from health.small_air import Unit, feed, instant, printed, steady
+from health.small_air import frames as small_frames
 from motekeep.health.check import LineState
+from motekeep.health.fan import FanStopped
 from motekeep.health.fan_wake import FanStoppedByWakes
 from motekeep.health.fan_weak import FanWeakByWakes
 from motekeep.health.lessons.spin_up import SpinUp, SpinUpLesson, added
-from motekeep.health.wake import Wake
+from motekeep.health.sensor import SensorHealth
+from motekeep.health.wake import Shortfall, Wake
 from motekeep.health.wake_watch import GUST, WakeWatch
 from motekeep.instant import Instant
 from motekeep.measure.dose import ServiceKind
 from motekeep.wire.aa import AA
-from motekeep.wire.bm import BM_28
+from motekeep.wire.bm import BM_20, BM_28
+from motekeep.wire.dialects import DIALECTS
 from motekeep.wire.frame import Frame, Layout, Observation
 
 DAY_S = 86400.0
@@ -396,3 +402,45 @@ def test_a_still_fan_is_remembered_and_over_when_air_is_back() -> None:
     assert after.judge(at(NOW + 600.0 * 26)) is not None
     after.wake(wake(Air(4000.0), rng, NOW + 600.0 * 27, asleep_s=510.0))
     assert after.judge(at(NOW + 600.0 * 27)) is None
+
+
+# -- all of a sensor's checks together ------------------------------------------------------------------------------
+
+
+def test_a_sensor_that_sleeps_between_is_told_stopped_at_the_wake_after_its_fan_gave_up() -> None:
+    rng = np.random.default_rng(4110)
+    health = SensorHealth("north", DIALECTS["bm"], 1.0, at(NOW - 600.0))
+    opened = []
+    for n in range(25):
+        woken = NOW + 600.0 * n
+        air = Air(10_000.0, flow=float(n < 24))
+        health.line(LineState.ASLEEP, at(woken - 510.0))
+        health.line(LineState.AWAKE, at(woken))
+        for age, frame in frames(air, rng, 1.0):
+            if age <= 89.0:
+                health.observe(Observation(frame, at(woken + age)))
+        health.line(LineState.ASLEEP, at(woken + 90.0))
+        opened += [(e.finding.code, n) for e in health.judge(at(woken + 90.0)) if e.opened]
+    assert [found for found in opened if found[0] != "warming-up"] == [("fan-stopped", 24)]
+
+
+def test_an_unsure_stop_asks_for_a_wake_and_a_cell_that_is_flushed_ends_it() -> None:
+    def unsure() -> FanStopped:
+        rng = np.random.default_rng(4120)
+        air = steady(20_000.0, URBAN_AIR, 1500.0, 1.0)
+        check = FanStopped(0.1, 1.0)
+        feed(check, small_frames(printed(air, Unit(), rng, stopped_at=1200), BM_20), 1.0)
+        return check
+
+    check = unsure()
+    now = instant(3000.0)
+    suspicion = check.judge(now)
+    assert suspicion is not None
+    assert suspicion.confidence < FanStopped.SURE
+    assert check.wants_wake(now)
+    one = wake(Air(), np.random.default_rng(4121))
+    check.wake(replace(one, shortfalls=(Shortfall(0.0, 0.0, 1e-4),)))
+    assert check.judge(now) is not None, "nothing came back: the fan stands still"
+    check.wake(replace(one, shortfalls=(Shortfall(0.0, 0.12, 1e-4),)))
+    assert check.judge(now) is None
+    assert not check.wants_wake(now)
