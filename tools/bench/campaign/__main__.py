@@ -79,12 +79,12 @@ def run_case(kind: str, number: int, period_s: float, seed: int) -> Outcome:
         onset, bar = _saturated(case.plan) or case.onset, INTERVAL_S
         onset -= onset % INTERVAL_S
     right = [f for f in events if f.code == case.code and f.at >= onset - 1.0]
-    early = [f.code for f in events if f.at < _begins(case.plan, onset) and f.code in (*PHYSICAL, case.code)]
+    early = [f.code for f in events if f.at < _begins(case.plan, onset) and f.code in PHYSICAL]
     late = [f for f in events if f.at >= _begins(case.plan, onset)]
     wrong = [f.code for f in late if f.code in PHYSICAL and f.code != case.code]
     took = right[0].at - onset if right else None
-    if took is None and any(f.code == case.code for f in late):
-        took = 0.0  # found while it was still below its limit
+    if any(f.code == case.code and f.at < onset < f.closed for f in (events if case.kind == "fog" else late)):
+        took = 0.0  # found while it was still below its limit; a humid night is one that fog comes in
     judged = [f for f in events if f.code in (*PHYSICAL, case.code)]
     opened = tuple([(f.confidence, f in late and f.code == case.code) for f in judged])
     told = right[0].evidence if right else "; ".join(f"{f.code} {f.evidence}" for f in late)

@@ -5,7 +5,9 @@ out, and so are readings: a sensor-year then takes minutes. What happens on the 
 instead (`through_pipeline`), as bytes.
 """
 
+from collections.abc import Iterable
 from dataclasses import dataclass
+from math import inf
 from struct import Struct
 
 from motekeep.health.check import LineState
@@ -25,9 +27,9 @@ Row = tuple[float, int, Frame | LineState]  # when, which sensor, what
 _COUNTS = Struct("<6d")
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(slots=True)
 class Found:
-    """A finding that opened. Times are Unix seconds of the emulated site."""
+    """A finding that opened, and when it closed. Times are Unix seconds of the emulated site."""
 
     sensor: str
     code: str
@@ -35,6 +37,7 @@ class Found:
     since: float
     confidence: float
     evidence: str
+    closed: float = inf
 
 
 class _Watched:
@@ -102,7 +105,7 @@ def through_health(plan: SitePlan) -> list[Found]:
                 if judge_at <= end:
                     moment, judge_at = instant(judge_at), judge_at + JUDGE_S
                     for w in watched:
-                        found += _opened(w.health.judge(moment))
+                        _follow(found, w.health.judge(moment))
                 else:
                     for w in watched:
                         w.close(begun, end)
@@ -175,18 +178,23 @@ def through_pipeline(plan: SitePlan) -> list[Found]:
             else:
                 pipeline.receive(sensor, what, instant(t))
         pipeline.advance(instant(min(float(air.times[-1]), site.end)))
-        found += [
-            Found(f.sensor or "", f.code, from_rfc3339(f.at), from_rfc3339(f.since), f.confidence, f.evidence)
-            for f in pipeline.harvest().findings
-            if f.event == "opened"
-        ]
+        for f in pipeline.harvest().findings:
+            begun = Found(f.sensor or "", f.code, from_rfc3339(f.at), from_rfc3339(f.since), f.confidence, f.evidence)
+            _enter(found, begun, opened=f.event == "opened")
     return found
 
 
-def _opened(events: list[FindingEvent]) -> list[Found]:
-    return [
-        Found(f.sensor or "", f.code, e.at, f.since, f.confidence, f.evidence)
-        for e in events
-        if e.opened
-        for f in (e.finding,)
-    ]
+def _follow(found: list[Found], events: Iterable[FindingEvent]) -> None:
+    for e in events:
+        f = e.finding
+        _enter(found, Found(f.sensor or "", f.code, e.at, f.since, f.confidence, f.evidence), opened=e.opened)
+
+
+def _enter(found: list[Found], event: Found, *, opened: bool) -> None:
+    if opened:
+        found.append(event)
+        return
+    for earlier in reversed(found):
+        if (earlier.sensor, earlier.code) == (event.sensor, event.code):
+            earlier.closed = event.at
+            return
