@@ -48,8 +48,8 @@ class LightLeakAlone(Check):
 
     KEPT = 8 * BLOCKS_A_DAY
     LEAST_BLOCKS = 32
-    ADDITIVE = 0.4
-    BENT = 0.06
+    ADDITIVE = 0.65
+    LEAST_DARK, BENT = 10, 0.04  # blocks; off in proportion
     MISSED = 5  # days
 
     def __init__(self) -> None:
@@ -103,10 +103,11 @@ class LightLeakAlone(Check):
         )
 
     def _additive(self, found: Daylight, excess: list[float]) -> bool:
-        """Whether the brighter half of the day has one excess in any air, and the whole is not off in proportion."""
+        """Whether the brighter half of the day has one excess in any air, and night is not off in proportion."""
         bright = [(b.n05, e) for b, e in zip(self._blocks, excess, strict=True) if found.light(b.slot) > 0.5]
         slope = theil_sen([1.0 / n05 for n05, _ in bright], [e / n05 for n05, e in bright])
-        if self._plane is not None and bend_of(self._plane, list(self._blocks)) > self.BENT:
+        dark = [b for b in self._blocks if found.light(b.slot) < 0.1]
+        if self._plane is not None and len(dark) >= self.LEAST_DARK and bend_of(self._plane, dark) > self.BENT:
             return False
         return slope is not None and slope.value >= self.ADDITIVE * median([e for _, e in bright])
 

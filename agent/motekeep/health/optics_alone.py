@@ -65,7 +65,7 @@ class OpticsFouledAlone(Check):
     BEND_SD, TWIST_SD = 0.025, 0.05
     ALIKE = 4.0  # days of weather that count as one
     ALONE, TOGETHER, LEAST_BOTH, LEAST_FALL, MOST = 4.0, 3.5, 1.2, 0.03, 6.0
-    STALE_S, LEAST_BLOCKS = 16 * DAY_S, 30
+    STALE_S, LEAST_BLOCKS, LEAST_PART = 16 * DAY_S, 30, 10
 
     def __init__(self) -> None:
         self._shape: Shape | None = None
@@ -136,11 +136,10 @@ class OpticsFouledAlone(Check):
         line = theil_sen(x, [self._bend(shape, b) for b in blocks], alike=True)
         if line is None:
             return None
-        middle = days[len(days) // 2].utc
-        halves = [[b for b in blocks if b.utc < middle], [b for b in blocks if b.utc >= middle]]
-        bends = [bend_of(shape.plane, half) if half else 0.0 for half in halves]
-        # a floor that rose within these days bends the line through all of them, but neither half alone
-        bend = _held(line.intercept, 2.0 * max(min([b if line.intercept > 0.0 else -b for b in bends]), 0.0))
+        bend = line.intercept
+        for part in _parts(blocks, days[len(days) // 2].utc):
+            own = bend_of(shape.plane, part) if len(part) >= self.LEAST_PART else bend
+            bend = min(max(2.0 * own, 0.0), bend) if bend > 0.0 else max(min(2.0 * own, 0.0), bend)
         blur = (line.high - line.low) / 4.0 * median(x)
         bend_sd = hypot(self.BEND_SD, shape.plane.scatter, blur)
         twist = twist_sd = 0.0
@@ -192,6 +191,13 @@ class OpticsFouledAlone(Check):
         if is_number(since) and is_number(confidence):
             self._since, self._confidence = since, min(max(confidence, 0.0), 1.0)
             self._evidence = "as before the restart"
+
+
+def _parts(blocks: Sequence[Block], middle_utc: float) -> list[list[Block]]:
+    """Both halves of the time, and the four quarters of the day. What is in proportion is in each of them; a floor that
+    rose within these days, or daylight, bends the line through all blocks but not that of every part."""
+    halves = [[b for b in blocks if b.utc < middle_utc], [b for b in blocks if b.utc >= middle_utc]]
+    return halves + [[b for b in blocks if b.slot // 2 == quarter] for quarter in range(4)]
 
 
 def _twist(day: DayRatios) -> float:
