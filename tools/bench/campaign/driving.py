@@ -80,7 +80,7 @@ class _Watched:
         self.accumulator, self.asleep_s = Accumulator(), 0.0
         self.health.interval(interval)
         if self.twin is not None:
-            self.twin.health.twin_interval(interval, sound=self.health.sound)
+            self.twin.health.twin_interval(interval, sound=self.health.reliable)
 
 
 def instant(t: float) -> Instant:
