@@ -50,6 +50,7 @@ class LightLeakAlone(Check):
     LEAST_BLOCKS = 32
     ADDITIVE = 0.65
     LEAST_DARK, BENT = 10, 0.04  # blocks; off in proportion
+    LATELY, NIGHT = 3 * BLOCKS_A_DAY, 0.4  # blocks; excess at night over that by day, at most
     MISSED = 5  # days
 
     def __init__(self) -> None:
@@ -108,6 +109,11 @@ class LightLeakAlone(Check):
         slope = theil_sen([1.0 / n05 for n05, _ in bright], [e / n05 for n05, e in bright])
         dark = [b for b in self._blocks if found.light(b.slot) < 0.1]
         if self._plane is not None and len(dark) >= self.LEAST_DARK and bend_of(self._plane, dark) > self.BENT:
+            return False
+        # a floor that rose within these days gives medians of two halves, in which slots fall to either by chance
+        lately = [(found.light(b.slot), e) for b, e in zip(self._blocks, excess, strict=True)][-self.LATELY :]
+        day, night = [e for light, e in lately if light > 0.5], [e for light, e in lately if light < 0.1]
+        if not day or not night or median(night) > self.NIGHT * median(day):
             return False
         return slope is not None and slope.value >= self.ADDITIVE * median([e for _, e in bright])
 

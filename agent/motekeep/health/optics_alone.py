@@ -162,7 +162,7 @@ class OpticsFouledAlone(Check):
 
     def _began(self, shape: Shape, signs: _Signs) -> float:
         thirds = self._thirds(shape, signs)
-        began = chart_began([min(max(value, -1.0), 1.0) for value in thirds], 0.3)
+        began = chart_began([min(max(value, -1.0), 1.0) for value in thirds], 0.5)
         index = len(self._days) - (len(thirds) - began) * self.THIRD
         return self._days[min(max(index, 0), len(self._days) - 1)].utc
 
