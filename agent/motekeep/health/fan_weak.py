@@ -40,7 +40,7 @@ class FanWeakByWakes(Check):
     the signal raises it by some 5 % of its own. Air that changes does so both ways and is averaged out.
 
     A single wake tells little: at 5,000 /dL (50 pulses a second) its excess has a standard deviation of some 2. So the
-    mean over the last days is judged, over whichever of 1 to 14 days is the clearest: at least LEAST and Z standard
+    mean over the last days is judged, over whichever of 3 to 14 days is the clearest: at least LEAST and Z standard
     deviations above nothing, those of the lesson and of what does not average out included.
 
     While nothing is learnt yet, and while the mean is suspicious, it asks for more wakes than the schedule brings.
@@ -57,6 +57,7 @@ class FanWeakByWakes(Check):
     UNSURE_Z = 1.3
     DAYS = 14.0
     LEAST_WAKES = 12
+    LEAST_S = 3.0 * DAY_S  # the wakes of one day share its weather
     EXTRA_WAKES = 160  # that may be asked for beyond the schedule in a row: two weeks at one every two hours
     GIVEN_BACK = 0.25  # of an extra wake, by each wake without suspicion
 
@@ -111,7 +112,8 @@ class FanWeakByWakes(Check):
         for block in reversed(self._blocks):
             weight, pull, wakes = weight + block.weight, pull + block.pull, wakes + block.wakes
             sigma = sqrt(1.0 / weight + usual.u**2 + self.LASTING**2)
-            if wakes >= self.LEAST_WAKES and pull / weight / sigma > clearest:
+            long_enough = wakes >= self.LEAST_WAKES and self._blocks[-1].ended - block.began >= self.LEAST_S
+            if long_enough and pull / weight / sigma > clearest:
                 clearest, mean, since, told = pull / weight / sigma, pull / weight, block.began, wakes
         self._unsure = clearest >= self.UNSURE_Z
         if clearest >= self.Z and mean >= self.LEAST:
