@@ -41,8 +41,10 @@ _FIRST = 3  # blocks after which an impossible pair is told
 # Limits in ln. Opening at 15 % of the flow or 14 % of the light, four standard deviations from nothing; a finding is
 # held while half of that is left.
 _LEAST_FLOW, _LEAST_LIGHT = -log(0.85), -log(0.86)
+_LEAST_FAST = -log(0.82)  # in half a day, in which fouled optics and a passing aerosol can look like flow
 _SURE = 4.0
 _LEAD = 3.0  # -2 ln likelihood before the next explanation: e^1.5, before what is known of how often each happens
+_LEAD_FAST = 4.0
 _CLEAR_LEAD = 10.0  # to put another explanation in the place of the one held
 _GOOD = 3.0  # chi2 per channel that an explanation may leave, as no shape is exact
 _LEAST_FALSE = 200.0  # false counts per 0.1 L worth a visit, a fifth of clean air above 0.3 um
@@ -148,13 +150,15 @@ class TwinVerdict:
     def _loss(self, code: str, name: Explanation, whole: Account, window: int, ratio: TwinRatio) -> Held | None:
         fit = whole.fits[name]
         held = self.held is not None and self.held.code == code
-        least = _LEAST_FLOW if name is Explanation.FLOW else _LEAST_LIGHT
+        least, clear = (_LEAST_FLOW, _LEAD) if name is Explanation.FLOW else (_LEAST_LIGHT, _LEAD)
+        if window == _FAST:
+            least, clear = _LEAST_FAST, _LEAD_FAST
         limit = least / 2.0 if held else least
         sure = _SURE / 2.0 if held else _SURE
         lost = -_MOST_LOST <= fit.number <= -max(limit, sure * fit.sd) and whole.gain > 0.0
         good = fit.chi2 <= _GOOD * len(whole.departures)
         lead = whole.lead(name)
-        if not (lost and good and (lead >= (-_CLEAR_LEAD if held else _LEAD))):
+        if not (lost and good and (lead >= (-_CLEAR_LEAD if held else clear))):
             return None
         # few blocks: every one of them must say so; of many, two thirds, so that no single event of a day passes for it
         each = sorted([self._account(ratio, [block]).fits[name].number for block in self._blocks[-window:]])
@@ -212,6 +216,9 @@ class TwinVerdict:
             if one is not None and self._account(ratio, self._blocks[-window:]).lead(Explanation.FLOOR) > -_RIVAL:
                 # began: as in `_began`; a night between two days of a leak is no end of it
                 began = _last_zero([each.excess for each in seen], max(excess.night, excess.day / 4.0) / 2.0)
+                fresh = len(seen) - began < _FLOOR_SHORT and (self.held is None or self.held.code != LEAK)
+                if one.code == LEAK and (fresh or found):
+                    continue  # a floor that has just begun has no night yet, and one that is there now is no leak
                 found.append(replace(one, since_utc=self._blocks[began].start_utc))
         return found
 
