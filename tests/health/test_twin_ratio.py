@@ -6,9 +6,11 @@ from statistics import mean
 
 import pytest
 
-from health.twin_air import FLOW_L_MIN, OWN, PERIOD_S, SIZES_UM, TWIN, Make, Sickness, hours
+from health.twin_air import FLOW_L_MIN, OWN, PERIOD_S, SIZES_UM, START, TWIN, Make, Sickness, hours
+from motekeep.health.baseline import Baseline
 from motekeep.health.lessons.twin_ratio import TwinRatioLesson, impossible
 from motekeep.health.twin_block import Block, BlockBuilder, from_numbers, to_numbers
+from motekeep.instant import Instant
 from motekeep.measure.dose import ServiceKind
 
 
@@ -118,6 +120,16 @@ def test_service_at_either_unit_begins_it_again_and_moving_both_does_not():
     lesson = lesson_after(3.2)
     lesson.forget()
     assert lesson.part() is None
+
+
+def test_a_service_record_of_the_twin_begins_it_again_and_a_note_does_not():
+    lesson, at = lesson_after(3.2), Instant(START, 5000.0, "boot", True)
+    baseline = Baseline((lesson,))
+    assert baseline.review(at)
+    assert not baseline.twin_service(ServiceKind.NOTE, at)
+    assert lesson.name in baseline.parts
+    assert baseline.twin_service(ServiceKind.CLEANED, at)
+    assert baseline.parts == {}
 
 
 def test_a_block_ends_with_the_slot_and_short_ones_are_dropped():

@@ -204,7 +204,7 @@ class TwinVerdict:
 
     def _false_counts(self, ratio: TwinRatio) -> list[Held]:
         seen = [false_counts(ratio, block.start_utc, self._compared[block]) for block in self._blocks]
-        found = []
+        found: list[Held] = []
         for window in (_FLOOR_SHORT, _FLOOR_LONG, _LEAK_LONG):
             if len(seen) < window:
                 continue
