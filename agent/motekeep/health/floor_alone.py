@@ -13,7 +13,17 @@ from motekeep.health.finding import Suspicion
 from motekeep.health.hour import Hour
 from motekeep.health.lessons.shape import false_floor
 from motekeep.health.memory import Memory, is_number
-from motekeep.health.shape import Block, BlockBuilder, Plane, bend_of, boot_seconds, fit_plane, packed, unpacked
+from motekeep.health.shape import (
+    Block,
+    BlockBuilder,
+    Plane,
+    bend_of,
+    boot_seconds,
+    fit_plane,
+    level_of,
+    packed,
+    unpacked,
+)
 from motekeep.health.trend import chart_began, theil_sen
 from motekeep.instant import Instant
 from motekeep.measure.dose import ServiceKind
@@ -133,7 +143,7 @@ class FloorRaisedAlone(Check):
     def _alone(self) -> None:
         plane, level = fit_plane(self._blocks), median([b.n03 for b in self._blocks])
         excess = [plane.excess(b) for b in self._blocks]
-        false = false_floor(plane, level) and self._always(list(self._blocks), excess, plane.a)
+        false = false_floor(plane, level_of(list(self._blocks))) and self._always(list(self._blocks), excess, plane.a)
         if not false:
             self._since = None
             return

@@ -22,6 +22,7 @@ from motekeep.health.shape import (
     bend_of,
     boot_seconds,
     fit_plane,
+    level_of,
     packed,
     unpacked,
 )
@@ -78,14 +79,17 @@ class LightLeakAlone(Check):
         if block is None or (self._blocks and block.utc <= self._blocks[-1].utc):
             return
         new_day = bool(self._blocks) and block.utc // DAY_S != self._blocks[-1].utc // DAY_S
-        if new_day and len(self._blocks) >= self.LEAST_BLOCKS:
+        # one that is open is asked about once a day, as it counts the days that fail to show it
+        if (new_day or (self._since is None and block.slot == BLOCKS_A_DAY // 2)) and len(
+            self._blocks
+        ) >= self.LEAST_BLOCKS:
             self._look()
         self._blocks.append(block)
 
     def _look(self) -> None:
         plane = self._plane if self._plane is not None else fit_plane(self._blocks)
         excess = [plane.excess(b) - plane.a for b in self._blocks]
-        level = median([b.n03 for b in self._blocks])
+        level = level_of(list(self._blocks))
         pairs = [(b.utc, e) for b, e in zip(self._blocks, excess, strict=True)]
         found = daylight_excess(pairs, level, strict=self._since is None)
         if found is None or (self._since is None and not self._additive(found, excess)):

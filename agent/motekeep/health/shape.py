@@ -173,6 +173,13 @@ def _solve(rows: list[list[float]], target: list[float], weights: list[float]) -
     return [row[n] for row in system], system[n - 1][n + 1]
 
 
+def level_of(blocks: Sequence[Block]) -> float:
+    """The median N(>0.3), of which the relation holds to a few per cent; four times that where humidity is not known,
+    as its daily course then stays in the relation (measured on emulated years)."""
+    known = any(b.growth > 0.0 for b in blocks)
+    return median([b.n03 for b in blocks]) * (1.0 if known else 4.0)
+
+
 def bend_of(plane: Plane, blocks: Sequence[Block]) -> float:
     """By what share the relation is off in proportion, freed of any floor: the intercept of the relative excess over
     1/N(>0.5); 0 when the air does not vary."""
