@@ -8,6 +8,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
+from driving import CHECKS
 from weathers import WEATHERS, at_level, sensors, site
 
 from motesim.events import Event
@@ -17,8 +18,6 @@ from motesim.weather import DAY_S
 
 MINUTE_S, HOUR_S = 60.0, 3600.0
 START = 1_804_032_000.0  # 2027-03-03T00:00:00Z
-# An active check four times a day, ten minutes asleep each: what makes a wake where the duty cycle makes none.
-CHECKS = Duty(6.0 * HOUR_S, 6.0 * HOUR_S - 600.0)
 
 
 @dataclass(frozen=True, slots=True)

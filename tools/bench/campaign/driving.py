@@ -6,10 +6,11 @@ instead (`through_pipeline`), as bytes.
 """
 
 from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from math import inf
 from struct import Struct
 
+from motekeep.health.active_check import SLEEP_S
 from motekeep.health.check import LineState
 from motekeep.health.finding import FindingEvent
 from motekeep.health.sensor import SensorHealth
@@ -19,10 +20,13 @@ from motekeep.message.compose import Place
 from motekeep.pipeline import Pipeline, SensorSetup
 from motekeep.wire.dialects import DIALECTS
 from motekeep.wire.frame import Frame, Observation
-from motesim.plan import SensorPlan, SitePlan
+from motesim.plan import Duty, SensorPlan, SitePlan
 from motesim.site import Block, SensorCourse, Site, turns
 
 INTERVAL_S, JUDGE_S = 60.0, 5.0
+# Active checks of a sensor without twin and duty: four a day, and one every two hours while a check asks for wakes (see
+# `health/active_check.py`).
+CHECKS, MORE_CHECKS = (Duty(every_s, every_s - SLEEP_S) for every_s in (21_600.0, 7200.0))
 Row = tuple[float, int, Frame | LineState]  # when, which sensor, what
 _COUNTS = Struct("<6d")
 
@@ -99,6 +103,10 @@ def through_health(plan: SitePlan) -> list[Found]:
     courses = site.courses()
     by_name = {course.plan.name: course for course in courses}
     for air in site.air():
+        for w, course in zip(watched, courses, strict=True):
+            if course.plan.duty in (CHECKS, MORE_CHECKS):  # a stretch of air is six hours
+                asked = w.health.wants_wake(instant(judge_at))
+                course.plan = replace(course.plan, duty=MORE_CHECKS if asked else CHECKS)
         blocks = [block for course in courses if (block := course.block(air)) is not None]
         for t, sensor, what in _merged(blocks, by_name, plan):
             while judge_at <= t or end <= t:
