@@ -117,8 +117,8 @@ def main() -> int:
         "--only", default="", help="kinds whose name holds these words; 'ordinary' for the weather alone"
     )
     parser.add_argument("--scale", type=float, default=1.0, help="share of the cases to run")
-    parser.add_argument("--days", type=float, default=45.0, help="of each stretch of ordinary weather")
-    parser.add_argument("--stretches", type=int, default=40, help="of ordinary weather at 6 s, half of them twinned")
+    parser.add_argument("--days", type=float, default=60.0, help="of each stretch of ordinary weather")
+    parser.add_argument("--stretches", type=int, default=20, help="of ordinary weather at 6 s, half of them twinned")
     parser.add_argument("--jobs", type=int, default=2)
     parser.add_argument("--json", type=Path, help="write every outcome there")
     options = parser.parse_args()

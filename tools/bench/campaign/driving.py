@@ -104,9 +104,7 @@ def through_health(plan: SitePlan) -> list[Found]:
     by_name = {course.plan.name: course for course in courses}
     for air in site.air():
         for w, course in zip(watched, courses, strict=True):
-            if course.plan.duty in (CHECKS, MORE_CHECKS):  # a stretch of air is six hours
-                asked = w.health.wants_wake(instant(judge_at))
-                course.plan = replace(course.plan, duty=MORE_CHECKS if asked else CHECKS)
+            _ask(w.health, course, instant(judge_at))
         blocks = [block for course in courses if (block := course.block(air)) is not None]
         for t, sensor, what in _merged(blocks, by_name, plan):
             while judge_at <= t or end <= t:
@@ -123,6 +121,12 @@ def through_health(plan: SitePlan) -> list[Found]:
             else:
                 watched[sensor].frame(what, instant(t))
     return found
+
+
+def _ask(health: SensorHealth, course: SensorCourse, at: Instant) -> None:
+    """How often the fan is checked in the next stretch of air, which is six hours."""
+    if course.plan.duty in (CHECKS, MORE_CHECKS):
+        course.plan = replace(course.plan, duty=MORE_CHECKS if health.wants_wake(at) else CHECKS)
 
 
 def _merged(blocks: list[Block], courses: dict[str, SensorCourse], plan: SitePlan) -> list[Row]:
