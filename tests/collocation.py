@@ -11,7 +11,7 @@ from scipy.signal import lfilter
 from moteferry.fit.device import DeviceRecord
 from moteferry.fit.fitting import Request
 from moteferry.fit.record import Floats
-from moteferry.fit.reference import ReferenceRecord
+from moteferry.fit.reference import RANDOM_SHARE, ReferenceRecord
 from motekeep.instant import rfc3339
 
 START = 1_796_083_200.0  # 2026-12-01T00:00:00Z
@@ -66,9 +66,9 @@ def collocation(
     device = DeviceRecord(
         "quarry", "east-gate", "north", "pm2_5", at, length, length, raw, rh, t, np.zeros((0, 2)), left_out={}
     )
-    part = np.full(len(hours), (u or 0.0) * 0.5**0.5)
+    part, common = (np.full(len(hours), (u or 0.0) * share**0.5) for share in (RANDOM_SHARE, 1.0 - RANDOM_SHARE))
     record = ReferenceRecord(
-        at[::12], np.full(len(hours), HOUR_S), np.maximum(reference, 0.0), part, part, u is not None, 0
+        at[::12], np.full(len(hours), HOUR_S), np.maximum(reference, 0.0), part, common, u is not None, 0
     )
     return Collocation(device, record, true)
 
@@ -114,7 +114,7 @@ def write_reference(path: Path, record: ReferenceRecord) -> Path:
     rows = ["start,seconds,pm2_5,u" if record.stated else "start,seconds,pm2_5"]
     for start, seconds, value, part in zip(record.start, record.seconds, record.value, record.u_random, strict=True):
         row = f"{rfc3339(float(start))},{seconds:.0f},{value:.3f}"
-        rows.append(f"{row},{part * 2**0.5:.4f}" if record.stated else row)
+        rows.append(f"{row},{part / RANDOM_SHARE**0.5:.4f}" if record.stated else row)
     path.write_text("\n".join(rows) + "\n")
     return path
 
