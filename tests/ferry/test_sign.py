@@ -192,3 +192,23 @@ def test_a_line_without_a_key_is_told_by_its_number(tmp_path: Path, keys: dict[s
     done = ferry("signers", "list", allowed)
     assert done.exit_code == 2
     assert "line 2" in done.output
+
+
+def test_files_of_trust_are_found_from_where_the_operator_stands(
+    tmp_path: Path, keys: dict[str, Key], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    written(tmp_path)
+    monkeypatch.chdir(tmp_path)
+    for name in ("anna", "bert"):
+        words = ("--key", f"{keys[name].path}.pub", "--principal", f"{name}@example")
+        assert ferry("signers", "add", "allowed_signers", *words).exit_code == 0
+    assert ferry("signers", "revoke", "revoked", "--key", f"{keys['bert'].path}.pub").exit_code == 0
+
+    told = [
+        ferry("sign", "north.toml", "--key", keys[name].path, "--signers", "allowed_signers", "--revoked", "revoked")
+        for name in ("anna", "bert")
+    ]
+
+    assert [done.exit_code for done in told] == [0, 2]
+    assert "which its devices know as anna@example" in told[0].output
+    assert "revoked-signer" in told[1].output

@@ -60,7 +60,8 @@ class Signers:
     """Verifies detached signatures of documents. Files are read anew each time: a key taken out is out at once."""
 
     def __init__(self, allowed: Path, revoked: Path | None = None) -> None:
-        self._configured = allowed, revoked
+        # `ssh-keygen` is asked from `/`: relative to where the caller stands, not to there
+        self._configured = allowed.absolute(), None if revoked is None else revoked.absolute()
 
     @property
     def _allowed(self) -> Path:
