@@ -258,7 +258,7 @@ def test_no_broker_is_one_line_that_names_the_option(tmp_path: Path) -> None:
     words = ["roll", str(document), "--broker", f"127.0.0.1:{mosquitto.port}", "--register", str(tmp_path / "r.db")]
     result = CliRunner().invoke(main, words)
     assert result.exit_code == 2
-    assert "not reachable: Connection refused" in result.stderr
+    assert "not reachable: Connection refused; look at --broker" in result.stderr
 
 
 def test_a_wrong_password_is_one_line_that_names_the_options(tmp_path: Path) -> None:

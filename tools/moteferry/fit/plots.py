@@ -38,7 +38,7 @@ def scatter(fit: Fit) -> str:
     top = float(np.quantile(np.concatenate([reference, fit.value, fit.pairs.raw_mean]), 0.999)) * 1.05
     axes.plot([0, top], [0, top], color="black", lw=0.8)
     axes.set(xlim=(0, top), ylim=(0, top), xlabel=f"reference, {UNIT}", ylabel=f"sensor, {UNIT}")
-    axes.legend(loc="upper left", fontsize=8)
+    axes.legend(loc="best", fontsize=8)  # a sensor reads high or low: no corner is free of all
     return _svg(figure, "scatter")
 
 

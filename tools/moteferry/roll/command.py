@@ -184,7 +184,9 @@ def _roll(
         planned = sizes(wish.waves, len(plan.of(Standing.OFFER)))
         if not wish.as_json:
             show_plan(plan, planned, wish.rule, where)
-            click.echo("nothing was sent; --yes rolls it")
+            click.echo(
+                "nothing was sent; --yes rolls it" if planned else "nothing was sent, and there is nothing to send"
+            )
         return not plan.left_out(), {"plan": plan_json(plan, planned)}
     with register.transaction():
         register.keep(offers)

@@ -168,7 +168,9 @@ class Link:
 
     def _down(self, why: str, *, refused: bool) -> Down:
         if refused or not self._ever:
-            raise BrokerError(f"connecting to the broker {self._where}", _words(why), "")
+            raise BrokerError(
+                f"connecting to the broker {self._where}", _words(why), "look at --broker HOST:PORT and at TLS"
+            )
         self.up_since = None
         # unanswered: sent again, before the rest; the same bytes on the same topic do no harm twice
         self._waiting.extendleft(reversed(self._in_flight.values()))

@@ -59,7 +59,9 @@ def accepted_in(register: Register, roll: int) -> list[tuple[Offer, Before]]:
 def way_back(register: Register, undone: Offer, was: Before, now: float, highest: int) -> WayBack | NoWayBack:
     """The document that undoes this one: the one that an earlier attempt made, or a new issue above `highest`."""
     if was.in_force is None:
-        return NoWayBack(undone.target, "it had no document before, so there are no parameters to go back to")
+        return NoWayBack(
+            undone.target, "it had no document before, so there is nothing to go back to: fit another and roll that"
+        )
     earlier = register.document(was.in_force.digest)
     if earlier is None:
         return NoWayBack(
