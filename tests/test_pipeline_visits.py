@@ -170,7 +170,7 @@ def test_a_dose_over_its_limit_is_a_finding_until_somebody_has_cleaned() -> None
     assert told(harvest) == [("dose-due", "opened")]
     assert set(flags(harvest.readings)) == {2}, "the figures are as good as before"
     gateway.pipeline.service("north", ServiceKind.CLEANED, NOON + gateway.now, at(gateway.now))
-    assert ("dose-due", "closed") in told(gateway.live(120.0))
+    assert ("dose-due", "closed") in told(gateway.live(180.0))
 
 
 def test_a_dose_that_was_due_stays_so_across_a_restart_without_being_told_again() -> None:

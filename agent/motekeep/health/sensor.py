@@ -56,6 +56,9 @@ Observe = Callable[[Observation], None]
 # end otherwise, and fog, which both breathe.
 _COMPARABLE_IN = frozenset({*CODES, "humidity-high"})
 _RELIABLE_IN = frozenset({DISAGREES, "humidity-high"})
+# What is heard between two intervals. A check that hears none of it can change its mind at an interval's end only, and
+# is asked then.
+_BETWEEN_INTERVALS = ("observe", "twin", "damaged", "heard", "line", "wake", "service")
 
 
 class SensorHealth:
@@ -138,9 +141,10 @@ class SensorHealth:
         self._learnt = tuple([c.learnt for c in checks if listens(c, "learnt")])
         self._account = tuple([c.account for c in checks if listens(c, "account")])
         self._service = tuple([c.service for c in checks if listens(c, "service")])
-        self._judge_quick = tuple([(c.code, c.judge) for c in checks if not c.slow])
-        self._judge_slow = tuple([(c.code, c.judge) for c in checks if c.slow])
-        self._slow: list[tuple[str, Suspicion | None]] = []  # as of the last interval's end
+        quick = [c for c in checks if not c.slow and any(listens(c, hook) for hook in _BETWEEN_INTERVALS)]
+        self._judge_quick = tuple([(c.code, c.judge) for c in quick])
+        self._judge_paced = tuple([(c.code, c.judge) for c in checks if c not in quick])
+        self._paced: list[tuple[str, Suspicion]] = []  # what these held at the last interval's end
         lessons = self.baseline.lessons
         self._lesson_observe: tuple[Observe, ...] = tuple([x.observe for x in lessons if hears(x, "observe")])
         self._lesson_line = tuple([x.line for x in lessons if hears(x, "line")])
@@ -204,7 +208,7 @@ class SensorHealth:
             hook(interval)
         start, seconds = interval.start, interval.seconds
         end = Instant(start.utc + seconds, start.boot_s + seconds, start.boot_id, start.trusted)
-        self._slow = [(code, judge(end)) for code, judge in self._judge_slow]
+        self._paced = [(code, held) for code, judge in self._judge_paced if (held := judge(end)) is not None]
         self._events += self._update(end)
         sound = self.sound
         if sound:
@@ -270,12 +274,12 @@ class SensorHealth:
 
     def _update(self, at: Instant) -> list[FindingEvent]:
         raised: dict[str, Suspicion] = {}
-        for code, suspicion in [*[(code, judge(at)) for code, judge in self._judge_quick], *self._slow]:
-            if suspicion is None:
-                continue
-            known = raised.get(code)
-            if known is None or suspicion.confidence > known.confidence:
-                raised[code] = suspicion
+        for code, judge in self._judge_quick:
+            suspicion = judge(at)
+            if suspicion is not None:
+                _raise(raised, code, suspicion)
+        for code, suspicion in self._paced:
+            _raise(raised, code, suspicion)
         return self._ledger.update(raised, at)
 
     @property
@@ -346,3 +350,10 @@ class SensorHealth:
             memory = memories.get(type(check).__name__) if isinstance(memories, dict) else None
             if isinstance(memory, dict) and check.slow is slow:
                 check.recall(memory, at)
+
+
+def _raise(raised: dict[str, Suspicion], code: str, suspicion: Suspicion) -> None:
+    """Where two checks name the same code, the surer one is heard."""
+    known = raised.get(code)
+    if known is None or suspicion.confidence > known.confidence:
+        raised[code] = suspicion
