@@ -387,12 +387,12 @@ class TestCommand:
         assert "<script" not in text
 
     def test_what_it_wrote_can_be_rehearsed_on_the_very_readings(self, files: Path, done: tuple[Path, str]) -> None:
-        lines = (files / "readings.ndjson").read_text().splitlines()
+        lines = (files / "readings.ndjson").read_text().splitlines()[::4]
         stored = [ReadingDocument.model_validate_json(line) for line in lines]
 
         made = list(rehearse(parse((done[0] / "north.toml").read_bytes()), stored))
 
-        true = collocation(days=14).true
+        true = collocation(days=14).true[::4]
         values = np.array([r.pm2_5.value for r in made if r.pm2_5 is not None])
         assert float(np.median(np.abs(values - true) / true)) < 0.1
 
@@ -403,9 +403,10 @@ class TestCommand:
         write_device(tmp_path / "readings.ndjson", replace(beside.device, site="<script>alert(1)</script>"))
         write_reference(tmp_path / "reference.csv", beside.reference)
 
-        code, said, _ = run(tmp_path, tmp_path / "out", "--model", "scale", "--json")
+        code, said, beside_it = run(tmp_path, tmp_path / "out", "--model", "scale", "--json")
 
         assert code == 0
+        assert beside_it == ""
         assert "<script" not in (tmp_path / "out/page.html").read_text()
         assert json.loads(said) == json.loads((tmp_path / "out/metrics.json").read_text())
 
@@ -434,7 +435,8 @@ class TestCommand:
     ) -> None:
         code, _, error = run(files, tmp_path / "out", *more)
 
-        [line] = [line for line in error.splitlines() if line.startswith("moteferry: ")]
+        [line] = error.splitlines()
+        assert line.startswith("moteferry: ")
         assert code == 2
         assert said in line
         assert not (tmp_path / "out").exists()

@@ -38,7 +38,8 @@ def request_of(
 def run(sources: Sources, request: Request, out: Path, *, as_json: bool) -> None:
     """Fit, with bars on standard error where somebody looks, and say what came of it."""
     err = sys.stderr
-    with click.progressbar(length=sources.device.stat().st_size, label="reading", file=err) as bar:
+    length = sources.device.stat().st_size
+    with click.progressbar(length=length, label="reading", file=err, hidden=not err.isatty()) as bar:
         # The bar is closed before the next one opens: reading ends with the first word about a fit.
         found = fit_into(sources, request, out, bar.update, lambda what: _told(what, quiet=as_json))
         bar.finish()
