@@ -8,6 +8,7 @@ import pytest
 from ferry.rolling import NORTH, NOW, finding, health, heard, offer, refusal, state
 from moteferry.roll.fleet import Failing, Fleet
 from moteferry.roll.gate import Before, Case, Judgement, Rule, Sight, Step, before, judge
+from motekeep.instant import rfc3339
 
 DOCUMENT = offer(8)
 RULE = Rule(hold_s=1800, patience_s=600)
@@ -79,6 +80,17 @@ def test_the_hold_is_kept_and_then_it_passes() -> None:
     assert soaking(after_s=1802).step is Step.PASSED
 
 
+def test_a_device_that_soaks_longer_than_the_hold_is_waited_for() -> None:
+    def seen(after_s: float) -> Step:
+        now = NOW + after_s
+        told = state(DOCUMENT) | {"soak_until": rfc3339(NOW + 3600)}
+        fleet = heard(health=health(at=now), state=told, now=now, retained=False)
+        return judge(case(heard(health=health()), accepted_at=NOW), sight(fleet, now), RULE).step
+
+    assert seen(1802) is Step.SOAKING
+    assert seen(3601) is Step.PASSED
+
+
 def test_without_a_hold_acceptance_is_enough() -> None:
     fleet = heard(state=state(DOCUMENT))
     assert judge(case(accepted_at=NOW), sight(fleet, NOW), Rule(0, 600)).step is Step.PASSED
@@ -93,6 +105,7 @@ def test_without_a_hold_acceptance_is_enough() -> None:
         (finding("humidity-high", "out_of_specification"), Step.SOAKING),
         (finding("counts-saturated", "out_of_specification"), Step.SOAKING),
         (finding("warming-up", "function_check"), Step.SOAKING),
+        (finding("active-check", "function_check"), Step.SOAKING),
         (finding("dose-due", "maintenance_required"), Step.SOAKING),
         (finding("service-visit", "function_check"), Step.SOAKING),
     ],

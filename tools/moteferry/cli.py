@@ -23,6 +23,8 @@ class Group(click.Group):
         except MotekeepError as error:
             click.echo(f"moteferry: {error}", err=True)
             ctx.exit(2)
+        except BrokenPipeError:
+            raise  # whoever reads has read enough; click ends quietly on it
         except OSError as error:
             click.echo(f"moteferry: {error}; check the path and its permissions", err=True)
             ctx.exit(2)
@@ -38,6 +40,7 @@ def main() -> None:
 
 
 FILE = click.Path(exists=True, dir_okay=False, path_type=Path)
+THERE = click.Path(exists=True, path_type=Path)
 REGISTER = Path(click.get_app_dir("moteferry")) / "register.db"
 register_option = click.option(
     "--register",
@@ -141,7 +144,9 @@ def rehearse(document: Path, device: Path, out: Path, sensor: str | None, max_sh
 @main.command()
 @click.argument("documents", nargs=-1, type=FILE, required=True)
 @click.option("--key", type=FILE, required=True, help="Private key, or the .pub of one in the agent or on a token.")
-@click.option("--signers", type=FILE, help="An allowed-signers file: also say whether its devices would take it.")
+@click.option(
+    "--signers", type=THERE, help="An allowed-signers file or folder: also say whether its devices would take it."
+)
 @click.option("--revoked", type=FILE, help="With --signers: their revocation list.")
 @json_option
 def sign(documents: tuple[Path, ...], key: Path, signers: Path | None, revoked: Path | None, as_json: bool) -> None:

@@ -10,7 +10,7 @@ import click
 
 from motekeep.config import Config
 from motekeep.edges.journal_view import JournalView
-from motekeep.instant import rfc3339
+from motekeep.instant import from_rfc3339, rfc3339
 from motekeep.loops.recorder import HEALTH
 from motekeep.message.documents import HealthDocument, OpenFinding
 
@@ -40,7 +40,9 @@ def _print(health: HealthDocument, last: float | None, overdue: bool) -> None:
     if overdue:
         ended = "none yet" if last is None else f"the last ended {rfc3339(last)}"
         click.echo(f"  OVERDUE: no reading is stored any more ({ended}); is the daemon running?")
-    click.echo(f"  at {health.at}, clock {health.clock}, version {health.version}, life {health.life}")
+    age_min = max(time.time() - from_rfc3339(health.at), 0.0) / 60.0
+    told = f" ({age_min:.0f} min ago; kept when a finding changes and every ten minutes)" if age_min >= 2.0 else ""
+    click.echo(f"  at {health.at}{told}, clock {health.clock}, version {health.version}, life {health.life}")
     if health.store is not None:
         store = health.store
         since = f" since {store.oldest_waiting}" if store.oldest_waiting else ""

@@ -22,7 +22,9 @@ RANK = {
     )
 }
 # Judged on raw figures, before any calibration, and brought by weather, by waking up, by a visitor, or by the calendar.
-NOT_OURS = frozenset({"humidity-high", "counts-saturated", "warming-up", "service-visit", "dose-due", "hours-due"})
+NOT_OURS = frozenset(
+    {"humidity-high", "counts-saturated", "warming-up", "active-check", "service-visit", "dose-due", "hours-due"}
+)
 # One reading of flag 4 may be a sensor's own bad minute.
 READINGS_FAILED = 2
 
@@ -74,7 +76,8 @@ class Case:
 
 @dataclass(frozen=True, slots=True)
 class Rule:
-    """`hold_s` of soak before a target passes; `patience_s` for an answer, and for one that went quiet."""
+    """`hold_s` before a target passes, and the soak that its device states where that is longer; with 0 acceptance is
+    enough. `patience_s` for an answer, and for one that went quiet."""
 
     hold_s: float
     patience_s: float
@@ -150,6 +153,8 @@ def _trouble(case: Case, sight: Sight) -> str | None:
 def _soaked(case: Case, sight: Sight, rule: Rule) -> Judgement:
     assert case.accepted_at is not None  # noqa: S101 (judge asks only then)
     soaked_at = case.accepted_at + rule.hold_s
+    if rule.hold_s > 0 and sight.state is not None and sight.state.soak_until is not None:
+        soaked_at = max(soaked_at, sight.state.soak_until.timestamp())
     if sight.now < soaked_at:
         return Judgement(Step.SOAKING)
     if rule.hold_s == 0 or _since(case, sight):
