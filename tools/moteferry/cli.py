@@ -145,7 +145,7 @@ def rehearse(document: Path, device: Path, out: Path, sensor: str | None, max_sh
 @click.argument("documents", nargs=-1, type=FILE, required=True)
 @click.option("--key", type=FILE, required=True, help="Private key, or the .pub of one in the agent or on a token.")
 @click.option(
-    "--signers", type=THERE, help="An allowed-signers file or folder: also say whether its devices would take it."
+    "--signers", type=THERE, help="Allowed signers, file or folder: also say whether its devices would take it."
 )
 @click.option("--revoked", type=FILE, help="With --signers: their revocation list.")
 @json_option
