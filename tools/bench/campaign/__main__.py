@@ -117,6 +117,7 @@ def main() -> int:
         "--only", default="", help="kinds whose name holds these words; 'ordinary' for the weather alone"
     )
     parser.add_argument("--scale", type=float, default=1.0, help="share of the cases to run")
+    parser.add_argument("--cadence", type=float, choices=(6.0, 1.0), help="only cases at this cadence, s")
     parser.add_argument("--days", type=float, default=60.0, help="of each stretch of ordinary weather")
     parser.add_argument("--stretches", type=int, default=20, help="of ordinary weather at 6 s, half of them twinned")
     parser.add_argument("--jobs", type=int, default=2)
@@ -130,6 +131,8 @@ def main() -> int:
         for name, kind in KINDS.items():
             if options.only in name:
                 for period_s, cases in ((6.0, kind.slow), (1.0, kind.quick)):
+                    if options.cadence not in (None, period_s):
+                        continue
                     numbers = range(max(round(cases * options.scale), 1))
                     jobs += [pool.submit(run_case, name, number, period_s, seed) for number in numbers]
         if options.only in "ordinary weather":
