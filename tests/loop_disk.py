@@ -49,7 +49,7 @@ class LoopDisk:
         """Take all room but `leave` bytes, as somebody else's log would."""
         os.sync()  # blocks that were freed a moment ago count only from now on
         with (self.mount / f"filler-{time.monotonic_ns()}").open("wb") as file:
-            for size in (1 << 20, 1 << 12):
+            for size in (1 << 20, 1 << 12, 1 << 9):
                 try:
                     while self.free() > leave:
                         os.write(file.fileno(), bytes(size))

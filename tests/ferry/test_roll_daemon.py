@@ -24,7 +24,7 @@ def test_documents_travel_to_a_daemon_and_back(tmp_path: Path) -> None:
     site_folder.mkdir()
     with gateway(site_folder) as site:
         site.write_config(interval=10, health_every=5.0)
-        calibration = f'[calibration]\nfolder = "{tmp_path}/calibration"\nsigners = "{tmp_path}/signers"\n'
+        calibration = f'[calibration]\nfolder = "{tmp_path}/calibration"\nsigners = "{tmp_path}/signers"\nsoak = 5\n'
         site.config.write_text(site.config.read_text() + calibration)
         where = ["--broker", f"127.0.0.1:{site.mosquitto.port}", "--register", str(tmp_path / "register.db")]
 
