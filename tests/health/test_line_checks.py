@@ -4,8 +4,6 @@ from collections.abc import Iterator
 
 import numpy as np
 import pytest
-from hypothesis import given, settings
-from hypothesis import strategies as st
 
 from health.small_air import instant
 from motekeep.health.check import LineState
@@ -160,16 +158,18 @@ def test_a_slower_cadence_than_configured_is_told_with_its_pace(period_s: float)
     assert f"one every {2 * period_s:.2g} s on average" in line.evidence()
 
 
-@given(st.integers(0, 2**32 - 1))
-@settings(max_examples=10, deadline=None)
-def test_one_frame_in_ten_lost_at_random_opens_nothing(seed: int) -> None:
-    rng = np.random.default_rng(seed)
-    line = Missing(6.0)
-    for kept in rng.random(1500) > 0.10:
-        line.wait(6.0)
-        if kept:
-            line.check.observe(Observation(A_FRAME, line.at()))
-    assert line.opened is None
+def test_one_frame_in_ten_lost_at_random_opens_in_one_of_a_hundred_stretches_at_most() -> None:
+    """Of two and a half hours each. Seeds are fixed: chance does open it now and then, in one of these hundred."""
+
+    def opens(seed: int) -> bool:
+        line = Missing(6.0)
+        for kept in np.random.default_rng(seed).random(1500) > 0.10:
+            line.wait(6.0)
+            if kept:
+                line.check.observe(Observation(A_FRAME, line.at()))
+        return line.opened is not None
+
+    assert sum(map(opens, range(100))) <= 1
 
 
 def test_a_sleeping_sensor_misses_nothing_and_has_time_to_wake() -> None:
