@@ -40,7 +40,7 @@ def _print(health: HealthDocument, last: float | None, overdue: bool) -> None:
     if overdue:
         ended = "none yet" if last is None else f"the last ended {rfc3339(last)}"
         click.echo(f"  OVERDUE: no reading is stored any more ({ended}); is the daemon running?")
-    age_min = max(time.time() - from_rfc3339(health.at), 0.0) / 60.0
+    age_min = 0.0 if health.at is None else max(time.time() - from_rfc3339(health.at), 0.0) / 60.0
     told = f" ({age_min:.0f} min ago; kept when a finding changes and every ten minutes)" if age_min >= 2.0 else ""
     click.echo(f"  at {health.at}{told}, clock {health.clock}, version {health.version}, life {health.life}")
     if health.store is not None:
